@@ -1,0 +1,1 @@
+"""Lagscape: judges delayed negative-feedback loops in patients."""
