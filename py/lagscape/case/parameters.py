@@ -57,7 +57,10 @@ class ParameterSpecification:
         rule = f"{self.label} must be a number from {self.minimum:g} to {self.maximum:g}{unit}"
         if isinstance(value, bool) or not isinstance(value, (int, float)):
             raise InvalidInputError(f"{rule}; got {value!r}.")
-        number = float(value)
+        try:
+            number = float(value)
+        except OverflowError:  # a whole number beyond the largest float
+            number = math.inf
         if not math.isfinite(number) or not self.minimum <= number <= self.maximum:
             raise InvalidInputError(f"{rule}; got {number:.6g}.")
         return number
