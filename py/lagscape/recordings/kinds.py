@@ -1,0 +1,42 @@
+"""A guess of what a channel is, from its name and its unit. A guess only: the person may overrule it.
+
+The words are those that amplifiers and analysis programs in sleep and respiratory laboratories commonly write; common
+practice, no source.
+"""
+
+import re
+
+__all__ = ["BREATHING_KINDS", "KINDS", "guess_kind"]
+
+KINDS = ("ventilation", "airflow", "effort", "SpO2", "CO2", "acceleration", "unknown")
+BREATHING_KINDS = ("ventilation", "airflow", "effort")
+
+_BY_NAME = (
+    ("CO2", r"co2|capno"),
+    ("SpO2", r"spo2|sao2|\bso2\b|sat(uration)?\b|oxim|pulse ?ox"),
+    ("acceleration", r"accel|\bacc\b|\bacc[ -]?[xyz]\b|tremor|\bgyro"),
+    ("ventilation", r"ventilation|\bve\b|\bv e\b|minute ?vol|\bmv\b|\bvdot"),
+    ("effort", r"effort|thor|chest|abdo|\babd\b|belt|\brip\b|rib ?cage|\bresp\b|respiration|\bvolume\b|\btho\b|torax|bauch|brust"),
+    ("airflow", r"flow|nasal|cannula|pneumo|therm|naso|\bpflow|\bnp\b|mask ?pres|atem"),
+)
+
+_BY_UNIT = (
+    ("ventilation", r"l ?/ ?min|lpm|l min"),
+    ("airflow", r"l ?/ ?s|ml ?/ ?s"),
+    ("acceleration", r"g|mg|m ?/ ?s(2|²|\^2)|m ?/ ?s ?/ ?s"),
+    ("CO2", r"mmhg|kpa|torr"),
+    ("effort", r"l|ml|litre|liter"),
+)
+
+
+def guess_kind(name: str, unit: str = "") -> str:
+    """One of KINDS. The name decides; the unit only where the name says nothing."""
+    words = re.sub(r"[_./()\[\]-]+", " ", name).casefold()
+    plain_unit = unit.strip().casefold()
+    for kind, pattern in _BY_NAME:
+        if re.search(pattern, words):
+            return kind
+    for kind, pattern in _BY_UNIT:
+        if re.fullmatch(pattern, plain_unit):
+            return kind
+    return "unknown"
