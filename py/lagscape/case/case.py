@@ -82,7 +82,6 @@ class DisturbanceSetting:
     size: float
 
 
-@cache
 def specifications(kind: str) -> Mapping[str, ParameterSpecification]:
     """Parameter name to specification of a loop, in the order in which the page shows them.
 
@@ -91,15 +90,12 @@ def specifications(kind: str) -> Mapping[str, ParameterSpecification]:
     InvalidInputError
         If no loop is of this kind; the sentence lists the kinds.
     """
-    return MappingProxyType({item.name: item for item in _loop_class(kind).specifications})
+    return _specifications(_loop_class(kind))
 
 
-@cache
 def disturbance_units(kind: str) -> Mapping[str, str]:
-    """Disturbance name to the unit of its size, for the loop of this kind."""
-    loop = _loop_class(kind)
-    typical = loop(**{name: item.typical for name, item in specifications(kind).items()})
-    return MappingProxyType({name: channel.unit for name, channel in typical.form().channels.items()})
+    """Disturbance name to the unit of its size, for the loop of this kind; raises as `specifications`."""
+    return _disturbance_units(_loop_class(kind))
 
 
 def starting_case(name: str) -> tuple[str, StartingCase]:
@@ -326,6 +322,17 @@ class Case:
         return replace(self, numbers={name: self._changed(name, float(getattr(loop, name))) for name in self.numbers})
 
 
+@cache
+def _specifications(loop: Any) -> Mapping[str, ParameterSpecification]:
+    return MappingProxyType({item.name: item for item in loop.specifications})
+
+
+@cache
+def _disturbance_units(loop: Any) -> Mapping[str, str]:
+    typical = loop(**{item.name: item.typical for item in loop.specifications})
+    return MappingProxyType({name: channel.unit for name, channel in typical.form().channels.items()})
+
+
 def _loop_class(kind: str) -> Any:
     if not isinstance(kind, str) or kind not in LOOPS:
         raise InvalidInputError(f"The loop must be one of {', '.join(LOOPS)}; got {_shown(kind)}.")
@@ -387,9 +394,7 @@ def _checked_levers(levers: object) -> tuple[LeverSetting, ...]:
     checked: list[LeverSetting] = []
     for lever in levers:
         if not isinstance(lever.name, str) or not _LEVER_NAME.match(lever.name):
-            raise InvalidInputError(
-                f"A lever's name must be small letters, digits and underscores, at most 48; got {_shown(lever.name)}."
-            )
+            raise InvalidInputError(f"A lever's name must be small letters, digits and underscores, at most 48; got {_shown(lever.name)}.")
         if any(lever.name == other.name for other in checked):
             raise InvalidInputError(f"The lever {lever.name} is laid twice; give it one dose.")
         checked.append(LeverSetting(lever.name, _setting(f"The dose of {lever.name}", lever.dose)))
@@ -403,9 +408,7 @@ def _checked_disturbance(kind: str, disturbance: object) -> DisturbanceSetting |
         raise InvalidInputError(f"The disturbance must be a DisturbanceSetting or None; got {_shown(disturbance)}.")
     units = disturbance_units(kind)
     if disturbance.name not in units:
-        raise InvalidInputError(
-            f"The {kind} loop has no disturbance {_shown(disturbance.name)}; it has: {', '.join(units)}."
-        )
+        raise InvalidInputError(f"The {kind} loop has no disturbance {_shown(disturbance.name)}; it has: {', '.join(units)}.")
     return DisturbanceSetting(disturbance.name, _setting(f"The size of the {disturbance.name}", disturbance.size))
 
 

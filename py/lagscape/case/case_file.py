@@ -90,9 +90,7 @@ def parse_json(text: str | bytes) -> Any:
     except UnicodeDecodeError:
         raise CaseFormatError("The file is not UTF-8 text, so it is not a case file.") from None
     try:
-        return json.loads(
-            plain.removeprefix("\ufeff"), object_pairs_hook=_object, parse_constant=_refuse_constant, parse_int=_whole
-        )
+        return json.loads(plain.removeprefix("\ufeff"), object_pairs_hook=_object, parse_constant=_refuse_constant, parse_int=_whole)
     except json.JSONDecodeError as error:
         raise CaseFormatError(f"The case is not JSON: {error.msg.lower()} at line {error.lineno}, column {error.colno}.") from None
     except RecursionError:
@@ -117,9 +115,7 @@ def case_to_document(case: Case) -> dict[str, Any]:
         "numbers": numbers,
         "choices": dict(case.choices),
         "levers": [{"name": lever.name, "dose": lever.dose} for lever in case.levers],
-        "disturbance": None
-        if shown is None
-        else {"name": shown.name, size_key(disturbance_units(case.kind)[shown.name]): shown.size},
+        "disturbance": None if shown is None else {"name": shown.name, size_key(disturbance_units(case.kind)[shown.name]): shown.size},
     }
 
 
@@ -132,10 +128,11 @@ def case_from_document(document: Any, check_lever: LeverCheck | None = None) -> 
     try:
         kind = document["loop"]
         known = specifications(kind)
-        numbers = {
-            name: _number(name, entry, spread_key(known[name].distribution) if name in known else "spread")
-            for name, entry in _mapping("numbers", document["numbers"]).items()
-        }
+        given = _mapping("numbers", document["numbers"])
+        for name in given:
+            if name not in known:
+                raise CaseFormatError(f"The {kind} loop has no number {_cut(name)}; it has: {', '.join(known)}.")
+        numbers = {name: _number(name, entry, spread_key(known[name].distribution)) for name, entry in given.items()}
         case = Case(
             kind,
             numbers,

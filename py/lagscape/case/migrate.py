@@ -26,9 +26,7 @@ NEWEST_VERSION = 1
 Migration = Callable[[dict[str, Any]], dict[str, Any]]
 
 
-def migrated(
-    document: dict[str, Any], migrations: Mapping[int, Migration] | None = None, newest: int = NEWEST_VERSION
-) -> dict[str, Any]:
+def migrated(document: dict[str, Any], migrations: Mapping[int, Migration] | None = None, newest: int = NEWEST_VERSION) -> dict[str, Any]:
     """The document in the newest version's layout.
 
     Parameters
@@ -72,7 +70,9 @@ def _from_short_form(document: dict[str, Any]) -> dict[str, Any]:
         started_from = document.get("starting_case")
         base = Case.typical(document.get("loop", "")) if started_from is None else Case.from_starting_case(started_from)
     except InvalidInputError as error:
-        raise CaseFormatError(str(error)) from error
+        raise CaseFormatError(f"The case cannot be read: {error}") from error
+    if document.get("loop", base.kind) != base.kind:
+        raise CaseFormatError(f"The case cannot be read: the starting case {started_from} is of the {base.kind} loop.")
     entries: dict[str, Any] = {name: {"value": number.value, "basis": str(number.basis)} for name, number in base.numbers.items()}
     known = specifications(base.kind)
     for name, value in numbers.items():

@@ -81,14 +81,10 @@ def _loop_schema(kind: str) -> dict[str, Any]:
             },
             "choices": {
                 "required": [item.name for item in loop.choices],
-                "properties": {
-                    item.name: {"description": item.meaning, "enum": list(item.options)} for item in loop.choices
-                },
+                "properties": {item.name: {"description": item.meaning, "enum": list(item.options)} for item in loop.choices},
                 "additionalProperties": False,
             },
-            "disturbance": {
-                "oneOf": [{"type": "null"}, *(_disturbance_schema(*item) for item in disturbance_units(kind).items())]
-            },
+            "disturbance": {"oneOf": [{"type": "null"}, *(_disturbance_schema(*item) for item in disturbance_units(kind).items())]},
         },
     }
 
