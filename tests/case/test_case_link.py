@@ -63,10 +63,10 @@ def test_a_link_with_one_wrong_character_is_refused(data):
         case_from_link(LINK[:at] + other + LINK[at + 1 :])
 
 
-@pytest.mark.parametrize("length", range(len(LINK)))
-def test_a_link_cut_short_is_refused(length):
-    with pytest.raises(CaseFormatError, match=r"The link (is damaged|holds no case|was made by a newer)"):
-        case_from_link(LINK[:length])
+def test_a_link_cut_short_is_refused():
+    for length in range(len(LINK)):
+        with pytest.raises(CaseFormatError, match=r"The link (is damaged|holds no case)"):
+            case_from_link(LINK[:length])
 
 
 @pytest.mark.parametrize(

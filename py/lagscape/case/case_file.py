@@ -19,6 +19,7 @@ from typing import Any, NoReturn
 
 from lagscape.case.case import Case, DisturbanceSetting, LeverCheck, LeverSetting, Number, disturbance_units, specifications
 from lagscape.case.migrate import NEWEST_VERSION, migrated
+from lagscape.case.parts import shown
 from lagscape.errors import CaseFormatError, InvalidInputError
 
 __all__ = [
@@ -106,7 +107,7 @@ def case_to_document(case: Case) -> dict[str, Any]:
         if number.spread is not None:
             entry[spread_key(known[name].distribution)] = number.spread
         numbers[name] = entry
-    shown = case.disturbance
+    disturbance = case.disturbance
     return {
         "format": FORMAT,
         "version": NEWEST_VERSION,
@@ -115,7 +116,9 @@ def case_to_document(case: Case) -> dict[str, Any]:
         "numbers": numbers,
         "choices": dict(case.choices),
         "levers": [{"name": lever.name, "dose": lever.dose} for lever in case.levers],
-        "disturbance": None if shown is None else {"name": shown.name, size_key(disturbance_units(case.kind)[shown.name]): shown.size},
+        "disturbance": None
+        if disturbance is None
+        else {"name": disturbance.name, size_key(disturbance_units(case.kind)[disturbance.name]): disturbance.size},
     }
 
 
@@ -131,7 +134,7 @@ def case_from_document(document: Any, check_lever: LeverCheck | None = None) -> 
         given = _mapping("numbers", document["numbers"])
         for name in given:
             if name not in known:
-                raise CaseFormatError(f"The {kind} loop has no number {_cut(name)}; it has: {', '.join(known)}.")
+                raise CaseFormatError(f"The {kind} loop has no number {shown(name)}; it has: {', '.join(known)}.")
         numbers = {name: _number(name, entry, spread_key(known[name].distribution)) for name, entry in given.items()}
         case = Case(
             kind,
@@ -163,7 +166,7 @@ def _object(pairs: list[tuple[str, Any]]) -> dict[str, Any]:
     result = dict(pairs)
     if len(result) < len(pairs):
         twice = next(key for index, (key, _) in enumerate(pairs) if key in {other for other, _ in pairs[:index]})
-        raise CaseFormatError(f"The case holds the key {_cut(twice)} twice; which one is meant is not said.")
+        raise CaseFormatError(f"The case holds the key {shown(twice)} twice; which one is meant is not said.")
     return result
 
 
@@ -176,15 +179,10 @@ def _whole(digits: str) -> int | float:
     return int(digits) if len(digits) <= 20 else float(digits)
 
 
-def _cut(value: object) -> str:
-    text = repr(value)
-    return text if len(text) <= 60 else text[:57] + "..."
-
-
 def _keys(where: str, given: dict[str, Any], required: tuple[str, ...], optional: tuple[str, ...] = ()) -> None:
     for name in given:
         if name not in required and name not in optional:
-            raise CaseFormatError(f"{where} holds the unknown key {_cut(name)}; allowed are: {', '.join(required + optional)}.")
+            raise CaseFormatError(f"{where} holds the unknown key {shown(name)}; allowed are: {', '.join(required + optional)}.")
     for name in required:
         if name not in given:
             raise CaseFormatError(f"{where} lacks the key {name!r}.")
@@ -192,7 +190,7 @@ def _keys(where: str, given: dict[str, Any], required: tuple[str, ...], optional
 
 def _mapping(name: str, value: Any) -> dict[str, Any]:
     if not isinstance(value, dict):
-        raise CaseFormatError(f"The {name} of a case must be a JSON object; got {_cut(value)}.")
+        raise CaseFormatError(f"The {name} of a case must be a JSON object; got {shown(value)}.")
     return value
 
 
@@ -209,28 +207,28 @@ def _whole_mapping(name: str, value: Any, kind: str) -> dict[str, Any]:
 
 def _list(name: str, value: Any) -> list[Any]:
     if not isinstance(value, list):
-        raise CaseFormatError(f"The {name} of a case must be a JSON array; got {_cut(value)}.")
+        raise CaseFormatError(f"The {name} of a case must be a JSON array; got {shown(value)}.")
     return value
 
 
 def _text_or_none(name: str, value: Any) -> str | None:
     if value is not None and not isinstance(value, str):
-        raise CaseFormatError(f"The {name} of a case must be a text or null; got {_cut(value)}.")
+        raise CaseFormatError(f"The {name} of a case must be a text or null; got {shown(value)}.")
     return value
 
 
 def _number(name: str, entry: Any, key: str) -> Number:
     if not isinstance(entry, dict):
-        raise CaseFormatError(f"The number {_cut(name)} must be an object with value and basis; got {_cut(entry)}.")
-    _keys(f"The number {_cut(name)}", entry, ("value", "basis"), (key,))
+        raise CaseFormatError(f"The number {shown(name)} must be an object with value and basis; got {shown(entry)}.")
+    _keys(f"The number {shown(name)}", entry, ("value", "basis"), (key,))
     if key in entry and entry[key] is None:
-        raise CaseFormatError(f"The {key} of {_cut(name)} must be a number; leave the key out where there is none.")
+        raise CaseFormatError(f"The {key} of {shown(name)} must be a number; leave the key out where there is none.")
     return Number(entry["value"], entry["basis"], entry.get(key))
 
 
 def _lever(item: Any) -> LeverSetting:
     if not isinstance(item, dict):
-        raise CaseFormatError(f"A lever must be an object with name and dose; got {_cut(item)}.")
+        raise CaseFormatError(f"A lever must be an object with name and dose; got {shown(item)}.")
     _keys("A lever", item, ("name", "dose"))
     return LeverSetting(item["name"], item["dose"])
 
@@ -239,11 +237,11 @@ def _disturbance(item: Any, kind: str) -> DisturbanceSetting | None:
     if item is None:
         return None
     if not isinstance(item, dict):
-        raise CaseFormatError(f"The disturbance must be an object or null; got {_cut(item)}.")
+        raise CaseFormatError(f"The disturbance must be an object or null; got {shown(item)}.")
     units = disturbance_units(kind)
     name = item.get("name")
     if not isinstance(name, str) or name not in units:
-        raise CaseFormatError(f"The disturbance must be one of {', '.join(units)}; got {_cut(name)}.")
+        raise CaseFormatError(f"The disturbance must be one of {', '.join(units)}; got {shown(name)}.")
     key = size_key(units[name])
     _keys("The disturbance", item, ("name", key))
     return DisturbanceSetting(name, item[key])
