@@ -1,0 +1,304 @@
+"""The open loop of a delayed feedback loop, exactly: L(s) = sum_j N_j(s) e^(-s tau_j) / D(s), and the closed loop 1 + L(s) = 0.
+
+The loop is broken at the controlled signal v. With v held at its rest the plant is x' = M x + B v, M = A + v0 N, B = N x0 + b, so
+
+    D(s)   = det(sI - M) det(sI - F)
+    N_j(s) = -[g_j det(sI - F) + g_c adj(sI - F) G_j] [h_j adj(sI - M) B]
+
+with g the gradient of the drive at rest. Determinants and adjugates come from the Faddeev-LeVerrier recursion, whose coefficients
+are plain floats for one loop and arrays for a batch, so that the same lines serve both.
+"""
+
+from __future__ import annotations
+
+import cmath
+import math
+from dataclasses import dataclass, replace
+from functools import cached_property
+from typing import Any
+
+import numpy as np
+
+from lagscape.errors import InvalidInputError
+from lagscape.loops.protocol import Array, DriveForm, Rest
+
+__all__ = ["OpenLoop", "open_loop"]
+
+
+@dataclass(frozen=True)
+class OpenLoop:
+    """L(s) of one loop or of a batch.
+
+    `coefficients` has shape (degree + 1, n_terms + 1, ...): powers of s from the highest down; first column D, then each N_j.
+    `delays` holds tau_j in s for each term, floats or arrays of the batch's shape; equal delays are one term.
+    """
+
+    coefficients: Array
+    delays: tuple[Any, ...]
+
+    @property
+    def batch(self) -> tuple[int, ...]:
+        return self.coefficients.shape[2:]
+
+    @property
+    def degree(self) -> int:
+        return self.coefficients.shape[0] - 1
+
+    @property
+    def shortest_delay(self) -> Any:
+        return np.minimum.reduce(np.broadcast_arrays(*self.delays)) if self.batch else min(self.delays)
+
+    @property
+    def longest_delay(self) -> Any:
+        return np.maximum.reduce(np.broadcast_arrays(*self.delays)) if self.batch else max(self.delays)
+
+    @cached_property
+    def has_feedback(self) -> Any:
+        """False (for each member) where every N_j is zero: nothing comes back."""
+        return np.any(self.coefficients[:, 1:] != 0.0, axis=(0, 1))
+
+    def shifted(self, seconds: Any) -> OpenLoop:
+        """Every path's delay longer by `seconds` (s); a float or an array of the batch's shape."""
+        return replace(self, delays=tuple(delay + seconds for delay in self.delays))
+
+    def scaled(self, factor: Any) -> OpenLoop:
+        """L times a real factor."""
+        coefficients = self.coefficients.copy()
+        coefficients[:, 1:] *= factor
+        return replace(self, coefficients=coefficients)
+
+    def member(self, mask: Any) -> OpenLoop:
+        """The members of a one-axis batch that `mask` or an index array selects."""
+        return OpenLoop(
+            self.coefficients[:, :, mask], tuple(np.broadcast_to(delay, self.batch)[mask] for delay in self.delays)
+        )
+
+    # ---- arrays -------------------------------------------------------------------------------------------------------------
+    def response(self, frequency: Array) -> np.ndarray:
+        """L(i w), complex. `frequency` in rad/s has shape (n_frequencies, ...) with the batch's axes last."""
+        terms, denominator = self._on_axis(frequency)
+        total = terms[0] * self._turn(0, frequency)
+        for index in range(1, len(self.delays)):
+            total += terms[index] * self._turn(index, frequency)
+        return total / denominator
+
+    def envelope(self, frequency: Array) -> Array:
+        """sum_j |N_j| / |D| at i w: an upper bound of |L(i w)| that no delay changes."""
+        terms, denominator = self._on_axis(frequency)
+        return np.sum(np.abs(terms), axis=0) / np.abs(denominator)
+
+    def _turn(self, index: int, frequency: Array) -> np.ndarray:
+        angle = frequency * self.delays[index]
+        turn = np.empty(np.shape(angle), dtype=complex)
+        np.cos(angle, out=turn.real)
+        np.sin(angle, out=turn.imag)
+        np.negative(turn.imag, out=turn.imag)
+        return turn
+
+    def _on_axis(self, frequency: Array) -> tuple[np.ndarray, np.ndarray]:
+        # On the imaginary axis even and odd powers are real and imaginary parts: real Horner, a quarter of the work.
+        coefficients, square = self.coefficients[:, :, None], -(frequency * frequency)
+        degree = self.degree
+        even = coefficients[degree % 2]
+        for power in range(degree % 2 + 2, degree + 1, 2):
+            even = even * square + coefficients[power]
+        odd = coefficients[1 - degree % 2] if degree else np.zeros_like(coefficients[0])
+        for power in range(3 - degree % 2, degree + 1, 2):
+            odd = odd * square + coefficients[power]
+        shape = np.broadcast_shapes(even.shape, odd.shape, (1, *np.shape(frequency)))
+        value = np.empty(shape, dtype=complex)
+        value.real, value.imag = even, odd * frequency
+        return value[1:], value[0]
+
+    def with_slope(self, s: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """L and dL/ds at complex points of the batch's shape (or broadcasting with it)."""
+        value = self.coefficients[0] + 0j * s
+        slope = np.zeros_like(value)
+        for row in self.coefficients[1:]:
+            slope = slope * s + value
+            value = value * s + row
+        total = total_slope = 0.0
+        for index, delay in enumerate(self.delays):
+            turn = np.exp(-s * delay)
+            total = total + value[index + 1] * turn
+            total_slope = total_slope + (slope[index + 1] - delay * value[index + 1]) * turn
+        ratio = total / value[0]
+        return ratio, (total_slope - ratio * slope[0]) / value[0]
+
+    # ---- one loop, plain floats -----------------------------------------------------------------------------------------------
+    @cached_property
+    def _columns(self) -> list[list[float]]:
+        return np.asarray(self.coefficients.T).tolist()
+
+    def characteristic_at(self, s: complex) -> tuple[complex, complex, float]:
+        """F = D + sum_j N_j e^(-s tau_j), dF/ds and the sum of the terms' sizes, for one loop at one point."""
+        value, slope, size = 0j, 0j, 0.0
+        for column, delay in zip(self._columns, (0.0, *self.delays), strict=True):
+            term, term_slope = 0j, 0j
+            for coefficient in column:
+                term_slope = term_slope * s + term
+                term = term * s + coefficient
+            if delay:
+                turn = cmath.exp(-s * delay)
+                term_slope = (term_slope - delay * term) * turn
+                term *= turn
+            value += term
+            slope += term_slope
+            size += abs(term)
+        return value, slope, size
+
+    def at(self, s: complex) -> tuple[complex, complex]:
+        """L and dL/ds for one loop at one point; s must not be a root of D."""
+        columns = self._columns
+        below, below_slope = 0j, 0j
+        for coefficient in columns[0]:
+            below_slope = below_slope * s + below
+            below = below * s + coefficient
+        above, above_slope = 0j, 0j
+        for column, delay in zip(columns[1:], self.delays, strict=True):
+            term, term_slope = 0j, 0j
+            for coefficient in column:
+                term_slope = term_slope * s + term
+                term = term * s + coefficient
+            turn = cmath.exp(-s * delay)
+            above += term * turn
+            above_slope += (term_slope - delay * term) * turn
+        ratio = above / below
+        return ratio, (above_slope - ratio * below_slope) / below
+
+    @cached_property
+    def poles(self) -> np.ndarray:
+        """Roots of D for one loop, complex, 1/s."""
+        return np.roots(self.coefficients[:, 0])
+
+
+def open_loop(form: DriveForm, rest: Rest) -> OpenLoop:
+    """The open loop at this rest, exact.
+
+    Parameters
+    ----------
+    form : DriveForm
+        One loop or a batch.
+    rest : Rest
+        Its equilibrium; its batch axes broadcast with the form's.
+
+    Raises
+    ------
+    InvalidInputError
+        If a delay is not finite and positive.
+
+    References
+    ----------
+    Faddeev and Faddeeva 1963, Computational Methods of Linear Algebra, section 47 (from memory).
+    """
+    for delay in form.sensed_delays:
+        if not (0.0 < delay < math.inf if isinstance(delay, float) else np.all(np.isfinite(delay) & (np.asarray(delay) > 0.0))):
+            raise InvalidInputError(f"Every delay must be finite and positive (s); got {np.min(delay):.6g}.")
+    n_plant, n_sensed = form.n_plant, form.n_sensed
+    x0, c0 = rest.state[:n_plant], rest.state[n_plant:]
+    sensed = form.sensed_rows @ x0 if x0.ndim == 1 else np.tensordot(form.sensed_rows, x0, axes=(1, 0))
+    gradient = _elements(form.drive.gradient(sensed, c0))
+    v0 = rest.output
+    by_output = [_elements(row) for row in form.plant_by_output]
+    plant = [
+        [_sum(entry, _times(v0, by)) for entry, by in zip(_elements(row), by_row, strict=True)]
+        for row, by_row in zip(form.plant, by_output, strict=True)
+    ]
+    state = _elements(x0)
+    push = [
+        _sum(entry, _dot(by_row, state))
+        for entry, by_row in zip(_elements(form.input_vector), by_output, strict=True)
+    ]
+    plant_determinant, plant_adjugate = _resolvent(plant)
+    control_determinant, control_adjugate = _resolvent([_elements(row) for row in form.control])
+    inputs = [_elements(row) for row in form.control_by_sensed]
+
+    answer = [_vector_product(matrix, push) for matrix in plant_adjugate]
+    grouped: list[tuple[Any, list[Any]]] = []
+    for j in range(n_sensed):
+        row = form.sensed_rows[j].tolist()
+        seen = [_dot(row, vector) for vector in answer]
+        law = [_times(gradient[j], value) for value in control_determinant]
+        for k, matrix in enumerate(control_adjugate):
+            reply = _vector_product(matrix, [inputs[i][j] for i in range(form.n_control)])
+            law[k + 1] = _sum(law[k + 1], _dot(gradient[n_sensed:], reply))
+        numerator = [_times(-1.0, value) for value in _polynomial_product(law, seen)]
+        delay = form.sensed_delays[j]
+        for index, (known, total) in enumerate(grouped):
+            if known is delay or (isinstance(known, float) and known == delay) or np.array_equal(known, delay):
+                grouped[index] = (known, [_sum(a, b) for a, b in zip(total, numerator, strict=True)])
+                break
+        else:
+            grouped.append((delay, numerator))
+
+    denominator = _polynomial_product(plant_determinant, control_determinant)
+    degree = len(denominator) - 1
+    table = [denominator] + [[0.0] * (degree + 1 - len(total)) + total for _, total in grouped]
+    entries = [value for column in table for value in column] + [delay for delay, _ in grouped]
+    batch = np.broadcast_shapes(*(np.shape(value) for value in entries if not isinstance(value, float)))
+    if not batch:
+        return OpenLoop(np.array(table, dtype=float).T.copy(), tuple(float(delay) for delay, _ in grouped))
+    coefficients = np.zeros((degree + 1, len(table), *batch))
+    for column, values in enumerate(table):
+        for power, value in enumerate(values):
+            coefficients[power, column] = value
+    return OpenLoop(coefficients, tuple(delay for delay, _ in grouped))
+
+
+# ---- algebra on entries that are floats (one loop) or arrays (a batch); the float 0 stands for "nothing there" --------------------
+def _elements(values: Any) -> list[Any]:
+    array = np.asarray(values, dtype=float)
+    if array.ndim == 1:  # one loop
+        return array.tolist()
+    return [entry if entry.any() else 0.0 for entry in array]
+
+
+def _times(a: Any, b: Any) -> Any:
+    if (a.__class__ is float and a == 0.0) or (b.__class__ is float and b == 0.0):
+        return 0.0
+    return a * b
+
+
+def _sum(*values: Any) -> Any:
+    total: Any = 0.0
+    for value in values:
+        if value.__class__ is not float or value != 0.0:
+            total = total + value
+    return total
+
+
+def _dot(a: list[Any], b: list[Any]) -> Any:
+    total: Any = 0.0
+    for left, right in zip(a, b, strict=True):
+        if (left.__class__ is float and left == 0.0) or (right.__class__ is float and right == 0.0):
+            continue
+        total = total + left * right
+    return total
+
+
+def _vector_product(matrix: list[list[Any]], vector: list[Any]) -> list[Any]:
+    return [_dot(row, vector) for row in matrix]
+
+
+def _polynomial_product(a: list[Any], b: list[Any]) -> list[Any]:
+    product: list[Any] = [0.0] * (len(a) + len(b) - 1)
+    for i, left in enumerate(a):
+        for j, right in enumerate(b):
+            product[i + j] = product[i + j] + _times(left, right)
+    return product
+
+
+def _resolvent(matrix: list[list[Any]]) -> tuple[list[Any], list[list[list[Any]]]]:
+    """det(sI - M) as coefficients from the highest power down, and adj(sI - M) as matrices of the same powers, one fewer."""
+    size = len(matrix)
+    determinant: list[Any] = [1.0]
+    adjugate: list[list[list[Any]]] = []
+    current: list[list[Any]] = [[1.0 if i == j else 0.0 for j in range(size)] for i in range(size)]
+    for k in range(1, size + 1):
+        adjugate.append(current)
+        columns = [_vector_product(matrix, [current[i][j] for i in range(size)]) for j in range(size)]
+        trace = _sum(*(columns[i][i] for i in range(size)))
+        coefficient = _times(-1.0 / k, trace)
+        determinant.append(coefficient)
+        current = [[_sum(columns[j][i], coefficient if i == j else 0.0) for j in range(size)] for i in range(size)]
+    return determinant, adjugate
