@@ -46,7 +46,7 @@ def test_a_file_is_read_as_text_as_bytes_and_with_a_byte_order_mark(tmp_path):
 
 def test_key_names_carry_the_units():
     document = case_to_document(GOOD)
-    assert document["disturbance"] == {"name": "sigh", "size_l_min": 10.0}
+    assert document["disturbance"] == {"name": "sigh", "size_l_min": 15.0}
     assert document["numbers"]["lung_volume_l"] == {"value": 2.3, "basis": "measured", "spread_of_log": 0.1}
     assert size_key("N m") == "size_n_m" and size_key("mmHg") == "size_mmhg" and size_key("") == "size"
 

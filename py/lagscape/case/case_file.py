@@ -107,7 +107,6 @@ def case_to_document(case: Case) -> dict[str, Any]:
         if number.spread is not None:
             entry[spread_key(known[name].distribution)] = number.spread
         numbers[name] = entry
-    disturbance = case.disturbance
     return {
         "format": FORMAT,
         "version": NEWEST_VERSION,
@@ -116,9 +115,7 @@ def case_to_document(case: Case) -> dict[str, Any]:
         "numbers": numbers,
         "choices": dict(case.choices),
         "levers": [{"name": lever.name, "dose": lever.dose} for lever in case.levers],
-        "disturbance": None
-        if disturbance is None
-        else {"name": disturbance.name, size_key(disturbance_units(case.kind)[disturbance.name]): disturbance.size},
+        "disturbance": _disturbance_document(case),
     }
 
 
@@ -231,6 +228,13 @@ def _lever(item: Any) -> LeverSetting:
         raise CaseFormatError(f"A lever must be an object with name and dose; got {shown(item)}.")
     _keys("A lever", item, ("name", "dose"))
     return LeverSetting(item["name"], item["dose"])
+
+
+def _disturbance_document(case: Case) -> dict[str, Any] | None:
+    setting = case.disturbance
+    if setting is None:
+        return None
+    return {"name": setting.name, size_key(disturbance_units(case.kind)[setting.name]): setting.size}
 
 
 def _disturbance(item: Any, kind: str) -> DisturbanceSetting | None:

@@ -46,7 +46,7 @@ LARGEST_SETTING = 1e6
 """Largest size of a dose or a disturbance that a case holds, in its own unit; each lever's own rule is narrower."""
 
 DEFAULT_DISTURBANCES: Mapping[str, tuple[str, float]] = MappingProxyType(
-    {"breathing": ("sigh", 10.0), "reflex": ("torque", 1.0), "plain": ("drive", 0.1)}
+    {"breathing": ("sigh", 15.0), "reflex": ("torque", 2.0), "plain": ("drive", 0.1)}
 )
 """Loop kind to the disturbance first shown and its size, in the unit of the loop's channel of that name."""
 

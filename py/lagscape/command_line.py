@@ -1,0 +1,148 @@
+"""The command line: the same judgements without a page.
+
+    python -m lagscape analyse CASE.json            the standing and its margins, JSON on standard output
+    python -m lagscape measure FILE --signal NAME   cycles of breathing or a tremor's peak, JSON on standard output
+    python -m lagscape cohort CASES.csv             one row in, one row out, CSV on standard output
+
+`-` reads standard input. An error is one sentence on standard error and exit code 2. Of a cohort, a row that cannot be read has its
+sentence in the column `error`; the exit code is 2 only where no row could be.
+"""
+
+from __future__ import annotations
+
+import argparse
+import dataclasses
+import json
+import math
+import os
+import sys
+from collections.abc import Mapping, Sequence
+from enum import Enum
+from typing import Any, NoReturn
+
+from lagscape.errors import CaseFormatError, InvalidInputError, RecordingError
+from lagscape.version import VERSION
+
+__all__ = ["main", "plain"]
+
+CAUTION = "Decision support for qualified staff. Not a medical device."
+
+_ENDED_BY_USER = 130
+"""The shell's own code for a program ended from the keyboard."""
+
+
+def main(arguments: Sequence[str] | None = None) -> int:
+    """Run one command; the exit code. `arguments` are those after the program's name, those of the process if None."""
+    try:
+        options = _parser().parse_args(arguments)
+        code = options.run(options)
+        sys.stdout.flush()
+        return code
+    except BrokenPipeError:
+        # The reader has left, as `head` does. Python would complain again when it closes standard output.
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        return 0
+    except KeyboardInterrupt:
+        return _ENDED_BY_USER
+    except (CaseFormatError, InvalidInputError, RecordingError) as error:
+        return _failed(str(error))
+    except UnicodeDecodeError:
+        return _failed("The file is not UTF-8 text.")
+    except OSError as error:
+        return _failed(f"{error.filename or 'The file'} cannot be read: {error.strerror or error}.")
+
+
+def plain(value: Any) -> Any:
+    """A result as what JSON knows: dataclasses as objects, arrays as lists, what is not finite as null."""
+    if isinstance(value, Enum):
+        return value.value
+    if dataclasses.is_dataclass(value) and not isinstance(value, type):
+        return {item.name: plain(getattr(value, item.name)) for item in dataclasses.fields(value)}
+    if isinstance(value, Mapping):
+        return {str(key): plain(item) for key, item in value.items()}
+    if isinstance(value, (list, tuple)):
+        return [plain(item) for item in value]
+    if hasattr(value, "tolist"):
+        return plain(value.tolist())
+    if isinstance(value, float) and not math.isfinite(value):
+        return None
+    return value
+
+
+class _Parser(argparse.ArgumentParser):
+    def error(self, message: str) -> NoReturn:
+        self.exit(2, f"{self.prog}: {message}; try --help.\n")
+
+
+def _parser() -> argparse.ArgumentParser:
+    parser = _Parser(
+        prog="lagscape",
+        description="Judges delayed negative-feedback loops: waxing and waning breathing, shaking limbs.",
+        epilog=CAUTION + " Local protocols and licensed practice decide.",
+    )
+    parser.add_argument("--version", action="version", version=f"lagscape {VERSION}")
+    commands = parser.add_subparsers(required=True, metavar="COMMAND")
+
+    analyse = commands.add_parser("analyse", help="judge one case", description="Judge one case; JSON on standard output.")
+    analyse.add_argument("case", metavar="CASE.json", help="a case file, or - for standard input")
+    analyse.set_defaults(run=_analyse)
+
+    measure = commands.add_parser("measure", help="measure a recording", description="Measure one signal; JSON on standard output.")
+    measure.add_argument("file", metavar="FILE", help="a recording: CSV or EDF")
+    measure.add_argument("--signal", required=True, metavar="NAME", help="the channel or column")
+    measure.add_argument("--kind", choices=("breathing", "tremor"), default="breathing", help="what is looked for (breathing)")
+    measure.add_argument("--window", nargs=2, type=_seconds, metavar=("START", "END"), help="seconds from the start (everything)")
+    measure.add_argument("--sampling-frequency", type=_seconds, metavar="HZ", help="for a table without a time column")
+    measure.set_defaults(run=_measure)
+
+    cohort = commands.add_parser("cohort", help="judge a table of cases", description="Judge each row of a table; CSV on standard output.")
+    cohort.add_argument("cases", metavar="CASES.csv", help="a table whose columns are numbers by name, or - for standard input")
+    cohort.set_defaults(run=_cohort)
+    return parser
+
+
+def _analyse(options: argparse.Namespace) -> int:
+    from lagscape.case.case_file import LARGEST_FILE_BYTES, case_from_json, read_case_file
+    from lagscape.questions.standing import analyse
+
+    case = case_from_json(sys.stdin.buffer.read(LARGEST_FILE_BYTES + 1)) if options.case == "-" else read_case_file(options.case)
+    _print_json(analyse(case).to_json())
+    return 0
+
+
+def _measure(options: argparse.Namespace) -> int:
+    from lagscape.recordings import measuring
+
+    _print_json(plain(measuring(options)))
+    return 0
+
+
+def _cohort(options: argparse.Namespace) -> int:
+    from lagscape.cohort import analysed_rows, read_cohort, write_cohort
+    from lagscape.questions.standing import analyse
+
+    with open(0 if options.cases == "-" else options.cases, encoding="utf-8-sig", newline="", closefd=options.cases != "-") as source:
+        rows = analysed_rows(read_cohort(source), lambda case: plain(analyse(case).to_json()))
+        count, failed = write_cohort(rows, sys.stdout)
+    if failed and failed == count:
+        return _failed("No row of the cohort could be read; the column error says why for each.")
+    return 0
+
+
+def _print_json(value: Any) -> None:
+    print(json.dumps(plain(value), indent=2, allow_nan=False))
+
+
+def _failed(sentence: str) -> int:
+    print(f"lagscape: {sentence}", file=sys.stderr)
+    return 2
+
+
+def _seconds(text: str) -> float:
+    try:
+        value = float(text)
+    except ValueError:
+        value = math.nan
+    if not math.isfinite(value) or value < 0.0:
+        raise argparse.ArgumentTypeError(f"must be a number from 0 up, got {text!r}")
+    return value
