@@ -16,7 +16,7 @@ __all__ = [
 
 SECONDS_PER_MINUTE = 60.0
 
-MMHG_PER_KPA = 7.500616827
+MMHG_PER_KPA = 1000.0 / 133.322387415
 """1 kPa in mmHg; 1 mmHg = 133.322387415 Pa (BIPM, SI Brochure, conventional millimetre of mercury)."""
 
 ALVEOLAR_CONSTANT = 863.0

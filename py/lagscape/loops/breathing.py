@@ -29,6 +29,9 @@ __all__ = ["BreathingLoop", "SigmoidDrive", "ThresholdDrive", "hypoxic_multiplie
 _SIGMOID_APNOEA_SHARE = 0.1
 """A sigmoid never reaches zero; ventilation under a tenth of eupnoea counts as apnoea (common practice, no source)."""
 
+_NO_PRESSURE = 1e-30
+"""A share of P_line at or under which the sigmoid's pressure counts as none: the power law has no value below zero."""
+
 
 def hypoxic_multiplier(arterial_po2_mmhg: Any) -> Any:
     """g = exp(-0.05 (PaO2 - 100)), no unit, 1 at 100 mmHg. Secondary sources only."""
@@ -99,14 +102,14 @@ class SigmoidDrive:
         return np.ones_like(self._effective(sensed, control, push))
 
     def value(self, sensed: Array, control: Array, push: Any = 0.0) -> Array:
-        ratio = np.maximum(self._effective(sensed, control, push) / self.line_pressure, 1e-30)
+        ratio = self._effective(sensed, control, push) / self.line_pressure
         odds = (self.largest_ventilation / self.line_ventilation - 1.0) * np.exp(
-            np.minimum(-self._exponent * np.log(ratio), 690.0)
+            np.minimum(-self._exponent * np.log(np.maximum(ratio, _NO_PRESSURE)), 690.0)
         )
-        return self.largest_ventilation / (1.0 + odds)
+        return np.where(ratio > _NO_PRESSURE, self.largest_ventilation / (1.0 + odds), 0.0)
 
     def gradient(self, sensed: Array, control: Array, push: Any = 0.0) -> Array:
-        effective = np.maximum(self._effective(sensed, control, push), 1e-30 * self.line_pressure)
+        effective = np.maximum(self._effective(sensed, control, push), _NO_PRESSURE * self.line_pressure)
         ventilation = self.value(sensed, control, push)
         slope = self._exponent * ventilation * (1.0 - ventilation / self.largest_ventilation) / effective
         weight = self.peripheral / (self.peripheral + self.central)
@@ -116,7 +119,7 @@ class SigmoidDrive:
         slope = self.peripheral + self.central
         weight = self.peripheral / slope
         ratio = (weight * sensed[0] + (1.0 - weight) * control[0] + push / slope) / self.line_pressure
-        if ratio <= 1e-30:
+        if ratio <= _NO_PRESSURE:
             return 0.0
         power = -self._exponent * math.log(ratio)
         odds = (self.largest_ventilation / self.line_ventilation - 1.0) * math.exp(min(power, 690.0))
@@ -219,8 +222,8 @@ class BreathingLoop:
     def _check(self) -> None:
         if not np.all(np.asarray(self.resting_paco2_mmhg - self.inspired_pco2_mmhg) > 0.0) and self.line_ventilation_l_min is None:
             raise InvalidInputError(
-                f"Resting PaCO2 must lie above inspired PCO2; got {self.resting_paco2_mmhg:.4g} and "
-                f"{self.inspired_pco2_mmhg:.4g} mmHg. Lower the inspired PCO2."
+                f"Resting PaCO2 must lie above inspired PCO2; got {float(np.min(self.resting_paco2_mmhg)):.4g} and "
+                f"{float(np.max(self.inspired_pco2_mmhg)):.4g} mmHg. Lower the inspired PCO2."
             )
         if self.drive_shape == "sigmoid" and not np.all(self.largest_ventilation_l_min > self.line_ventilation):
             raise InvalidInputError(
@@ -258,10 +261,14 @@ class BreathingLoop:
         return Rest(state, ventilation if np.ndim(ventilation) else float(ventilation))
 
     def _sigmoid_rest(self, load: Any) -> Array:
-        """PaCO2 where the sigmoid meets the hyperbola: bisection, then the last bits by more bisection; always bracketed."""
+        """PaCO2 where the sigmoid meets the hyperbola, by bisection.
+
+        Always bracketed: above P_line the rising drive is at least V_line, so V (P - P_I) has passed the load where both
+        P >= P_line and V_line (P - P_I) >= load.
+        """
         drive = self._drive()
         low = np.zeros(batch_shape(self)) + self.inspired_pco2_mmhg
-        high = low + load / self.largest_ventilation_l_min + 400.0
+        high = np.maximum(self.resting_paco2_mmhg, low + load / self.line_ventilation)
         for _ in range(80):
             middle = 0.5 * (low + high)
             ventilation = drive.value(np.stack([middle, middle]), middle[None])

@@ -103,7 +103,7 @@ class ReflexLoop:
         conducted = self.delay - self.fixed_delay_s
         wanted = np.asarray(delay - self.fixed_delay_s, dtype=float)
         if np.all(wanted > 0.0):
-            factor = conducted / wanted if np.ndim(delay) else conducted / float(wanted)
+            factor = conducted / (wanted if wanted.ndim else float(wanted))
             return replace(
                 self,
                 afferent_velocity_m_s=self.afferent_velocity_m_s * factor,
