@@ -1,0 +1,152 @@
+"""Python's side of the worker: `web/worker.js` calls these functions and nothing else of the application.
+
+Boot goes in the order of the functions: prepare, import_drawing, import_widgets, import_application, build, drawn; then `change` and
+`command` for every message of the page. Everything comes in as a value.
+"""
+
+from __future__ import annotations
+
+import importlib
+import json
+import traceback
+from typing import Any
+
+from . import panel_compat
+
+__all__ = ["build", "change", "command", "drawn", "import_application", "import_drawing", "import_widgets", "prepare"]
+
+
+def prepare(style_sheets: str) -> None:
+    """Sets what must be in place before Bokeh and Panel are imported; `style_sheets`: address of Panel's own files."""
+    panel_compat.stand_in_for_pandas()
+    panel_compat.use_own_style_sheets(style_sheets)
+
+
+def import_drawing() -> None:
+    """Imports Bokeh."""
+    importlib.import_module("bokeh.plotting")
+
+
+def import_widgets() -> None:
+    """Imports Panel."""
+    importlib.import_module("panel")
+
+
+def import_application() -> None:
+    """Imports the application's views."""
+    importlib.import_module("lagscape.app.main")
+
+
+class _Running:
+    """The one running application of this worker."""
+
+    def __init__(self, host: Any, settings: dict[str, Any]) -> None:
+        from bokeh.document import Document
+        from bokeh.io.doc import set_curdoc
+        from bokeh.settings import settings as bokeh_settings
+        from panel.io.state import state
+
+        from . import main
+        from .page_link import PageLink
+        from .scipy_loader import use_loader
+
+        use_loader(host.loadScipy)
+        self.host = host
+        # Names that differ between restarts, so that the page's index of views never meets the same one twice.
+        bokeh_settings.simple_ids.set_value(False)
+        self.document = Document()
+        set_curdoc(self.document)
+        state.curdoc = self.document
+        self.link: Any = None
+        self.page = PageLink(self._post, **settings)
+        self.page.join(self._draw, self.trouble)
+        self.roots: dict[str, str] = {}
+        for slot, viewable in main.build(self.page).items():
+            self._add_root(slot, viewable)
+
+    def document_json(self) -> str:
+        """The whole document and the slot of each root, as JSON text."""
+        return json.dumps([json.dumps(self.document.to_json(deferred=False)), json.dumps(self.roots)])
+
+    def start(self) -> None:
+        """Joins the document to the page's copy of it."""
+        from bokeh.events import DocumentReady
+
+        from .document_link import DocumentLink
+
+        self.link = DocumentLink(self.document, self._send_patch)
+        with self.link:
+            self.document.callbacks.trigger_event(DocumentReady())
+
+    def trouble(self, error: BaseException) -> None:
+        """Tells the page of an error that nobody expected."""
+        text = "".join(traceback.format_exception(error))
+        self.host.trouble(str(error) or type(error).__name__, text[-4000:])
+
+    def _add_root(self, slot: str, viewable: Any) -> str:
+        before = set(self.document.roots)
+        viewable.server_doc(self.document, location=False)
+        (root,) = set(self.document.roots) - before
+        self.roots[root.ref["id"]] = slot
+        return root.ref["id"]
+
+    def _draw(self, slot: str, viewable: Any) -> None:
+        if self.link is None:
+            self._add_root(slot, viewable)
+            return
+        # The page must know the slot before the patch that brings the root arrives.
+        self.link.flush()
+        with self.link:
+            root_id = self._add_root(slot, viewable)
+            self.host.root(root_id, slot)
+
+    def _post(self, name: str, payload: dict[str, Any]) -> None:
+        from pyodide.ffi import to_js
+
+        data = payload.pop("data", None)
+        self.host.call(name, json.dumps(payload), None if data is None else to_js(data))
+
+    def _send_patch(self, patch: str, parts: dict[str, bytes]) -> None:
+        from pyodide.ffi import to_js
+
+        self.host.patch(patch, to_js(list(parts)), to_js([to_js(part).buffer for part in parts.values()]))
+
+
+_running: _Running | None = None
+
+
+def build(host: Any, settings: str) -> str:
+    """Builds the application's views; `settings` is the JSON text of address, link, theme and touch. Returns JSON text."""
+    global _running
+    _running = _Running(host, json.loads(settings))
+    return _running.document_json()
+
+
+def drawn() -> None:
+    """The page has drawn the document: changes may flow."""
+    assert _running is not None
+    _running.start()
+
+
+def change(patch: str) -> None:
+    """Works through one Bokeh patch of the page, JSON text; an error in the application is told to the page."""
+    assert _running is not None
+    try:
+        _running.link.apply(patch)
+    except Exception as error:
+        _running.trouble(error)
+
+
+def command(name: str, payload: str, file: Any) -> None:
+    """Works through one typed command, its payload as JSON text and the browser's File or None."""
+    assert _running is not None
+    fields = json.loads(payload)
+    if file is not None:
+        from .browser_file import open_browser_file
+
+        fields["file"] = open_browser_file(file, _running.host.readSlice, fields["name"], fields["bytes"])
+    try:
+        with _running.link:
+            _running.page.receive(name, fields)
+    except Exception as error:
+        _running.trouble(error)

@@ -1,0 +1,84 @@
+"""The worker's end of the Bokeh document: gathers what Python changed and hands it over as one patch."""
+
+from __future__ import annotations
+
+import asyncio
+import json
+from collections.abc import Callable
+from typing import Any
+
+from bokeh.core.serialization import Buffer, Serializer
+from bokeh.document import Document
+from bokeh.document.events import DocumentPatchedEvent
+from bokeh.document.json import PatchJson
+
+__all__ = ["DocumentLink"]
+
+# Marks changes that came from the page, so that they are not sent back to it.
+PAGE = "page"
+
+
+class DocumentLink:
+    """Gathers the changes of a document while a message is worked through, then sends them in one go.
+
+    One patch a message means one redraw on the page, and several settings of the same property cost one.
+
+    Parameters
+    ----------
+    document
+        The document to watch.
+    send
+        Takes the patch as JSON text and its binary parts by name.
+    """
+
+    def __init__(self, document: Document, send: Callable[[str, dict[str, bytes]], None]) -> None:
+        self._document, self._send = document, send
+        self._events: list[DocumentPatchedEvent] = []
+        self._inside = False
+        self._scheduled = False
+        document.on_change(self._gather)
+
+    def apply(self, patch: str) -> None:
+        """Lays a patch of the page on the document; changes that follow from it go back in one patch."""
+        self._inside = True
+        try:
+            self._document.apply_json_patch(json.loads(patch), setter=PAGE)
+        finally:
+            self._inside = False
+            self.flush()
+
+    def __enter__(self) -> None:
+        self._inside = True
+
+    def __exit__(self, *_: object) -> None:
+        self._inside = False
+        self.flush()
+
+    def flush(self) -> None:
+        """Sends what has gathered."""
+        self._scheduled = False
+        events, self._events = self._events, []
+        if not events:
+            return
+        models = self._document.models
+        serializer = Serializer(references=models.synced_references)
+        patch = PatchJson(events=serializer.encode(events))
+        models.flush_synced(lambda model: not serializer.has_ref(model))
+        parts = {buffer.id: buffer.to_bytes() for buffer in serializer.buffers}
+        self._send(json.dumps(patch, default=_reference), parts)
+
+    def _gather(self, event: Any) -> None:
+        if not isinstance(event, DocumentPatchedEvent) or event.setter == PAGE:
+            return
+        if not any(older.combine(event) for older in reversed(self._events)):
+            self._events.append(event)
+        # A change outside any message, from a task or a timer: sent as soon as that step is done.
+        if not self._inside and not self._scheduled:
+            self._scheduled = True
+            asyncio.get_running_loop().call_soon(self.flush)
+
+
+def _reference(value: Any) -> Any:
+    if isinstance(value, Buffer):
+        return value.ref
+    raise TypeError(f"a patch holds a {type(value).__name__}, which has no JSON form")

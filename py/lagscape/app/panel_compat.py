@@ -1,0 +1,74 @@
+"""Lets Panel and Bokeh start in the browser without pandas, without network patches and with style sheets of this site.
+
+Bokeh 3.7 imports pandas only to ask whether a value is a data frame; nothing here ever makes one, so empty classes answer. Panel asks
+for pandas unless pyodide-http is there; it would patch network libraries that the page must not use, so a name without function stands
+for it. Panel's components name style sheets of a content network: they are pointed at the site's own copy before anything reads them.
+"""
+
+from __future__ import annotations
+
+import importlib.abc
+import importlib.machinery
+import sys
+from types import ModuleType
+from typing import Any
+
+__all__ = ["stand_in_for_pandas", "use_own_style_sheets"]
+
+RESOURCES = "panel.io.resources"
+
+
+def stand_in_for_pandas() -> None:
+    """Puts modules `pandas` and `pyodide_http` in place that hold names for isinstance checks and nothing else."""
+    if "pandas" in sys.modules:
+        return
+    frames = {name: type(name, (), {}) for name in ("DataFrame", "Series", "Index", "MultiIndex", "Timestamp", "Timedelta", "Period")}
+    _module("pandas", **frames, NaT=None, __version__="0", __path__=[])
+    _module("pandas.core", __path__=[])
+    _module("pandas.core.groupby", GroupBy=type("GroupBy", (), {}))
+    _module("pyodide_http", patch_all=lambda: None)
+
+
+def use_own_style_sheets(address: str) -> None:
+    """Makes Panel look for its style sheets under `address`, which ends with a slash. Call it before Panel is imported."""
+    sys.meta_path.insert(0, _ResourcesFinder(address))
+
+
+def _module(name: str, **members: Any) -> None:
+    module = ModuleType(name)
+    module.__dict__.update(members)
+    sys.modules[name] = module
+
+
+class _ResourcesFinder(importlib.abc.MetaPathFinder):
+    """Finds Panel's resources module as usual, and has its address changed right after it has run."""
+
+    def __init__(self, address: str) -> None:
+        self._address = address
+
+    def find_spec(self, fullname: str, path: Any, target: Any = None) -> importlib.machinery.ModuleSpec | None:
+        if fullname != RESOURCES:
+            return None
+        spec = importlib.machinery.PathFinder.find_spec(fullname, path)
+        if spec is not None and spec.loader is not None:
+            spec.loader = _ResourcesLoader(spec.loader, self._address)
+        return spec
+
+
+class _ResourcesLoader(importlib.abc.Loader):
+    def __init__(self, loader: Any, address: str) -> None:
+        self._loader, self._address = loader, address
+
+    def create_module(self, spec: importlib.machinery.ModuleSpec) -> ModuleType | None:
+        return self._loader.create_module(spec)
+
+    def exec_module(self, module: ModuleType) -> None:
+        self._loader.exec_module(module)
+        old = module.CDN_DIST
+        module.CDN_DIST = self._address
+        for table in (module.CSS_URLS, module.JS_URLS):
+            for key, url in table.items():
+                table[key] = url.replace(old, self._address)
+
+    def __getattr__(self, name: str) -> Any:
+        return getattr(self._loader, name)

@@ -1,0 +1,184 @@
+// What the frame shows: starting, ready, working, refused, failed, and the quiet lines. No knowledge of Python or Bokeh.
+
+const STAGES = [
+  ["runtime", "Python"],
+  ["numbers", "numbers"],
+  ["libraries", "drawing"],
+  ["widgets", "controls"],
+  ["application", "the loops"],
+  ["page", "the page"],
+];
+const THINKING_AFTER_MS = 150;
+const STUCK_AFTER_MS = 20000;
+const LIVE_AFTER_MS = 700;
+
+// Shape says the standing as well as colour: a level line, a dying ring, a steady wave.
+const MARKS = {
+  settles: "M1 14C4 2 6 3 8 9s4 1 11 1",
+  rings: "M1 10C2 2 4 2 5 10s3 6 4 0 2.500-4 3.500 0 2 2.500 3 0 1.500-1 2.500 0",
+  hunts: "M1 10C2.500 2 4 2 5.500 10s3 8 4.500 0 3-8 4.500 0 3 8 4.500 0",
+};
+
+export class PageState {
+  constructor(root) {
+    this.root = root;
+    this.stages = new Map();
+    this.readyCallbacks = [];
+    this.supportText = "";
+    this.byId("copy-support").addEventListener("click", () => this.copySupport());
+  }
+
+  byId(id) {
+    return this.root.getElementById(id);
+  }
+
+  set(name) {
+    this.root.body.dataset.state = name;
+  }
+
+  booting() {
+    this.set("booting");
+    this.byId("failed").hidden = true;
+    this.byId("boot").hidden = false;
+    this.byId("boot-bar").value = 0;
+    this.busy(false);
+    const list = this.byId("boot-stages");
+    list.replaceChildren();
+    this.stages.clear();
+    for (const [name, label] of STAGES) {
+      const item = this.root.createElement("li");
+      item.textContent = label;
+      item.dataset.state = "waiting";
+      list.append(item);
+      this.stages.set(name, item);
+    }
+  }
+
+  /** A stage began or was done. It only ever goes forward: waiting, begun, done. */
+  stage(name, state) {
+    const item = this.stages.get(name);
+    if (!item || item.dataset.state === "done") return;
+    item.dataset.state = state;
+    const done = [...this.stages.values()].filter((each) => each.dataset.state === "done").length;
+    this.stagesDone = done;
+    this.showProgress();
+  }
+
+  loaded(bytes, total) {
+    this.bytes = bytes;
+    this.total = total;
+    this.showProgress();
+  }
+
+  // Half of the bar is bytes, half is stages: neither alone says how far the start is.
+  showProgress() {
+    const part = this.total ? this.bytes / this.total : 0;
+    this.byId("boot-bar").value = 0.5 * part + (0.5 * (this.stagesDone ?? 0)) / STAGES.length;
+    const of = this.total ? `, ${(this.bytes / 1e6).toFixed(1)} of ${(this.total / 1e6).toFixed(1)} MB` : "";
+    this.byId("boot-title").textContent = `Starting: step ${Math.min((this.stagesDone ?? 0) + 1, STAGES.length)} of ${STAGES.length}${of}`;
+  }
+
+  ready() {
+    this.set("ready");
+    this.byId("boot").hidden = true;
+    for (const callback of this.readyCallbacks.splice(0)) callback();
+  }
+
+  whenReady(callback) {
+    this.readyCallbacks.push(callback);
+  }
+
+  /** Working: a small mark after 150 ms, and a way out after 20 s. */
+  busy(on) {
+    clearTimeout(this.thinkingTimer);
+    clearTimeout(this.stuckTimer);
+    const mark = this.byId("thinking");
+    if (!on) {
+      mark.hidden = true;
+      if (this.root.body.dataset.state === "stuck") this.set("ready");
+      return;
+    }
+    this.thinkingTimer = setTimeout(() => {
+      mark.hidden = false;
+    }, THINKING_AFTER_MS);
+    this.stuckTimer = setTimeout(() => {
+      if (this.root.body.dataset.state === "ready") this.say("standing", "This takes long. You can wait, or load the page again from a saved case.", "note");
+    }, STUCK_AFTER_MS);
+  }
+
+  working(text) {
+    this.byId("thinking-text").textContent = text || "working";
+  }
+
+  standing(text, standing) {
+    const place = this.byId("standing");
+    place.dataset.standing = standing;
+    this.byId("standing-text").textContent = text;
+    const mark = this.byId("standing-mark");
+    mark.replaceChildren();
+    if (MARKS[standing]) {
+      const path = this.root.createElementNS("http://www.w3.org/2000/svg", "path");
+      path.setAttribute("d", MARKS[standing]);
+      mark.append(path);
+    }
+    // A screen reader hears the sentence when the hand has stopped, not each one on the way.
+    clearTimeout(this.liveTimer);
+    this.liveTimer = setTimeout(() => {
+      this.byId("standing-live").textContent = text;
+    }, LIVE_AFTER_MS);
+  }
+
+  say(place, text, tone) {
+    const element = this.byId(`said-${place}`);
+    element.textContent = text;
+    element.dataset.tone = tone;
+    element.hidden = text === "";
+  }
+
+  line(name, on) {
+    this.byId(`${name}-line`).hidden = !on;
+  }
+
+  /** Something unexpected that the application survived. */
+  trouble(sentence, support) {
+    this.supportText = support;
+    this.say("bar", `Something went wrong and the last step was not carried out: ${sentence}`, "refused");
+  }
+
+  failed(sentence, support) {
+    this.set("failed");
+    this.busy(false);
+    this.supportText = support;
+    this.byId("boot").hidden = true;
+    this.byId("failed").hidden = false;
+    this.byId("failed-sentence").textContent = sentence;
+    this.byId("failed-support").textContent = support;
+    this.byId("restart").focus();
+  }
+
+  onRestart(callback) {
+    this.byId("restart").addEventListener("click", callback);
+  }
+
+  async copySupport() {
+    const { copyText } = await import("./calls.js");
+    const copied = await copyText(this.supportText);
+    this.byId("copy-support").textContent = copied ? "Copied" : "Select and copy the text below";
+  }
+
+  /** Opens or closes a view over the middle; focus goes in and comes back. */
+  show(view, open) {
+    const element = this.byId(`over-${view}`);
+    if (element.hidden === !open) return;
+    if (open) {
+      for (const other of this.root.querySelectorAll(".over")) other.hidden = true;
+      this.focusBefore = this.root.activeElement;
+      element.hidden = false;
+      element.focus();
+    } else {
+      element.hidden = true;
+      this.focusBefore?.focus?.();
+    }
+    this.root.body.dataset.view = open ? view : "";
+  }
+}

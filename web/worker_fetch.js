@@ -1,0 +1,35 @@
+// Fetches with a count of the bytes that have arrived, so that the start shows true progress.
+
+/**
+ * A fetch that counts. sizes: file name to length in bytes, for the files that belong to the start; others are not counted.
+ * report(bytes, total) is called at most every 50 ms, and once when all have arrived.
+ */
+export function countedFetch(plainFetch, sizes, report) {
+  const total = Object.values(sizes).reduce((sum, size) => sum + size, 0);
+  let bytes = 0;
+  let last = 0;
+
+  function count(more) {
+    bytes += more;
+    const now = performance.now();
+    if (now - last > 50 || bytes >= total) {
+      last = now;
+      report(Math.min(bytes, total), total);
+    }
+  }
+
+  return async function fetchCounted(resource, options) {
+    const address = typeof resource === "string" ? resource : (resource.url ?? String(resource));
+    const name = address.split(/[?#]/)[0].split("/").pop();
+    const answer = await plainFetch(resource, options);
+    if (!answer.ok) throw new Error(`${name} could not be fetched (status ${answer.status})`);
+    if (!(name in sizes) || !answer.body) return answer;
+    const counter = new TransformStream({
+      transform(chunk, controller) {
+        count(chunk.byteLength);
+        controller.enqueue(chunk);
+      },
+    });
+    return new Response(answer.body.pipeThrough(counter), { status: answer.status, headers: answer.headers });
+  };
+}
