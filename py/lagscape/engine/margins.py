@@ -29,7 +29,7 @@ class MarginStatus(StrEnum):
     NO_GAIN_CROSSOVER = "no_gain_crossover"
     """The loop's gain is under 1 at every frequency: no lag and no delay makes it hunt."""
     NO_LAG_RESTORES = "no_lag_restores"
-    """The loop is unstable and no phase lead within a turn settles it."""
+    """The loop is unstable and no phase lead settles it."""
     NO_DELAY_RESTORES = "no_delay_restores"
     """The loop is unstable and would be even without its shortest delay."""
 
@@ -128,7 +128,9 @@ def _lag_part(opened: OpenLoop, crossings: Crossings) -> tuple[float | None, flo
         lag, item = min(((item.lag_left % turn, item) for item in crossings.gain), key=lambda pair: pair[0])
         return lag, item.frequency, MarginStatus.FOUND
     events = sorted(
-        ((-item.lag_left) % turn + turn * k, item.frequency, item.falling) for item in crossings.gain for k in range(crossings.unstable_roots // 2 + 1)
+        ((-item.lag_left) % turn + turn * k, item.frequency, item.falling)
+        for item in crossings.gain
+        for k in range(crossings.unstable_roots // 2 + 1)
     )
     found = _walk_back(crossings.unstable_roots, events)
     return (None, None, MarginStatus.NO_LAG_RESTORES) if found is None else (-found[0], found[1], MarginStatus.FOUND)

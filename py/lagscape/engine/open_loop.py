@@ -35,6 +35,8 @@ class OpenLoop:
 
     coefficients: Array
     delays: tuple[Any, ...]
+    quadratics: tuple[tuple[Any, Any], ...] = ()
+    """(p, q) of the factors s^2 + p s + q of D that come from two-state parts: where a resonance may hide."""
 
     @property
     def batch(self) -> tuple[int, ...]:
@@ -70,8 +72,14 @@ class OpenLoop:
     def member(self, mask: Any) -> OpenLoop:
         """The members of a one-axis batch that `mask` or an index array selects."""
         return OpenLoop(
-            self.coefficients[:, :, mask], tuple(np.broadcast_to(delay, self.batch)[mask] for delay in self.delays)
+            self.coefficients[:, :, mask],
+            tuple(np.broadcast_to(delay, self.batch)[mask] for delay in self.delays),
+            tuple((np.broadcast_to(p, self.batch)[mask], np.broadcast_to(q, self.batch)[mask]) for p, q in self.quadratics),
         )
+
+    def resonances(self) -> list[tuple[Any, Any]]:
+        """Frequency and half-width in rad/s of each quadratic factor with complex roots; the frequency is 0 where they are real."""
+        return [(np.sqrt(np.maximum(q - 0.25 * p * p, 0.0)), 0.5 * np.abs(p)) for p, q in self.quadratics]
 
     # ---- arrays -------------------------------------------------------------------------------------------------------------
     def response(self, frequency: Array) -> np.ndarray:
@@ -233,16 +241,17 @@ def open_loop(form: DriveForm, rest: Rest) -> OpenLoop:
 
     denominator = _polynomial_product(plant_determinant, control_determinant)
     degree = len(denominator) - 1
+    quadratics = tuple((part[1], part[2]) for part in (plant_determinant, control_determinant) if len(part) == 3)
     table = [denominator] + [[0.0] * (degree + 1 - len(total)) + total for _, total in grouped]
     entries = [value for column in table for value in column] + [delay for delay, _ in grouped]
     batch = np.broadcast_shapes(*(np.shape(value) for value in entries if not isinstance(value, float)))
     if not batch:
-        return OpenLoop(np.array(table, dtype=float).T.copy(), tuple(float(delay) for delay, _ in grouped))
+        return OpenLoop(np.array(table, dtype=float).T.copy(), tuple(float(delay) for delay, _ in grouped), quadratics)
     coefficients = np.zeros((degree + 1, len(table), *batch))
     for column, values in enumerate(table):
         for power, value in enumerate(values):
             coefficients[power, column] = value
-    return OpenLoop(coefficients, tuple(delay for delay, _ in grouped))
+    return OpenLoop(coefficients, tuple(delay for delay, _ in grouped), quadratics)
 
 
 # ---- algebra on entries that are floats (one loop) or arrays (a batch); the float 0 stands for "nothing there" --------------------

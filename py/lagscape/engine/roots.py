@@ -26,7 +26,7 @@ from lagscape.engine.margins import Margins, margins
 from lagscape.engine.open_loop import OpenLoop, open_loop
 from lagscape.loops.protocol import Array, DriveForm, Rest
 
-__all__ = ["RootStatus", "Roots", "generator_eigenvalues", "polish_root", "rightmost_roots"]
+__all__ = ["RootStatus", "Roots", "crossing_root", "generator_eigenvalues", "polish_root", "rightmost_roots"]
 
 _NODES = 14
 _FINER = (24, 40, 72)
@@ -57,7 +57,9 @@ class Roots:
     spectral_abscissa: float
     """1/s, the largest real part; positive means that the loop does not settle."""
     oscillatory: complex | None
-    """1/s, the rightmost root that oscillates."""
+    """1/s, the dominant oscillation: of an unstable loop the rightmost pair, of a stable one the pair that the deciding phase
+    crossover becomes, the one that would hunt if the gain were raised. (A pair of the slow stores may lie to its right; it dies within
+    its own period and nobody would call it a cycle.)"""
     slow_real: float | None
     """1/s, the rightmost real root: how slowly the stores come back, without a cycle."""
     status: RootStatus
@@ -91,7 +93,8 @@ def rightmost_roots(
     opened = open_loop(form, rest) if opened is None else opened
     known = margins(form, rest, opened) if known is None else known
     seeds = [complex(item) for item in opened.poles.tolist() if item.imag >= 0.0]
-    seeds += _crossing_seeds(opened, known)
+    towards = _crossing_seeds(opened, known)
+    seeds += towards
     found: dict[complex, float] = {}
     agrees = False
     for nodes in (_NODES, *_FINER):
@@ -105,6 +108,10 @@ def rightmost_roots(
         seeds = []
     ordered = sorted(found, key=lambda root: -root.real)
     oscillatory = next((root for root in ordered if root.imag > 0.0), None)
+    if known.stable and towards:
+        own, residual = polish_root(opened, towards[0])
+        if residual < _RESIDUAL and own.imag > _REAL * abs(own):
+            oscillatory = own
     slow = next((root.real for root in ordered if root.imag == 0.0), None)
     status = RootStatus.CONVERGED if agrees else RootStatus.COUNT_DISAGREES
     if agrees and oscillatory is None:
@@ -155,21 +162,29 @@ def _on_boundary(found: dict[complex, float]) -> bool:
 
 
 def _crossing_seeds(opened: OpenLoop, known: Margins) -> list[complex]:
-    """From i w at each strong phase crossover, Newton on log(-L) = 0: the root that this crossover becomes as the gain passes 1."""
-    seeds = []
-    for crossing in sorted(known.phase_crossovers, key=lambda item: -item.gain)[:6]:
-        s = 1j * crossing.frequency
-        for _ in range(3):
-            value, slope = opened.at(s)
-            if not slope or not value:
-                break
-            step = cmath.log(-value) * value / slope
-            if abs(step) > 0.5 * abs(s):
-                step *= 0.5 * abs(s) / abs(step)
-            s -= step
-        if s.imag > 0.0:
-            seeds.append(s)
-    return seeds
+    """From i w at each strong phase crossover, the deciding one first, to the root that it becomes as the gain passes 1."""
+    frequencies = [item.frequency for item in sorted(known.phase_crossovers, key=lambda item: -item.gain)[:6]]
+    if known.phase_crossover_frequency is not None:
+        frequencies = [known.phase_crossover_frequency, *(w for w in frequencies if w != known.phase_crossover_frequency)]
+    found = (crossing_root(opened, w) for w in frequencies)
+    return [s for s in found if s is not None]
+
+
+def crossing_root(opened: OpenLoop, frequency: float) -> complex | None:
+    """Newton steps on log(-L) = 0 from i w, each at most 0.4 |s| long; None where they do not settle above the real axis."""
+    s = 1j * frequency
+    for _ in range(12):
+        value, slope = opened.at(s)
+        if not slope or not value:
+            return None
+        step = cmath.log(-value) * value / slope
+        length = abs(step)
+        if length > 0.4 * abs(s):
+            step *= 0.4 * abs(s) / length
+        s -= step
+        if length <= 1e-8 * abs(s):
+            return s if s.imag > _REAL * abs(s) else None
+    return None
 
 
 @lru_cache(maxsize=16)

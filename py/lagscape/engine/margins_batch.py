@@ -1,0 +1,342 @@
+"""Margins, stability and the dominant oscillation of thousands of loops at once.
+
+Each member is sampled on its own frequencies, scaled by its delays and its gain; all its crossings of the negative real axis and of
+the unit circle are bracketed, counted for Nyquist's criterion and closed together by Newton steps. From the deciding phase crossover
+Newton steps on log(-L) = 0 lead to the dominant oscillatory root. A member whose steps do not settle, or whose growth disagrees in
+sign with Nyquist's count, is done again one by one with all the care of `roots`.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+
+from lagscape.engine.open_loop import OpenLoop, open_loop
+from lagscape.loops.protocol import Array, DriveForm, Rest
+
+__all__ = ["MarginsBatch", "margins_batch"]
+
+_CHUNK = 2048
+"""Members worked on at once, so that the work arrays stay in the cache."""
+_LEAST_FREQUENCIES, _MOST_FREQUENCIES = 20, 400
+_STEPS_PER_HALF_TURN = 3.0
+_ABOUT_RESONANCE = np.array([-3.0, -1.0, -0.4, 0.0, 0.4, 1.0, 3.0])[:, None]
+_TURN = 2.0 * math.pi
+
+
+@dataclass(frozen=True)
+class MarginsBatch:
+    """One entry a member, arrays of the batch's shape. Where a `has_` array is False the numbers beside it are 0 and mean nothing."""
+
+    stable: Array
+    """bool; by Nyquist's criterion."""
+    loop_gain: Array
+    """|L| at the deciding phase crossover; 0 where there is none."""
+    has_phase_crossover: Array
+    phase_crossover_frequency: Array
+    """rad/s."""
+    has_gain_crossover: Array
+    phase_margin_rad: Array
+    """The smallest lag missing to the boundary of a stable member; of an unstable one the negative lead at its last gain crossover."""
+    delay_margin_s: Array
+    """The same as a delay."""
+    has_oscillation: Array
+    growth_rate_per_s: Array
+    """Of the dominant oscillation; negative while it dies."""
+    cycle_length_s: Array
+    """Period of the dominant oscillation."""
+    careful: int
+    """How many members had to be done one by one."""
+
+
+def margins_batch(form: DriveForm, rest: Rest, opened: OpenLoop | None = None, growth: bool = True) -> MarginsBatch:
+    """Margins and dominant oscillation of every member of a batch.
+
+    Parameters
+    ----------
+    form : DriveForm
+        A batch, with any number of trailing axes.
+    rest : Rest
+    opened : OpenLoop, optional
+        The open loop of the same form and rest, if the caller has it already.
+    growth : bool
+        False leaves the dominant root out: margins and stability alone, in half the time.
+
+    Notes
+    -----
+    The dominant oscillation is the root that belongs to the deciding phase crossover, as in `roots`. Where several pairs are unstable
+    it is in rare cases not the rightmost; its sign is always right, because it is checked against Nyquist's count.
+    """
+    opened = open_loop(form, rest) if opened is None else opened
+    shape = opened.batch
+    members = math.prod(shape)
+    flat = OpenLoop(
+        opened.coefficients.reshape(opened.coefficients.shape[:2] + (members,)),
+        tuple(np.broadcast_to(np.asarray(delay, dtype=float), shape).reshape(members) for delay in opened.delays),
+        tuple((np.broadcast_to(p, shape).reshape(members), np.broadcast_to(q, shape).reshape(members)) for p, q in opened.quadratics),
+    )
+    columns = [np.zeros(members, dtype=bool if index in (0, 2, 4, 7) else float) for index in range(10)]
+    careful = 0
+    end = _search_end(flat)
+    # Members that need as many frequencies as each other go together, so that one odd member does not slow them all.
+    order = np.argsort(end * flat.longest_delay, kind="stable") if members else np.empty(0, dtype=int)
+    for start in range(0, members, _CHUNK):
+        which = order[start : start + _CHUNK]
+        part, redone = _chunk(flat.member(which), end[which], growth)
+        for column, values in zip(columns, part, strict=True):
+            column[which] = values
+        careful += redone
+    return MarginsBatch(*(column.reshape(shape) for column in columns), careful=careful)
+
+
+def _chunk(opened: OpenLoop, end: Array, growth: bool, density: float = 1.0) -> tuple[list[Array], int]:
+    members = opened.coefficients.shape[2]
+    feedback = opened.has_feedback
+    frequency = _frequencies(opened, end, density)
+    response = opened.response(frequency)
+    if density < 64.0:
+        coarse = _coarse(response)
+        if coarse.size:
+            return _patched(opened, end, growth, density, coarse)
+
+    who, bracket, direction = _phase_brackets(frequency, response)
+    w, gain = _close_phase(opened, who, *bracket)
+    unstable = _count_unstable(opened, who, gain, direction, response[0])
+    stable = unstable <= 0
+
+    # The deciding crossover: of an unstable member the largest gain, of a stable one the largest under 1.
+    rank = np.where(stable[who] & (gain > 1.0), -1.0, gain)
+    order = np.lexsort((rank, who))
+    last = np.flatnonzero(np.diff(who[order], append=members) != 0) if who.size else np.empty(0, dtype=int)
+    chosen = order[last] if who.size else np.empty(0, dtype=int)
+    chosen = chosen[rank[chosen] >= 0.0]
+    has_phase = np.zeros(members, dtype=bool)
+    loop_gain, crossover = np.zeros(members), np.zeros(members)
+    has_phase[who[chosen]] = True
+    loop_gain[who[chosen]], crossover[who[chosen]] = gain[chosen], w[chosen]
+    has_phase &= feedback
+
+    has_gain, phase_margin, delay_margin = _lags(opened, frequency, response, stable)
+    columns = [stable, loop_gain, has_phase, crossover, has_gain & feedback, phase_margin, delay_margin]
+    if not growth:
+        return [*columns, np.zeros(members, dtype=bool), np.zeros(members), np.zeros(members)], 0
+    has_root, root, redone = _dominant(opened, has_phase, crossover, stable)
+    period = np.divide(_TURN, root.imag, out=np.zeros(members), where=has_root)
+    return [*columns, has_root, np.where(has_root, root.real, 0.0), period], redone
+
+
+def _search_end(opened: OpenLoop) -> Array:
+    """Per member, rad/s: past the second phase crossover that the shortest delay makes, and past the last unit gain."""
+    end = 2.6 * math.pi / opened.shortest_delay
+    beyond = np.geomspace(1.0, 1e4, 16)[:, None]
+    far = np.flatnonzero(opened.envelope(end[None])[0] >= 1.0)
+    if far.size:
+        above = opened.member(far).envelope(beyond * end[far]) >= 1.0
+        last = np.where(above.any(axis=0), 16 - np.argmax(above[::-1], axis=0), 0)
+        end = end.copy()
+        end[far] *= beyond[np.minimum(last, 15), 0]
+    return end
+
+
+def _frequencies(opened: OpenLoop, end: Array, density: float) -> Array:
+    """Even steps to the end of the search, a few far below for slow stores, some about a resonance; (n_frequencies, n_members)."""
+    wanted = float(np.max(end * opened.longest_delay)) * _STEPS_PER_HALF_TURN / math.pi
+    count = int(min(max(wanted, _LEAST_FREQUENCIES) * density, _MOST_FREQUENCIES * density))
+    even = np.arange(1, count + 1) / count
+    share = np.concatenate([even[0] * np.geomspace(1e-4, 0.6, int(10 * density**0.5)), even])
+    frequency = share[:, None] * end
+    near = [centre + width * _ABOUT_RESONANCE for centre, width in opened.resonances() if np.any(centre > 0.0)]
+    if near:
+        frequency = np.concatenate([frequency, *(np.where(points > 0.0, points, frequency[:1]) for points in near)])
+        frequency.sort(axis=0)
+    return frequency
+
+
+def _coarse(response: np.ndarray) -> Array:
+    """Members whose phase turns so far between neighbouring frequencies that a crossing could be missed."""
+    turned = response[1:] * np.conj(response[:-1])
+    return np.flatnonzero(np.any((turned.real < 0.0) & (np.abs(turned.imag) < -2.0 * turned.real), axis=0))
+
+
+def _patched(opened: OpenLoop, end: Array, growth: bool, density: float, coarse: Array) -> tuple[list[Array], int]:
+    """The chunk with the members listed in `coarse` done on a finer grid and the others as they are."""
+    fine = np.ones(end.size, dtype=bool)
+    fine[coarse] = False
+    parts = [(fine, _chunk(opened.member(fine), end[fine], growth, density))] if fine.any() else []
+    parts.append((~fine, _chunk(opened.member(~fine), end[~fine], growth, 4.0 * density)))
+    columns = [np.zeros(end.size, dtype=column.dtype) for column in parts[0][1][0]]
+    for which, (values, _) in parts:
+        for column, part in zip(columns, values, strict=True):
+            column[which] = part
+    return columns, sum(redone for _, (_, redone) in parts)
+
+
+def _phase_brackets(frequency: Array, response: np.ndarray) -> tuple[Array, tuple[Array, ...], Array]:
+    """Member, (guess, low, high, guessed gain, whether it may decide) and direction of every crossing of the negative real axis."""
+    upper = response.imag > 0.0
+    row, who = np.nonzero(upper[1:] != upper[:-1])
+    left, right = response[row, who], response[row + 1, who]
+    share = left.imag / (left.imag - right.imag)
+    negative = left.real + share * (right.real - left.real) < 0.0
+    row, who, share, left, right = row[negative], who[negative], share[negative], left[negative], right[negative]
+    low, high = frequency[row, who], frequency[row + 1, who]
+    ends = np.abs(left), np.abs(right)
+    least, most = 0.8 * np.minimum(*ends), 1.25 * np.maximum(*ends)
+    # A crossing clearly under another on the same side of 1 cannot decide, and which side it is on is clear as well.
+    side = np.where(most < 1.0, 0, np.where(least > 1.0, 1, 2))
+    best = np.zeros((3, frequency.shape[1]))
+    np.maximum.at(best, (side, who), least)
+    decides = (side == 2) | (most >= best[side, who])
+    return who, (low + share * (high - low), low, high, np.sqrt(ends[0] * ends[1]), decides), np.where(left.imag > 0.0, -1, 1)
+
+
+def _close_phase(opened: OpenLoop, who: Array, guess: Array, low: Array, high: Array, gain: Array, decides: Array) -> tuple[Array, Array]:
+    if not who.size:
+        return guess, gain
+    few, w, low, high = opened.member(who[decides]), guess[decides], low[decides], high[decides]
+    for _ in range(8):
+        value, slope = few.with_slope(1j * w)
+        step = -np.angle(-value) / (slope / value).real
+        w, done = _inside(w, step, low, high)
+        if done:
+            break
+    guess, gain = guess.copy(), gain.copy()
+    guess[decides] = w
+    gain[decides] = np.abs(few.response(w[None])[0])
+    return guess, gain
+
+
+def _inside(w: Array, step: Array, low: Array, high: Array) -> tuple[Array, bool]:
+    """One Newton step kept in its bracket, and whether every step was so small that its square is rounding."""
+    new = w + step
+    leaves = (new < low) | (new > high)
+    if leaves.any():
+        new = np.where(leaves, 0.5 * (w + np.where(step > 0.0, high, low)), new)
+        return new, False
+    return new, bool(np.all(np.abs(step) <= 2e-8 * w))
+
+
+def _count_unstable(opened: OpenLoop, who: Array, gain: Array, direction: Array, first: np.ndarray) -> Array:
+    members = opened.coefficients.shape[2]
+    unstable = 2 * np.bincount(who, weights=np.where(gain > 1.0, direction, 0), minlength=members).astype(int)
+    at_zero = opened.coefficients[-1]
+    total = np.sum(at_zero[1:], axis=0)
+    positive = (at_zero[0] != 0.0) & (total * np.sign(at_zero[0]) < -np.abs(at_zero[0]))
+    unstable += np.where(positive, np.where(first.imag > 0.0, 1, -1), 0)
+    return unstable + _open_loop_unstable(opened)
+
+
+def _open_loop_unstable(opened: OpenLoop) -> Array:
+    """Poles of L with positive real part, by Routh's table where any coefficient of D is not positive."""
+    denominator = opened.coefficients[:, 0]
+    count = np.zeros(denominator.shape[1], dtype=int)
+    suspect = np.flatnonzero(~_routh_stable(denominator))
+    for index in suspect.tolist():
+        poles = np.roots(denominator[:, index])
+        count[index] = int(np.sum(poles.real > 1e-13 * np.max(np.abs(poles), initial=0.0)))
+    return count
+
+
+def _routh_stable(denominator: Array) -> Array:
+    degree = denominator.shape[0] - 1
+    positive = np.all(denominator > 0.0, axis=0)
+    if degree <= 2:
+        return positive
+    upper, lower = denominator[0::2], denominator[1::2]
+    with np.errstate(divide="ignore", invalid="ignore"):
+        for _ in range(degree - 1):
+            padded = np.concatenate([lower[1:], np.zeros((max(0, len(upper) - len(lower)), *lower.shape[1:]))])
+            following = upper[1:] - upper[0] / lower[0] * padded[: len(upper) - 1]
+            upper, lower = lower, following
+            positive &= lower[0] > 0.0
+    return positive
+
+
+def _lags(opened: OpenLoop, frequency: Array, response: np.ndarray, stable: Array) -> tuple[Array, Array, Array]:
+    members = opened.coefficients.shape[2]
+    size = response.real**2 + response.imag**2
+    above = size > 1.0
+    row, who = np.nonzero(above[1:] != above[:-1])
+    has = np.zeros(members, dtype=bool)
+    phase_margin, delay_margin = np.zeros(members), np.zeros(members)
+    if not who.size:
+        return has, phase_margin, delay_margin
+    has[who] = True
+    few = opened.member(who)
+    low, high = frequency[row, who], frequency[row + 1, who]
+    falls = above[row, who]
+    level = np.log(size[row, who])
+    share = level / (level - np.log(size[row + 1, who]))
+    w = low * (high / low) ** share
+    for _ in range(8):
+        value, slope = few.with_slope(1j * w)
+        w, done = _inside(w, np.log(np.abs(value)) / (slope / value).imag, low, high)
+        if done:
+            break
+    lag = np.angle(-few.response(w[None])[0])
+    ahead = np.mod(lag, _TURN)
+    calm = stable[who]
+    # Of an unstable member only crossings with falling gain can give the roots back.
+    back = np.where(falls, np.mod(-lag, _TURN), 0.0)
+    for target, missing in ((phase_margin, 1.0), (delay_margin, w)):
+        smallest = np.full(members, np.inf)
+        np.minimum.at(smallest, who[calm], (ahead / missing)[calm])
+        largest = np.zeros(members)
+        np.maximum.at(largest, who[~calm], (back / missing)[~calm])
+        target[:] = np.where(stable, np.where(np.isfinite(smallest), smallest, 0.0), -largest)
+    return has, phase_margin, delay_margin
+
+
+def _dominant(opened: OpenLoop, has_phase: Array, crossover: Array, stable: Array) -> tuple[Array, np.ndarray, int]:
+    members = crossover.size
+    root = np.zeros(members, dtype=complex)
+    which = np.flatnonzero(has_phase)
+    settled = np.zeros(members, dtype=bool)
+    active, s = which, 1j * crossover[which]
+    few = opened.member(active)
+    for _ in range(12):
+        with np.errstate(all="ignore"):
+            value, slope = few.with_slope(s)
+            logarithm = np.log(-value)
+            step = logarithm * value / slope
+            length = np.abs(step)
+            limit = 0.4 * np.abs(s)
+            step = np.where(length > limit, step * (limit / np.maximum(length, 1e-300)), step)
+            s = s - step
+        done = length <= 1e-8 * np.abs(s)
+        finished = done & (s.imag > 1e-8 * np.abs(s)) & np.isfinite(s.real)
+        root[active[finished]] = s[finished]
+        settled[active[finished]] = True
+        keep = ~done & np.isfinite(s.real)
+        if not keep.any():
+            break
+        if keep.sum() < 0.7 * keep.size:
+            active, s = active[keep], s[keep]
+            few = few.member(keep)
+    residue = settled & ((root.real > 0.0) == stable) & (np.abs(root.real) > 1e-9 * np.abs(root))
+    again = np.flatnonzero((has_phase & ~settled) | residue)
+    has_root = settled & ~residue
+    for index in again.tolist():
+        found = _carefully(opened.member(index), bool(stable[index]), 1j * float(crossover[index]))
+        has_root[index] = found is not None
+        root[index] = found if found is not None else 0.0
+    return has_root, root, int(again.size)
+
+
+def _carefully(opened: OpenLoop, stable: bool, seed: complex) -> complex | None:
+    """The rightmost oscillatory root of one member from a fan of seeds about its crossover."""
+    from lagscape.engine.roots import polish_root
+
+    single = OpenLoop(opened.coefficients, tuple(float(delay) for delay in opened.delays))
+    found = []
+    for share in (1.0, 0.5, 1.6, 0.25, 2.5):
+        for tilt in (0.0, -0.3, -0.8, 0.3, -2.0):
+            root, residual = polish_root(single, seed * share + tilt * abs(seed))
+            if residual < 1e-12 and abs(root.imag) > 1e-8 * abs(root):
+                found.append(complex(root.real, abs(root.imag)))
+    if not found:
+        return None
+    best = max(found, key=lambda root: root.real)
+    return best if (best.real <= 0.0) == stable or abs(best.real) <= 1e-9 * abs(best) else None
