@@ -11,19 +11,18 @@ sentence in the column `error`; the exit code is 2 only where no row could be.
 from __future__ import annotations
 
 import argparse
-import dataclasses
 import json
 import math
 import os
 import sys
-from collections.abc import Mapping, Sequence
-from enum import Enum
+from collections.abc import Sequence
 from typing import Any, NoReturn
 
 from lagscape.errors import CaseFormatError, InvalidInputError, RecordingError
+from lagscape.handover.plain_values import plain
 from lagscape.version import VERSION
 
-__all__ = ["main", "plain"]
+__all__ = ["CAUTION", "main"]
 
 CAUTION = "Decision support for qualified staff. Not a medical device."
 
@@ -50,23 +49,6 @@ def main(arguments: Sequence[str] | None = None) -> int:
         return _failed("The file is not UTF-8 text.")
     except OSError as error:
         return _failed(f"{error.filename or 'The file'} cannot be read: {error.strerror or error}.")
-
-
-def plain(value: Any) -> Any:
-    """A result as what JSON knows: dataclasses as objects, arrays as lists, what is not finite as null."""
-    if isinstance(value, Enum):
-        return value.value
-    if dataclasses.is_dataclass(value) and not isinstance(value, type):
-        return {item.name: plain(getattr(value, item.name)) for item in dataclasses.fields(value)}
-    if isinstance(value, Mapping):
-        return {str(key): plain(item) for key, item in value.items()}
-    if isinstance(value, (list, tuple)):
-        return [plain(item) for item in value]
-    if hasattr(value, "tolist"):
-        return plain(value.tolist())
-    if isinstance(value, float) and not math.isfinite(value):
-        return None
-    return value
 
 
 class _Parser(argparse.ArgumentParser):
@@ -111,9 +93,21 @@ def _analyse(options: argparse.Namespace) -> int:
 
 
 def _measure(options: argparse.Namespace) -> int:
-    from lagscape.recordings import measuring
+    from lagscape.recordings.reading import read_recording
 
-    _print_json(plain(measuring(options)))
+    recording = read_recording(options.file, sampling_frequency_hz=options.sampling_frequency)
+    window = tuple(options.window) if options.window else None
+    notes = tuple(str(note) for note in recording.notes)
+    if options.kind == "tremor":
+        from lagscape.handover.measurement import tremor_document
+        from lagscape.recordings.tremor import measure_tremor
+
+        _print_json(tremor_document(measure_tremor(recording, options.signal, window=window), notes))
+    else:
+        from lagscape.handover.measurement import breathing_document
+        from lagscape.recordings.breathing import measure_breathing
+
+        _print_json(breathing_document(measure_breathing(recording, options.signal, window=window), notes))
     return 0
 
 

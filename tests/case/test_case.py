@@ -9,7 +9,6 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from case.any_case import any_case
 from lagscape.case.case import (
     DEFAULT_DISTURBANCES,
     MOST_LEVERS,
@@ -24,6 +23,7 @@ from lagscape.case.case import (
 from lagscape.case.parameters import Basis
 from lagscape.errors import InvalidInputError
 from lagscape.loops.register import LOOPS
+from support.any_case import any_case
 
 EVERY_START = [(kind, item.name) for kind, loop in LOOPS.items() for item in loop.starting_cases]
 

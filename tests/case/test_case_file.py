@@ -7,10 +7,10 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from case.any_case import any_case
 from lagscape.case.case import Case, LeverSetting
 from lagscape.case.case_file import LARGEST_FILE_BYTES, case_from_json, case_to_document, case_to_json, read_case_file, size_key
 from lagscape.errors import CaseFormatError, InvalidInputError
+from support.any_case import any_case
 
 GOOD = (
     Case.from_starting_case("healthy-asleep").with_number("lung_volume_l", 2.3, "measured", 0.1).with_levers(LeverSetting("co2_mmhg", 1.0))

@@ -9,12 +9,12 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from case.any_case import any_case, longest_case
 from lagscape.case.case import MOST_LEVERS, Case, LeverSetting
 from lagscape.case.case_file import LARGEST_FILE_BYTES, case_to_document
 from lagscape.case.case_link import LINK_PREFIX, LONGEST_LINK, case_from_link, case_to_link
 from lagscape.errors import CaseFormatError, InvalidInputError
 from lagscape.loops.register import LOOPS
+from support.any_case import any_case, longest_case
 
 LINK = Case.from_starting_case("heart-failure-periodic").to_link()
 

@@ -8,12 +8,12 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from case.any_case import any_case
 from lagscape.case.case import Case
 from lagscape.case.case_file import case_from_document, case_to_document
 from lagscape.case.schema import case_schema, published_schema, schema_text
 from lagscape.errors import CaseFormatError
 from lagscape.loops.register import LOOPS
+from support.any_case import any_case
 
 VALIDATOR = jsonschema.Draft202012Validator(published_schema())
 
