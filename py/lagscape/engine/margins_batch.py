@@ -73,7 +73,7 @@ def margins_batch(form: DriveForm, rest: Rest, opened: OpenLoop | None = None, g
     shape = opened.batch
     members = math.prod(shape)
     flat = OpenLoop(
-        opened.coefficients.reshape(opened.coefficients.shape[:2] + (members,)),
+        opened.coefficients.reshape((*opened.coefficients.shape[:2], members)),
         tuple(np.broadcast_to(np.asarray(delay, dtype=float), shape).reshape(members) for delay in opened.delays),
         tuple((np.broadcast_to(p, shape).reshape(members), np.broadcast_to(q, shape).reshape(members)) for p, q in opened.quadratics),
     )

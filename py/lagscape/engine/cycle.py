@@ -1,0 +1,275 @@
+"""The limit cycle of one loop that hunts: how large, how long, how much of it in silence.
+
+Harmonic balance (see `harmonic`) from one of three starts: the cycle of the last moment, while a case is dragged; the describing
+function, which balances the first harmonic alone over a range of amplitudes; and, where that fails, the branch of cycles followed
+from the boundary, with the drive's excursions scaled so that the loop stands on the boundary and the scale brought back to 1.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from enum import StrEnum
+from typing import Any
+
+import numpy as np
+
+from lagscape.engine.harmonic import Balance, Harmonics, prepare, solve
+from lagscape.engine.margins import Margins, margins
+from lagscape.loops.protocol import Array, DriveForm, Rest
+
+__all__ = ["Cycle", "CycleStatus", "limit_cycle"]
+
+_ORDER = 16
+_FIRST_ORDER = 6
+_DRAWN = 256
+_SMALLEST = 1e-7
+"""A solution whose first harmonic is under this share of the guess's has fallen back to rest."""
+
+
+class CycleStatus(StrEnum):
+    """What the search for a cycle came to."""
+
+    CONVERGED = "converged"
+    SETTLES = "settles"
+    """The rest is stable; no cycle was sought."""
+    NOT_FOUND = "not_found"
+    """The rest is unstable and no cycle was found."""
+
+
+@dataclass(frozen=True)
+class Cycle:
+    """One period of the limit cycle. Every figure is None, and every array empty, where the status is not CONVERGED."""
+
+    status: CycleStatus
+    period_s: float | None = None
+    output_amplitude: float | None = None
+    """Peak to trough of the controlled signal, in its unit."""
+    output_mean: float | None = None
+    state_amplitudes: Array | None = None
+    """Peak to trough of each state, shape (n_states,)."""
+    state_means: Array | None = None
+    silent_fraction: float | None = None
+    """Share of the period with the controlled signal at its silent level (apnoea)."""
+    duty_ratio: float | None = None
+    """1 - silent_fraction."""
+    times: Array | None = None
+    """s, shape (n_times,), from 0 to one period, both ends included."""
+    states: Array | None = None
+    """Shape (n_times, n_states)."""
+    output: Array | None = None
+    """Shape (n_times,)."""
+    residual: float | None = None
+    """Imbalance left in the harmonics kept, relative to their norm."""
+    last_harmonic: float | None = None
+    """Size of the last harmonic kept relative to the first: what truncation leaves out is of this order."""
+    harmonics: Harmonics | None = None
+    """For the next warm start, and for Floquet multipliers."""
+
+
+def limit_cycle(
+    form: DriveForm,
+    rest: Rest,
+    start: Cycle | None = None,
+    order: int = _ORDER,
+    known: Margins | None = None,
+) -> Cycle:
+    """The limit cycle of one loop.
+
+    Parameters
+    ----------
+    form : DriveForm
+        One loop, not a batch.
+    rest : Rest
+    start : Cycle, optional
+        A converged cycle of a similar loop (the last one while dragging): the quickest start.
+    order : int
+        Harmonics kept. 16 gives about 1e-3 of the amplitude with a clipped drive and 1e-5 of the period; 64 about 2e-5.
+    known : Margins, optional
+        Margins of the same form and rest, if the caller has them already.
+
+    Notes
+    -----
+    Harmonic balance does not say whether the cycle attracts; `floquet` does.
+    """
+    known = margins(form, rest) if known is None else known
+    if known.stable:
+        return Cycle(CycleStatus.SETTLES)
+    balance = prepare(form, rest)
+    if start is not None and start.harmonics is not None:
+        found = _settle(balance, start.harmonics.resized(order))
+        if found is not None:
+            return describe_cycle(form, balance, *found)
+    if known.phase_crossover_frequency is None:
+        return Cycle(CycleStatus.NOT_FOUND)
+    found = _from_describing_function(form, rest, balance, known.phase_crossover_frequency, order)
+    if found is None:
+        found = _from_boundary(balance, known, order)
+    return Cycle(CycleStatus.NOT_FOUND) if found is None else describe_cycle(form, balance, *found)
+
+
+def _settle(balance: Balance, guess: Harmonics, most: int = 12) -> tuple[Harmonics, float] | None:
+    solved = solve(balance, guess, most=most)
+    if not solved.converged[0] or abs(solved.harmonics.force[0, 0, 1]) < _SMALLEST * abs(guess.force[0, 0, 1]):
+        return None
+    return solved.harmonics, float(solved.residual[0])
+
+
+def first_harmonic_gain(balance: Balance, omega: float, amplitudes: Array) -> np.ndarray:
+    """Complex gain of the first harmonic once round the loop, for w = 2 a cos(omega t) of each amplitude a; shape of `amplitudes`.
+
+    `balance` holds one loop with as many copies as there are amplitudes.
+    """
+    transfer, factor, _, _ = balance.transfers(np.full(balance.size, omega), 1)
+    force = np.zeros((balance.size, len(balance.rows), 2), dtype=complex)
+    force[:, 0, 1] = amplitudes
+    arguments = np.einsum("barK,brK->baK", transfer, force)
+    level = balance.level[:, 0, None] + np.fft.irfft(np.einsum("brK,brK->bK", factor[:, 0], force), 32, axis=1) * 32
+    raw, _ = balance.in_time(arguments, 32)
+    product = (balance.gain[:, None] * (raw - balance.output_rest[:, None]) + balance.shift[:, None]) * level
+    return np.fft.fft(product, axis=1)[:, 1] / 32 / amplitudes
+
+
+def _from_describing_function(
+    form: DriveForm, rest: Rest, balance: Balance, omega: float, order: int
+) -> tuple[Harmonics, float] | None:
+    unit = float(np.max(np.abs(balance.level[0]))) * max(abs(float(balance.output_rest[0])), 1e-3)
+    amplitudes = unit * np.geomspace(1e-5, 1e4, 73)
+    with np.errstate(all="ignore"):
+        gain = first_harmonic_gain(prepare(form, rest, copies=73), omega, amplitudes).real
+    passes = np.flatnonzero((gain[:-1] >= 1.0) & (gain[1:] < 1.0))
+    if not passes.size:
+        return None
+    amplitude = amplitudes[passes[0]]
+    factors = np.array([1.0, 0.6, 1.6, 0.3, 2.6])
+    several = prepare(form, rest, copies=factors.size)
+    force = np.zeros((factors.size, len(balance.rows), _FIRST_ORDER + 1), dtype=complex)
+    force[:, 0, 1] = amplitude * factors
+    solved = solve(several, Harmonics(force, np.full(factors.size, omega)), most=20, tolerance=1e-6)
+    alive = solved.converged & (np.abs(solved.harmonics.force[:, 0, 1]) > 1e-3 * amplitude)
+    for index in np.flatnonzero(alive).tolist():
+        guess = solved.harmonics.member(slice(index, index + 1)).resized(order)
+        found = _settle(balance, _rotated(guess), most=20)
+        if found is not None:
+            return found
+    return None
+
+
+def _rotated(harmonics: Harmonics) -> Harmonics:
+    """The same motion started where the first harmonic is real and positive."""
+    angle = np.angle(harmonics.force[:, 0, 1])
+    turn = np.exp(-1j * angle[:, None, None] * np.arange(harmonics.order + 1))
+    return Harmonics(harmonics.force * turn, harmonics.omega)
+
+
+def _from_boundary(balance: Balance, known: Margins, order: int) -> tuple[Harmonics, float] | None:
+    for point in follow_branch(balance, known, most=80):
+        previous, following = point
+        if previous.gain < 1.0 <= following.gain:
+            share = (1.0 - previous.gain) / (following.gain - previous.gain)
+            force = previous.harmonics.force + share * (following.harmonics.force - previous.harmonics.force)
+            omega = previous.harmonics.omega + share * (following.harmonics.omega - previous.harmonics.omega)
+            return _settle(balance, Harmonics(force, omega).resized(order), most=20)
+    return None
+
+
+@dataclass(frozen=True)
+class BranchPoint:
+    """One cycle on the branch that leaves the boundary."""
+
+    gain: float
+    """kappa: the scale on the drive's excursions at which this is a cycle."""
+    amplitude: float
+    """|w_1| of the first row."""
+    harmonics: Harmonics
+
+
+def follow_branch(balance: Balance, known: Margins, order: int = 8, most: int = 60, growth: float = 1.25, first: float = 1e-3) -> Any:
+    """Neighbouring pairs of `BranchPoint` along the branch of cycles from the boundary, by growing amplitude; ends where Newton fails.
+
+    `first` is the first amplitude as a share of the largest linear one, |m0| |v0| (or |m0| where v0 is 0).
+    """
+    omega, gain = known.phase_crossover_frequency, known.loop_gain
+    if omega is None or not gain:
+        return
+    scale = float(np.max(np.abs(balance.level[0]))) * (abs(float(balance.output_rest[0])) or 1.0)
+    force = np.zeros((1, len(balance.rows), order + 1), dtype=complex)
+    force[0, 0, 1] = first * scale
+    guess, kappa = Harmonics(force, np.array([omega])), 1.0 / gain
+    previous: BranchPoint | None = None
+    for _ in range(most):
+        solved = solve(balance.with_gain(kappa), guess, free_gain=True, most=15)
+        if not solved.converged[0] or solved.gain[0] <= 0.0:
+            return
+        amplitude = float(solved.harmonics.force[0, 0, 1].real)
+        point = BranchPoint(float(solved.gain[0]), amplitude, solved.harmonics)
+        if previous is not None:
+            yield previous, point
+            # Extrapolate in the logarithm of the amplitude: harmonics grow as its powers at first, then evenly.
+            ahead = point.harmonics.force + (point.harmonics.force - previous.harmonics.force) * growth
+            ahead[0, 0, 1] = point.harmonics.force[0, 0, 1] * growth
+            guess = Harmonics(ahead, 2.0 * point.harmonics.omega - previous.harmonics.omega)
+        else:
+            guess = Harmonics(point.harmonics.force * growth, point.harmonics.omega)
+        previous, kappa = point, point.gain
+
+
+def describe_cycle(form: DriveForm, balance: Balance, harmonics: Harmonics, residual: float) -> Cycle:
+    """The figures of a solved cycle."""
+    n = form.n_plant
+    fine = 1024
+    plant, control = balance._plant_control(harmonics)
+    spectrum = np.concatenate([plant, control], axis=1)[0]
+    rest = balance.state_rest[0]
+    states = np.fft.irfft(spectrum, fine, axis=1) * fine + rest[:, None]
+    s = 1j * harmonics.omega[:, None] * np.arange(harmonics.order + 1)
+    sensed = np.fft.irfft(balance._delayed(s, plant)[0], fine, axis=1) * fine + balance.sensed_rest[0][:, None]
+    output = np.asarray(form.drive.value(sensed, states[n:]))
+    silent = _silent_share(form, sensed, states[n:], output)
+    period = 2.0 * math.pi / float(harmonics.omega[0])
+    every = np.append(np.arange(0, fine, fine // _DRAWN), 0)
+    both = np.concatenate([states, output[None]])
+    amplitude = _extreme(both) + _extreme(-both)
+    force = np.abs(harmonics.force[0])
+    return Cycle(
+        status=CycleStatus.CONVERGED,
+        period_s=period,
+        output_amplitude=float(amplitude[-1]),
+        output_mean=float(np.mean(output)),
+        state_amplitudes=amplitude[:-1],
+        state_means=spectrum[:, 0].real + rest,
+        silent_fraction=silent,
+        duty_ratio=1.0 - silent,
+        times=np.linspace(0.0, period, _DRAWN + 1),
+        states=states[:, every].T,
+        output=output[every],
+        residual=residual,
+        last_harmonic=float(np.max(force[:, -1]) / np.max(force[:, 1])),
+        harmonics=harmonics,
+    )
+
+
+def _extreme(curves: Array) -> Array:
+    """Maximum of each periodic curve, shape (n, samples), by the parabola through the three highest neighbours."""
+    index = np.argmax(curves, axis=1)
+    row = np.arange(curves.shape[0])
+    before, top, after = curves[row, index - 1], curves[row, index], curves[row, (index + 1) % curves.shape[1]]
+    bend = before - 2.0 * top + after
+    with np.errstate(divide="ignore", invalid="ignore"):
+        rise = -((after - before) ** 2) / (8.0 * bend)
+    return top + np.where(bend < 0.0, rise, 0.0)
+
+
+def _silent_share(form: DriveForm, sensed: Array, control: Array, output: Array) -> float:
+    level = float(form.silent_level)
+    if not math.isfinite(level):
+        return 0.0
+    # Where the law has a corner its smooth switch crosses zero cleanly; the clipped signal itself only touches.
+    height = np.asarray(form.drive.switch(sensed, control)) if form.drive.has_kink and level == 0.0 else output - level
+    following = np.roll(height, -1)
+    here = height <= 0.0
+    crosses = here != (following <= 0.0)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        share = np.abs(height) / (np.abs(height) + np.abs(following))
+    part = np.where(crosses, np.where(here, share, 1.0 - share), here.astype(float))
+    return float(np.mean(part))

@@ -1,0 +1,371 @@
+"""Harmonic balance of delayed loops: periodic solutions as Fourier coefficients, one loop or many at once.
+
+Written about the rest, with the plant's linear part M = A + v1 N (v1 = v0 unless that makes M nearly singular),
+
+    xi' = M xi + W w(t),     w_i = v m_i(x) - v0 m_i(x0) - v1 mu_i,     m_i(x) = N_i x + b_i,  mu_i = N_i xi
+
+where i runs over the plant rows that the controlled signal enters. Everything but w is linear and constant in time, so plant states,
+delayed signals and controller states are eliminated exactly: at each harmonic k the drive's arguments are T_a(i k omega) w_k and mu
+is T_m(i k omega) w_k. The unknowns are the harmonics 0..H of w and omega; v m is formed in time on 8H samples or more and projected
+back. The Jacobian is analytic: products with a known signal g(t) are Toeplitz and Hankel matrices of the transform of g.
+
+Batch axis first here, because that is where numpy.linalg wants it. Sizes: B members, r rows of w, H harmonics, S samples.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from functools import lru_cache
+from typing import Any
+
+import numpy as np
+
+from lagscape.loops.protocol import Array, Drive, DriveForm, Rest
+
+__all__ = ["Balance", "Harmonics", "Solved", "prepare", "samples_for", "solve"]
+
+_SMALLEST_POLE = 1e-7
+"""M counts as singular if its smallest singular value is under this share of its largest: then the loop has an integrator."""
+
+
+@dataclass(frozen=True)
+class Harmonics:
+    """One periodic solution (or guess) a member: w_k, shape (B, r, H + 1) complex, w(t) = w_0 + 2 Re sum w_k e^(i k omega t)."""
+
+    force: np.ndarray
+    omega: Array
+    """rad/s, shape (B,)."""
+
+    @property
+    def order(self) -> int:
+        return self.force.shape[2] - 1
+
+    def resized(self, order: int) -> Harmonics:
+        """Cut or filled with zeros to `order` harmonics."""
+        force = np.zeros((*self.force.shape[:2], order + 1), dtype=complex)
+        keep = min(order, self.order) + 1
+        force[:, :, :keep] = self.force[:, :, :keep]
+        return Harmonics(force, self.omega)
+
+    def member(self, which: Any) -> Harmonics:
+        return Harmonics(self.force[which], self.omega[which])
+
+
+@lru_cache(maxsize=16)
+def _index(order: int, samples: int) -> tuple[Array, Array]:
+    j, k = np.arange(order + 1)[:, None], np.arange(order + 1)[None, :]
+    return (j - k) % samples, (j + k) % samples
+
+
+def _leading(values: Any, axes: int, batch: tuple[int, ...]) -> Array:
+    """Batch axes from the back to the front and flattened: shape (B, ...)."""
+    array = np.asarray(values, dtype=float)
+    shape = array.shape[:axes]
+    size = int(np.prod(batch, dtype=int))
+    if array.ndim == axes:
+        return np.broadcast_to(array, (size, *shape))
+    full = np.broadcast_to(array, (*shape, *batch)).reshape(*shape, size)
+    return np.moveaxis(full, -1, 0)
+
+
+@dataclass(frozen=True)
+class Balance:
+    """The balance equations of one batch of loops, ready to be solved. Made by `prepare`."""
+
+    plant: Array
+    """M, (B, n, n)."""
+    rows: tuple[int, ...]
+    """Plant rows that the controlled signal enters: W is these columns of the unit matrix."""
+    by_output: Array
+    """N_i of those rows, (B, r, n)."""
+    level: Array
+    """m_i at rest, (B, r)."""
+    shift: Array
+    """v0 - v1, (B,)."""
+    sensed_rows: Array
+    """h, (n_sensed, n)."""
+    delays: Array
+    """tau_j, (B, n_sensed)."""
+    control: Array
+    """F, (B, m, m)."""
+    control_by_sensed: Array
+    """G, (B, m, n_sensed)."""
+    drive: Drive
+    members: tuple[int, ...] | None
+    """The form's batch shape, or None for one loop."""
+    sensed_rest: Array
+    """(B, n_sensed)."""
+    state_rest: Array
+    """(B, n + m)."""
+    output_rest: Array
+    """v0, (B,)."""
+    gain: Array
+    """kappa, (B,): v is v0 + kappa (drive - v0). 1 for the loop itself; 1 / loop_gain puts it on the boundary."""
+
+    @property
+    def size(self) -> int:
+        return self.plant.shape[0]
+
+    def with_gain(self, gain: Array) -> Balance:
+        return replace(self, gain=np.broadcast_to(np.asarray(gain, dtype=float), (self.size,)))
+
+    def states(self, harmonics: Harmonics) -> np.ndarray:
+        """Harmonics of the deviations of plant and controller states, (B, n + m, H + 1) complex."""
+        plant, control = self._plant_control(harmonics)
+        return np.concatenate([plant, control], axis=1)
+
+    def _plant_control(self, harmonics: Harmonics) -> tuple[np.ndarray, np.ndarray]:
+        s = 1j * harmonics.omega[:, None] * np.arange(harmonics.order + 1)
+        plant = np.einsum("bkni,bik->bnk", self._plant_answer(s), harmonics.force)
+        delayed = self._delayed(s, plant)
+        if not self.control.shape[1]:
+            return plant, delayed[:, :0]
+        return plant, np.einsum("bkmj,bjk->bmk", self._control_answer(s), delayed)
+
+    def _plant_answer(self, s: np.ndarray) -> np.ndarray:
+        """(s - M)^-1 W, (B, K, n, r)."""
+        return np.linalg.inv(s[:, :, None, None] * np.eye(self.plant.shape[1]) - self.plant[:, None])[:, :, :, list(self.rows)]
+
+    def _control_answer(self, s: np.ndarray) -> np.ndarray:
+        """(s - F)^-1 G, (B, K, m, n_sensed)."""
+        inverse = np.linalg.inv(s[:, :, None, None] * np.eye(self.control.shape[1]) - self.control[:, None])
+        return inverse @ self.control_by_sensed[:, None]
+
+    def _delayed(self, s: np.ndarray, plant: np.ndarray) -> np.ndarray:
+        return np.matmul(self.sensed_rows, plant) * np.exp(-self.delays[:, :, None] * s[:, None])
+
+    def transfers(self, omega: Array, order: int) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
+        """T_a (B, n_a, r, K), T_m (B, r, r, K) and their derivatives by omega; K = order + 1."""
+        n_control = self.control.shape[1]
+        k = np.arange(order + 1)
+        s = 1j * omega[:, None] * k
+        inverse = np.linalg.inv(s[:, :, None, None] * np.eye(self.plant.shape[1]) - self.plant[:, None])
+        answer = inverse[:, :, :, list(self.rows)]
+        slope = -(inverse @ answer)
+        turn = np.exp(-s[:, :, None] * self.delays[:, None])[..., None]
+        sensed = (self.sensed_rows @ answer) * turn
+        sensed_slope = (self.sensed_rows @ slope) * turn - self.delays[:, None, :, None] * sensed
+        if n_control:
+            inner = np.linalg.inv(s[:, :, None, None] * np.eye(n_control) - self.control[:, None])
+            reply = inner @ self.control_by_sensed[:, None]
+            control = reply @ sensed
+            control_slope = reply @ sensed_slope - inner @ control
+            sensed = np.concatenate([sensed, control], axis=2)
+            sensed_slope = np.concatenate([sensed_slope, control_slope], axis=2)
+        by = self.by_output[:, None]
+        factor = (1j * k)[None, :, None, None]
+        parts = (sensed, by @ answer, sensed_slope * factor, (by @ slope) * factor)
+        return tuple(np.moveaxis(part, 1, 3) for part in parts)  # type: ignore[return-value]
+
+    def in_time(self, arguments: np.ndarray, samples: int) -> tuple[Array, Array]:
+        """Controlled signal (B, S) and its gradient (B, n_a, S) from harmonics of the drive's arguments (B, n_a, K)."""
+        signal = np.fft.irfft(arguments, samples, axis=2) * samples
+        n_sensed = self.sensed_rows.shape[0]
+        rest = np.concatenate([self.sensed_rest, self.state_rest[:, self.plant.shape[1] :]], axis=1)
+        signal = signal + rest[:, :, None]
+        if self.members is None:
+            ordered = np.moveaxis(signal, 0, -1)[..., 0] if self.size == 1 else np.moveaxis(signal, 0, 1)
+        else:
+            ordered = np.moveaxis(signal, 0, -1)
+            ordered = ordered.reshape(*ordered.shape[:2], *self.members)
+        sensed, control = ordered[:n_sensed], ordered[n_sensed:]
+        value = np.asarray(self.drive.value(sensed, control))
+        gradient = np.asarray(self.drive.gradient(sensed, control))
+        if self.members is None and self.size == 1:
+            value, gradient = value[None], gradient[None]
+        elif self.members is None:
+            gradient = np.moveaxis(gradient, 1, 0)
+        else:
+            value = np.moveaxis(value.reshape(value.shape[0], self.size), -1, 0)
+            gradient = np.moveaxis(gradient.reshape(*gradient.shape[:2], self.size), -1, 0)
+        return value, gradient
+
+    def equations(self, harmonics: Harmonics, samples: int) -> tuple[np.ndarray, Array, np.ndarray, np.ndarray]:
+        """Residual (B, r, K) complex; Jacobian (B, 2rK, 2rK) real on [Re, Im] of w; columns by omega and by kappa (B, r, K) complex."""
+        order = harmonics.order
+        transfer, factor, transfer_slope, factor_slope = self.transfers(harmonics.omega, order)
+        force = harmonics.force
+        b, r, size = self.size, len(self.rows), order + 1
+        arguments = np.einsum("barK,brK->baK", transfer, force)
+        moved = np.einsum("bqrK,brK->bqK", factor, force)
+        raw, gradient = self.in_time(arguments, samples)
+        kappa = self.gain[:, None]
+        excess = raw - self.output_rest[:, None]
+        output = kappa * excess + self.shift[:, None]
+        shift_level = self.shift[:, None, None] * self.level[:, :, None]
+        level = self.level[:, :, None] + np.fft.irfft(moved, samples, axis=2) * samples
+        # Signals whose product with a harmonic is needed: for each row i, m_i grad_a for every argument, and v - v1.
+        weight = level[:, :, None] * (kappa[:, :, None] * gradient)[:, None]
+        stack = np.concatenate(
+            [(output[:, None] * level - shift_level)[:, :, None], (excess[:, None] * level)[:, :, None], weight], axis=2
+        )
+        spectrum = np.fft.fft(stack, axis=3) / samples
+        residual = force - spectrum[:, :, 0, :size]
+        by_gain = -spectrum[:, :, 1, :size]
+        output_spectrum = np.fft.fft(output, axis=1) / samples
+        minus, plus = _index(order, samples)
+        # Rows i of the answer by columns r of the unknown: (B, i, a, K, K) against (B, a, r, K).
+        gradient_spectrum = spectrum[:, :, 2:]
+        direct = np.einsum("biajk,bark->bijrk", gradient_spectrum[..., minus], transfer)
+        mirror = np.einsum("biajk,bark->bijrk", gradient_spectrum[..., plus], np.conj(transfer))
+        direct += np.einsum("bjk,birk->bijrk", output_spectrum[:, minus], factor)
+        mirror += np.einsum("bjk,birk->bijrk", output_spectrum[:, plus], np.conj(factor))
+        # The mean has no mirror image: its two halves are one number.
+        mirror[..., 0] = 0.0
+        direct = direct.reshape(b, r * size, r * size)
+        mirror = mirror.reshape(b, r * size, r * size)
+        jacobian = np.empty((b, 2 * r * size, 2 * r * size))
+        half = r * size
+        jacobian[:, :half, :half] = -(direct.real + mirror.real)
+        jacobian[:, :half, half:] = direct.imag - mirror.imag
+        jacobian[:, half:, :half] = -(direct.imag + mirror.imag)
+        jacobian[:, half:, half:] = mirror.real - direct.real
+        diagonal = np.arange(2 * half)
+        jacobian[:, diagonal, diagonal] += 1.0
+        turned = np.einsum("barK,brK->baK", transfer_slope, force)
+        turned_level = np.einsum("bqrK,brK->bqK", factor_slope, force)
+        change = np.einsum("biat,bat->bit", weight, np.fft.irfft(turned, samples, axis=2) * samples)
+        change = change + output[:, None] * (np.fft.irfft(turned_level, samples, axis=2) * samples)
+        by_omega = -np.fft.fft(change, axis=2)[:, :, :size] / samples
+        return residual, jacobian, by_omega, by_gain
+
+
+@dataclass(frozen=True)
+class Solved:
+    """What `solve` found, one entry a member."""
+
+    harmonics: Harmonics
+    gain: Array
+    """kappa: as given, or found where an amplitude was prescribed."""
+    residual: Array
+    """Norm of the imbalance over the norm of w."""
+    converged: Array
+    iterations: int
+
+
+def samples_for(order: int) -> int:
+    """8H time samples, at least 32: the clip's corner aliases into the harmonics kept where there are fewer."""
+    return max(32, 8 * order)
+
+
+def solve(
+    balance: Balance, guess: Harmonics, free_gain: bool = False, most: int = 12, tolerance: float = 1e-9
+) -> Solved:
+    """Damped Newton steps on the balance equations.
+
+    Parameters
+    ----------
+    balance : Balance
+    guess : Harmonics
+        Rotated beforehand so that the first harmonic of the first row is real; that fixes the phase.
+    free_gain : bool
+        True holds the first harmonic's amplitude and solves for kappa instead: that walks along the branch of cycles from the
+        boundary, folds included.
+    most : int
+        Steps allowed.
+    tolerance : float
+        On the last step relative to w; the error left is its square on smooth stretches.
+    """
+    order, samples = guess.order, samples_for(guess.order)
+    size, r = order + 1, len(balance.rows)
+    half = r * size
+    force, omega, gain = guess.force.copy(), guess.omega.copy(), balance.gain.copy()
+    dead = np.zeros(balance.size, dtype=bool)
+    step_size = np.full(balance.size, np.inf)
+    residual_norm = np.full(balance.size, np.inf)
+    used = 0
+    with np.errstate(all="ignore"):
+        for used in range(1, most + 1):  # noqa: B007
+            current = Harmonics(force, omega)
+            residual, jacobian, by_omega, by_gain = balance.with_gain(gain).equations(current, samples)
+            norm = np.sqrt(np.sum(np.abs(force) ** 2, axis=(1, 2)))
+            residual_norm = np.sqrt(np.sum(np.abs(residual) ** 2, axis=(1, 2))) / norm
+            matrix, rhs = _system(jacobian, residual, by_omega, by_gain, force, half, size, free_gain)
+            bad = ~np.all(np.isfinite(matrix), axis=(1, 2)) | ~np.all(np.isfinite(rhs), axis=1)
+            dead |= bad
+            if bad.any():
+                matrix[bad], rhs[bad] = np.eye(matrix.shape[1]), 0.0
+            try:
+                step = np.linalg.solve(matrix, rhs[..., None])[..., 0]
+            except np.linalg.LinAlgError:
+                step = (np.linalg.pinv(matrix) @ rhs[..., None])[..., 0]
+            omega_step = step[:, half].copy()
+            step[:, half] = 0.0
+            move = (step[:, :half] + 1j * step[:, half : 2 * half]).reshape(force.shape)
+            length = np.sqrt(np.sum(np.abs(move) ** 2, axis=(1, 2)))
+            damp = np.minimum(1.0, np.minimum(0.25 * omega / np.maximum(np.abs(omega_step), 1e-300), norm / np.maximum(length, 1e-300)))
+            damp[dead] = 0.0
+            force = force + damp[:, None, None] * move
+            omega = omega + damp * omega_step
+            if free_gain:
+                gain = gain + damp * np.clip(step[:, -1], -0.5 * np.abs(gain), np.abs(gain))
+            step_size = np.where(dead, np.inf, length / norm + np.abs(omega_step) / np.abs(omega))
+            if np.all((step_size < tolerance) | dead):
+                break
+    converged = (step_size < tolerance) & ~dead & (omega > 0.0)
+    return Solved(Harmonics(force, omega), gain, residual_norm, converged, used)
+
+
+def _system(
+    jacobian: Array, residual: np.ndarray, by_omega: np.ndarray, by_gain: np.ndarray, force: np.ndarray, half: int, size: int, free: bool
+) -> tuple[Array, Array]:
+    """The square real system. The mean has no imaginary part; the first row's place for it holds omega and the phase condition."""
+    b = jacobian.shape[0]
+    flat = residual.reshape(b, half)
+    rhs = -np.concatenate([flat.real, flat.imag], axis=1)
+    column = by_omega.reshape(b, half)
+    jacobian[:, :half, half], jacobian[:, half:, half] = column.real, column.imag
+    for row in range(half, 2 * half, size):
+        jacobian[:, row] = 0.0
+        rhs[:, row] = 0.0
+        jacobian[:, row, row] = 1.0
+    jacobian[:, half] = 0.0
+    jacobian[:, half, half + 1] = 1.0
+    rhs[:, half] = -force[:, 0, 1].imag
+    if not free:
+        return jacobian, rhs
+    wide = np.zeros((b, 2 * half + 1, 2 * half + 1))
+    wide[:, :-1, :-1] = jacobian
+    column = by_gain.reshape(b, half)
+    wide[:, :half, -1], wide[:, half:-1, -1] = column.real, column.imag
+    for row in range(half, 2 * half, size):
+        wide[:, row, -1] = 0.0
+    wide[:, -1, 1] = 1.0
+    return wide, np.concatenate([rhs, np.zeros((b, 1))], axis=1)
+
+
+def prepare(form: DriveForm, rest: Rest, copies: int | None = None) -> Balance:
+    """The balance equations of one loop (`copies` guesses of it at once, 1 if None) or of a batch."""
+    batch = np.broadcast_shapes(
+        form.plant.shape[2:], rest.state.shape[1:], np.shape(rest.output), *(np.shape(delay) for delay in form.sensed_delays)
+    )
+    one = not batch
+    shape = (copies or 1,) if one else batch
+    n = form.n_plant
+    state = _leading(rest.state, 1, shape)
+    output = np.ascontiguousarray(_leading(rest.output, 0, shape))
+    matrix, by_output = _leading(form.plant, 2, shape), _leading(form.plant_by_output, 2, shape)
+    push = _leading(form.input_vector, 1, shape)
+    rows = tuple(i for i in range(n) if by_output[:, i].any() or push[:, i].any())
+    chosen = list(rows)
+    level = np.einsum("bin,bn->bi", by_output[:, chosen], state[:, :n]) + push[:, chosen]
+    held = output.copy()
+    sizes = np.linalg.svd(matrix + held[:, None, None] * by_output, compute_uv=False)
+    held = np.where(sizes[:, -1] < _SMALLEST_POLE * sizes[:, 0], held + 1.0, held)
+    return Balance(
+        plant=matrix + held[:, None, None] * by_output,
+        rows=rows,
+        by_output=by_output[:, chosen],
+        level=level,
+        shift=output - held,
+        sensed_rows=form.sensed_rows,
+        delays=np.stack([_leading(delay, 0, shape) for delay in form.sensed_delays], axis=1),
+        control=_leading(form.control, 2, shape),
+        control_by_sensed=_leading(form.control_by_sensed, 2, shape),
+        drive=form.drive,
+        members=None if one else batch,
+        sensed_rest=state[:, :n] @ form.sensed_rows.T,
+        state_rest=state,
+        output_rest=output,
+        gain=np.ones(shape).reshape(-1),
+    )
