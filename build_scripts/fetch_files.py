@@ -59,15 +59,15 @@ def fetch_runtime(cache: Path, python: Path, progress: Progress) -> Path:
     return folder
 
 
-def fetch_wheels(cache: Path, python: Path, progress: Progress) -> dict[str, Path]:
-    """Makes `cache/wheels` hold every wheel of the wheels lock; returns name to file.
+def fetch_wheels(cache: Path, python: Path, progress: Progress, lock_file: Path = WHEELS_LOCK) -> dict[str, Path]:
+    """Makes `cache/wheels` hold every wheel of a wheels lock, the build's by default; returns name to file.
 
     Raises
     ------
     BuildError
         If pip cannot give a wheel, or gives other bytes than the locked ones.
     """
-    lock = json.loads(WHEELS_LOCK.read_text(encoding="utf-8"))["wheels"]
+    lock = json.loads(lock_file.read_text(encoding="utf-8"))["wheels"]
     folder = cache / "wheels"
     folder.mkdir(parents=True, exist_ok=True)
     found: dict[str, Path] = {}

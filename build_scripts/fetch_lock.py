@@ -1,4 +1,4 @@
-"""Writes the two lock files anew from the official release, for a maintainer who raises a version.
+"""Writes the lock files anew from the official release, for a maintainer who raises a version.
 
 Run by hand, never by the build: `python3 build_scripts/fetch_lock.py`. It needs npm and pip. The hashes of the WebAssembly wheels are
 copied from the official `pyodide-lock.json` inside the npm package `pyodide`; those of the core files are taken from that same package,
@@ -17,6 +17,7 @@ from pathlib import Path
 
 from fetch_files import RUNTIME_LOCK, WHEELS_LOCK, download_wheel
 
+TEST_WHEELS_LOCK = WHEELS_LOCK.with_name("test_wheels.lock.json")
 CORE_FILES = ("pyodide.mjs", "pyodide.asm.js", "pyodide.asm.wasm", "python_stdlib.zip")
 PACKAGES = ("numpy", "scipy", "openblas")
 
@@ -42,17 +43,18 @@ def refresh_runtime_lock() -> None:
     RUNTIME_LOCK.write_text(json.dumps(lock, indent=2) + "\n", encoding="utf-8")
 
 
-def refresh_wheels_lock() -> None:
+def refresh_wheels_lock(lock_file: Path) -> None:
     """Downloads every pinned wheel and notes its file name and SHA-256."""
-    lock = json.loads(WHEELS_LOCK.read_text(encoding="utf-8"))
+    lock = json.loads(lock_file.read_text(encoding="utf-8"))
     with tempfile.TemporaryDirectory() as folder:
         for name, entry in lock["wheels"].items():
             path = download_wheel(Path(sys.executable), name, entry["version"], Path(folder))
             entry["file"], entry["sha256"] = path.name, file_hash(path.read_bytes())
-    WHEELS_LOCK.write_text(json.dumps(lock, indent=2) + "\n", encoding="utf-8")
+    lock_file.write_text(json.dumps(lock, indent=2) + "\n", encoding="utf-8")
 
 
 if __name__ == "__main__":
     refresh_runtime_lock()
-    refresh_wheels_lock()
-    print("Both lock files written. Look at the difference before you commit it.")
+    refresh_wheels_lock(WHEELS_LOCK)
+    refresh_wheels_lock(TEST_WHEELS_LOCK)
+    print("All lock files written. Look at the difference before you commit it.")
