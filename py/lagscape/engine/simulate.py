@@ -16,14 +16,30 @@ from typing import Any, Literal
 import numpy as np
 
 from lagscape.engine.disturbance import Disturbance, check_channels
+from lagscape.engine.exact_path import exact_path
+from lagscape.engine.interval_collocation import interval_collocation, mesh_for
 from lagscape.engine.run import Run
+from lagscape.engine.runge_kutta import runge_kutta, step_for
 from lagscape.engine.trace import Trace, output_grid
 from lagscape.errors import InvalidInputError
 from lagscape.loops.protocol import Array, DriveForm, Rest
 
-__all__ = ["simulate"]
+__all__ = ["DRAG_ERROR", "RELEASE_ERROR", "fastest_rate", "simulate"]
 
 Purpose = Literal["drag", "release"]
+
+DRAG_ERROR = 5e-4
+"""Above this error estimate a drag trace is refined, then flagged."""
+RELEASE_ERROR = 1e-6
+"""Above this error estimate a release trace is flagged."""
+
+_MOST_REFINEMENTS = 3
+_MOST_EXACT_STEPS = 2500
+_FEW_STEPS = 40
+_STEP_DRAG = 0.1
+_STEP_RELEASE = 0.02
+_SHORT_BILINEAR = 1.2
+_SHORT_SIMPLE = 0.15
 
 
 def simulate(
@@ -120,4 +136,63 @@ def _checked_times(duration: float, output_times: Any) -> Array:
 
 
 def _dispatch(run: Run, times: Array, purpose: str) -> Trace:
-    raise NotImplementedError
+    rate = fastest_rate(run)
+    start = _first_move(run)
+    steps = run.duration / run.form.delays[0]
+    short = run.form.delays[0] * rate < _shortest_delay_in_rates(run)
+    if purpose == "release":
+        if steps > _MOST_EXACT_STEPS:
+            return _by_steps(run, times, _STEP_RELEASE / rate, RELEASE_ERROR)
+        trace = exact_path(run, times, rate, start)
+        return trace if trace.error_estimate <= RELEASE_ERROR else _flagged(trace)
+    if short and steps > _FEW_STEPS:
+        return _by_steps(run, times, _STEP_DRAG / rate, DRAG_ERROR)
+    return _on_a_fixed_mesh(run, times, rate, start)
+
+
+def _on_a_fixed_mesh(run: Run, times: Array, rate: float, start: float) -> Trace:
+    """Interval collocation, with twice the pieces where the estimate asks for it."""
+    kinked = run.form.drive.has_kink
+    degree, pieces = (8, 1.25) if kinked else (12, 1.0)
+    for _ in range(_MOST_REFINEMENTS):
+        trace = interval_collocation(run, times, mesh_for(run, rate, pieces, degree, start))
+        if trace.status != "completed" or trace.error_estimate <= DRAG_ERROR:
+            return trace
+        pieces *= 2.0
+    return _flagged(trace)
+
+
+def _by_steps(run: Run, times: Array, step: float, promised: float) -> Trace:
+    trace = runge_kutta(run, times, step_for(run, step))
+    return trace if trace.error_estimate <= promised else _flagged(trace)
+
+
+def _flagged(trace: Trace) -> Trace:
+    return trace.with_status("low_accuracy") if trace.status == "completed" else trace
+
+
+def fastest_rate(run: Run) -> float:
+    """The largest absolute eigenvalue of the plant at the rest's output and of the controller, 1/s; at least one over the run."""
+    form, n = run.form, run.form.n_plant
+    sensed = form.sensed_rows @ run.initial[:n]
+    output = float(form.drive.value(sensed, run.initial[n:], 0.0))
+    rates = [np.abs(np.linalg.eigvals(form.plant + output * form.plant_by_output)).max()]
+    if form.n_control:
+        rates.append(np.abs(np.linalg.eigvals(form.control)).max())
+    return float(max(*rates, 1.0 / run.duration))
+
+
+def _shortest_delay_in_rates(run: Run) -> float:
+    """Below this product of delay and rate, plain steps are cheaper than collocation on one piece a delay (measured)."""
+    return _SHORT_BILINEAR if run.form.n_plant > 1 and np.any(run.form.plant_by_output) else _SHORT_SIMPLE
+
+
+def _first_move(run: Run) -> float:
+    """The time before which nothing happens: the first break, if the run starts from a true rest; else 0."""
+    form, n = run.form, run.form.n_plant
+    if not run.breaks.size:
+        return 0.0
+    slope = form.rhs(run.initial, form.sensed_rows @ run.initial[:n])
+    size = np.maximum(np.abs(run.initial), 1e-300)
+    rests = np.all(np.abs(slope) * run.duration <= 1e-9 * size) or not np.any(slope)
+    return float(run.breaks[0]) if rests else 0.0

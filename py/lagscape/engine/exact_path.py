@@ -1,0 +1,352 @@
+"""The exact path: collocation on a mesh that holds every breaking point, for release, export and tests.
+
+Breaking points are the start, the breaks of the disturbances, the times at which the drive is cut off or comes back, and the images of
+all of these under every delay, as long as the jump they carry is in a derivative low enough to matter. The run advances by at most the
+shortest delay, so that what is sensed is always in the past; inside an advance the pieces are split where a cut-off begins or ends
+(found as a root, ends and grazing included) and where the polynomials do not resolve the solution.
+"""
+
+from __future__ import annotations
+
+import heapq
+import math
+from dataclasses import dataclass
+
+import numpy as np
+
+from lagscape.engine.history import PiecewiseHistory, to_chebyshev
+from lagscape.engine.mesh import integration, points, tail_weights
+from lagscape.engine.run import Run
+from lagscape.engine.trace import Trace, find_silences
+from lagscape.loops.protocol import Array
+
+__all__ = ["ExactSettings", "exact_path"]
+
+_NUDGE = 1e-9
+_SAME_PLACE = 1e-6
+"""A root closer than this share of a piece to its end is that end: what is cut off there is the square of it."""
+_MOST_KINK_ROUNDS = 6
+_MOST_ROUNDS = 40
+
+
+@dataclass(frozen=True)
+class ExactSettings:
+    """How exact: the defaults give 1e-7 or better on the loops of this project."""
+
+    degree: int = 10
+    highest_order: int = 3
+    """Breaks are piece ends while the lowest derivative of the state that jumps there is of this order or lower; 0 for none at all."""
+    tolerance: float = 2e-8
+    """Largest unresolved share of a state in a piece."""
+    locate_kinks: bool = True
+    piece: float = 1.0
+    """Longest piece, in units of the fastest time constant."""
+
+
+class _Breaks:
+    """A queue of breaking points that breeds their images under the delays."""
+
+    def __init__(self, run: Run, settings: ExactSettings, start: float) -> None:
+        self._delays, self._end = run.form.delays, run.duration
+        self._highest = settings.highest_order
+        # Noise has a break every hold: the images of its small jumps are kept one order less, or the pieces explode.
+        self._outer = self._highest - 1 if len(run.breaks) > 50 else self._highest
+        self._queue: list[tuple[float, int]] = []
+        for time in [start, *run.breaks.tolist()]:
+            self.breed(time, 1, self._outer)
+            if time > start and self._highest > 0:
+                heapq.heappush(self._queue, (time, 1))
+
+    def breed(self, time: float, order: int, highest: int | None = None) -> None:
+        """Queues the images of a break whose lowest jumping derivative is `order`; under a delay it rises by one."""
+        highest = self._highest if highest is None else highest
+        level = {time}
+        while order < highest:
+            order += 1
+            level = {earlier + delay for earlier in level for delay in self._delays}
+            for image in level:
+                if image < self._end:
+                    heapq.heappush(self._queue, (image, order))
+
+    def until(self, end: float, after: float, least_gap: float) -> list[float]:
+        """Takes the breaks up to `end` from the queue, ascending, without those closer than `least_gap` to one another or the ends."""
+        found: list[float] = []
+        last = after
+        while self._queue and self._queue[0][0] < end - least_gap:
+            time, _ = heapq.heappop(self._queue)
+            if time > last + least_gap:
+                found.append(time)
+                last = time
+        while self._queue and self._queue[0][0] < end + least_gap:
+            heapq.heappop(self._queue)
+        return found
+
+
+def _linear_pieces(system: Array, forcing: Array, lengths: Array, start: Array, n: int) -> Array:
+    """x' = M x + w on pieces in a row. M (m, n, s, s) or (s, s) and w (m, s, n) at the nodes; x at the points, (m, s, n + 1)."""
+    m, size = forcing.shape[:2]
+    q = integration(n)
+    scaled = lengths[:, None, None] * q
+    if system.ndim == 2:
+        big = -(system[None, :, None, :, None] * scaled[:, None, :, None, :])
+    else:
+        big = -(np.moveaxis(system, 1, 3)[:, :, None] * scaled[:, None, :, None, :])
+    big = big.reshape(m, size * n, size * n)
+    diagonal = np.arange(size * n)
+    big[:, diagonal, diagonal] += 1.0
+    right = np.zeros((m, size, n, size + 1))
+    for i in range(size):
+        right[:, i, :, i] = 1.0
+    right[..., size] = forcing @ scaled.swapaxes(1, 2)
+    solved = np.linalg.solve(big, right.reshape(m, size * n, size + 1)).reshape(m, size, n, size + 1)
+    values = np.empty((m, size, n + 1))
+    x = start
+    for i in range(m):
+        values[i, :, 0] = x
+        values[i, :, 1:] = solved[i] @ np.append(x, 1.0)
+        x = values[i, :, -1]
+    return values
+
+
+class _Path:
+    """The state of a run under way."""
+
+    def __init__(self, run: Run, settings: ExactSettings, start: float, rate: float) -> None:
+        form = run.form
+        self.run, self.settings, self.n = run, settings, settings.degree
+        self.rows, row_of = np.unique(form.sensed_rows, axis=0, return_inverse=True)
+        self.row_of = row_of.reshape(-1)[:, None, None]
+        self.delays = np.array([float(delay) for delay in form.sensed_delays])[:, None, None]
+        self.history = PiecewiseHistory(self.n, start, self.rows @ run.initial[: form.n_plant])
+        self.breaks = _Breaks(run, settings, start)
+        self.x, self.c = run.initial[: form.n_plant], run.initial[form.n_plant :]
+        self.size = np.maximum(np.abs(run.initial), 1e-300)
+        self.longest = settings.piece / rate
+        self.advance_by = form.delays[0]
+        self.worst_tail = 0.0
+        self.edges: list[Array] = []
+        self.tables: list[Array] = []
+        self.inner = np.clip(points(self.n), _NUDGE, 1.0 - _NUDGE)
+        dense = np.cos(np.pi * np.arange(4 * self.n + 1)[::-1] / (4 * self.n))
+        self.dense = 0.5 * (1.0 + dense)
+        self.to_dense = (np.polynomial.chebyshev.chebvander(dense, self.n) @ to_chebyshev(self.n)).T
+
+    def advance(self, end: float) -> bool:
+        """One advance to `end`; False if the states left the finite numbers."""
+        begin = self.history.end
+        gap = 1e-9 * self.advance_by
+        inside = self.breaks.until(end, begin, gap)
+        marks = [begin, *inside, end]
+        parts = [np.linspace(a, b, max(1, math.ceil((b - a) / self.longest)) + 1)[:-1] for a, b in zip(marks, marks[1:], strict=False)]
+        edges = np.append(np.concatenate(parts), end)
+        kinks: list[float] = []
+        kink_rounds = _MOST_KINK_ROUNDS if self.settings.locate_kinks else 0
+        for _ in range(_MOST_ROUNDS):
+            times, arguments = self._arguments(edges)
+            if kink_rounds:
+                kink_rounds -= 1
+                found = self._kinks(edges, times, arguments)
+                if found:
+                    kinks += found
+                    edges = np.sort(np.concatenate([edges, found]))
+                    continue
+            states = self._plant(edges, times, arguments)
+            if not np.all(np.isfinite(states)):
+                return False
+            poor = self._unresolved(edges, states, arguments)
+            if not poor.size:
+                break
+            edges = np.sort(np.concatenate([edges, 0.5 * (edges[poor] + edges[poor + 1])]))
+        for kink in kinks:
+            self.breaks.breed(kink, 2)
+        self._accept(edges, states, arguments)
+        return True
+
+    def _arguments(self, edges: Array) -> tuple[Array, Array]:
+        """Times (m, n + 1), drawn in from the piece ends, and what the drive takes there: (n_sensed + n_control, m, n + 1)."""
+        form, n = self.run.form, self.n
+        lengths = np.diff(edges)[:, None]
+        times = edges[:-1, None] + lengths * points(n)
+        inner = edges[:-1, None] + lengths * self.inner
+        signal = np.broadcast_to(self.row_of, (form.n_sensed, *times.shape))
+        sensed = self.history.at(times - self.delays, signal, inner - self.delays)
+        arguments = np.empty((form.n_sensed + form.n_control, *times.shape))
+        arguments[: form.n_sensed] = sensed
+        if form.n_control:
+            forcing = np.tensordot(form.control_by_sensed, sensed[..., 1:], axes=(1, 0)) + form.control_constant[:, None, None]
+            control = _linear_pieces(form.control, np.moveaxis(forcing, 0, 1), lengths[:, 0], self.c, n)
+            arguments[form.n_sensed :] = np.moveaxis(control, 1, 0)
+        return inner, arguments
+
+    def _kinks(self, edges: Array, times: Array, arguments: Array) -> list[float]:
+        """Times inside pieces where the drive's switch or the floor is crossed."""
+        run, split = self.run, self.run.form.n_sensed
+        functions = []
+        if run.form.drive.has_kink:
+            functions.append(run.form.drive.switch(arguments[:split], arguments[split:], run.push(times)))
+        if math.isfinite(run.floor):
+            below = run.output_push(times)
+            if np.any(np.asarray(below) < 0.0):
+                functions.append(run.form.drive.value(arguments[:split], arguments[split:], run.push(times)) + below - run.floor)
+        found: list[float] = []
+        for values in functions:
+            found += self._roots(edges, values)
+        return found
+
+    def _roots(self, edges: Array, values: Array) -> list[float]:
+        """Roots well inside the pieces of the polynomials through these values at the points, (m, n + 1)."""
+        if values.min() > 0.0 and not self._may_graze(values):
+            return []
+        dense = values @ self.to_dense
+        size = np.abs(dense).max(axis=1, keepdims=True)
+        sign = np.where(np.abs(dense) <= 1e-9 * size, 0.0, np.sign(dense))
+        places = []
+        for piece in np.flatnonzero((sign.max(axis=1) > 0.0) & (sign.min(axis=1) < 0.0)).tolist():
+            kept = np.flatnonzero(sign[piece])
+            for a, b in zip(kept[:-1].tolist(), kept[1:].tolist(), strict=True):
+                if sign[piece, a] != sign[piece, b]:
+                    places.append((piece, self.dense[a], self.dense[b]))
+        # Grazing: a dip between samples that does not change the sign at any of them.
+        middle, before, after = dense[:, 1:-1], dense[:, :-2], dense[:, 2:]
+        dips = (middle * before > 0.0) & (middle * after > 0.0) & (np.abs(middle) < np.abs(before)) & (np.abs(middle) < np.abs(after))
+        for piece, place in zip(*(item.tolist() for item in np.nonzero(dips)), strict=True):
+            places += self._grazing(piece, place + 1, dense[piece], to_chebyshev(self.n) @ values[piece])
+        if not places:
+            return []
+        pieces = np.array([item[0] for item in places])
+        low, high = np.array([item[1] for item in places]), np.array([item[2] for item in places])
+        where = _refine(values[pieces] @ to_chebyshev(self.n).T, low, high)
+        kept = (where > _SAME_PLACE) & (where < 1.0 - _SAME_PLACE)
+        lengths = edges[pieces + 1] - edges[pieces]
+        return (edges[pieces] + where * lengths)[kept].tolist()
+
+    def _may_graze(self, values: Array) -> bool:
+        """Whether the polynomials through positive values may still dip below zero between them."""
+        return bool(np.any(values.min(axis=1) < 0.1 * (values.max(axis=1) - values.min(axis=1))))
+
+    def _grazing(self, piece: int, j: int, dense: Array, coefficients: Array) -> list[tuple[int, float, float]]:
+        """Two brackets if the polynomial changes sign between the neighbours of dense sample j although the samples do not."""
+        a, b = self.dense[j - 1], self.dense[j + 1]
+        fine = np.linspace(a, b, 33)
+        values = np.polynomial.chebyshev.chebval(2.0 * fine - 1.0, coefficients) * np.sign(dense[j])
+        low = int(np.argmin(values))
+        if values[low] >= 0.0 or low in (0, 32):
+            return []
+        return [(piece, float(a), float(fine[low])), (piece, float(fine[low]), float(b))]
+
+    def _plant(self, edges: Array, times: Array, arguments: Array) -> Array:
+        """Plant states at the points, (m, n_plant, n + 1)."""
+        run, form = self.run, self.run.form
+        nodes = times[:, 1:]
+        given = arguments[..., 1:]
+        v = run.controlled(given[: form.n_sensed], given[form.n_sensed :], nodes)
+        forcing = v[:, None, :] * form.input_vector[:, None] + form.constant[:, None]
+        if run.used_channels:
+            by_output = run.plant_push_by_output(nodes) * v
+            forcing = forcing + _pieces_first(by_output) + _pieces_first(run.plant_push(nodes))
+        system = form.plant + v[..., None, None] * form.plant_by_output if np.any(form.plant_by_output) else form.plant
+        return _linear_pieces(system, forcing, np.diff(edges), self.x, self.n)
+
+    def _unresolved(self, edges: Array, states: Array, arguments: Array) -> Array:
+        """Pieces to halve: those whose two highest coefficients are too large, unless they are already very short."""
+        form = self.run.form
+        control = np.moveaxis(arguments[form.n_sensed :], 0, 1)
+        everything = np.concatenate([states, control], axis=1)
+        self.size = np.maximum(self.size, np.abs(everything).max(axis=(0, 2)))
+        tail = (np.abs(everything @ tail_weights(self.n)).max(axis=2) / self.size).max(axis=1)
+        poor = np.flatnonzero(tail > self.settings.tolerance)
+        poor = poor[np.diff(edges)[poor] > 1e-6 * self.longest]
+        if not poor.size:
+            self.worst_tail = max(self.worst_tail, float(tail.max()))
+        return poor
+
+    def _accept(self, edges: Array, states: Array, arguments: Array) -> None:
+        form = self.run.form
+        self.history.append(edges, np.moveaxis(np.tensordot(self.rows, states, axes=(1, 1)), 0, 2))
+        self.x = states[-1, :, -1]
+        self.c = arguments[form.n_sensed :, -1, -1]
+        self.edges.append(edges[:-1])
+        self.tables.append(np.concatenate([states, np.moveaxis(arguments, 0, 1)], axis=1))
+
+
+def _pieces_first(signal: Array | float) -> Array | float:
+    return np.moveaxis(signal, 0, 1) if isinstance(signal, np.ndarray) else signal
+
+
+def _refine(coefficients: Array, low: Array, high: Array) -> Array:
+    """Roots of Chebyshev series on [0, 1], each bracketed: Newton steps, halving where a step leaves the bracket."""
+    orders = np.arange(coefficients.shape[1])
+    slopes = np.polynomial.chebyshev.chebder(coefficients, axis=1)
+    start = _series(coefficients, low, orders)
+    place = 0.5 * (low + high)
+    for _ in range(60):
+        value = _series(coefficients, place, orders)
+        same = value * start > 0.0
+        low, high = np.where(same, place, low), np.where(same, high, place)
+        slope = 2.0 * _series(slopes, place, orders[:-1])
+        with np.errstate(divide="ignore", invalid="ignore"):
+            following = place - value / slope
+        following = np.where((following > low) & (following < high), following, 0.5 * (low + high))
+        done = np.abs(following - place).max() < 1e-13
+        place = following
+        if done:
+            break
+    return place
+
+
+def _series(coefficients: Array, place: Array, orders: Array) -> Array:
+    return (coefficients * np.cos(np.arccos(2.0 * place - 1.0)[:, None] * orders)).sum(axis=1)
+
+
+def exact_path(run: Run, times: Array, rate: float, start: float = 0.0, settings: ExactSettings | None = None) -> Trace:
+    """One run by the exact path, evaluated at `times`, shape (n,).
+
+    Parameters
+    ----------
+    rate : float
+        The loop's fastest rate, 1/s: pieces start at about 1/rate.
+    start : float
+        s; the loop rests before it.
+    """
+    path = _Path(run, settings or ExactSettings(), start, rate)
+    status = "completed"
+    with np.errstate(over="ignore", invalid="ignore", divide="ignore"):
+        while path.history.end < run.duration * (1.0 - 1e-12):
+            if not path.advance(min(path.history.end + path.advance_by, run.duration)):
+                status = "diverged"
+                break
+    return _trace(path, times, start, status)
+
+
+def _trace(path: _Path, times: Array, start: float, status: str) -> Trace:
+    run, form, n = path.run, path.run.form, path.n
+    if status == "diverged":
+        times = times[times <= path.history.end]
+    at_rest = np.concatenate([run.initial[: form.n_plant], form.sensed_rows @ run.initial[: form.n_plant], run.initial[form.n_plant :]])
+    signals = PiecewiseHistory(n, start, at_rest)
+    silences: tuple[tuple[float, float], ...] = ()
+    if path.tables:
+        edges = np.append(np.concatenate(path.edges), path.history.end)
+        table = np.concatenate(path.tables)
+        signals.append(edges, np.moveaxis(table, 1, 2))
+        silences = _silences(run, edges, table, start)
+    number = np.broadcast_to(np.arange(len(at_rest))[:, None], (len(at_rest), len(times)))
+    values = signals.at(np.broadcast_to(times, number.shape), number)
+    sensed, control = values[form.n_plant : form.n_plant + form.n_sensed], values[form.n_plant + form.n_sensed :]
+    states = np.concatenate([values[: form.n_plant], control]).T
+    output = run.controlled(sensed, control, times)
+    return Trace(times, states, output, form.state_names, status, path.worst_tail, silences, "exact path")
+
+
+def _silences(run: Run, edges: Array, table: Array, start: float) -> tuple[tuple[float, float], ...]:
+    """From all points of all pieces: a cut-off begins and ends at a piece end, so nothing is interpolated there."""
+    form, n = run.form, table.shape[2] - 1
+    times = edges[:-1, None] + np.diff(edges)[:, None] * points(n)
+    inner = edges[:-1, None] + np.diff(edges)[:, None] * np.clip(points(n), _NUDGE, 1.0 - _NUDGE)
+    signals = np.moveaxis(table, 1, 0)[form.n_plant :]
+    sensed, control = signals[: form.n_sensed], signals[form.n_sensed :]
+    output = run.controlled(sensed, control, inner)
+    level = run.silence_level(sensed, control, inner, output)
+    found = find_silences(times.reshape(-1), level.reshape(-1))
+    least = 1e-6 * (form.delays[0])
+    return tuple((max(begin, 0.0), end) for begin, end in found if end - begin > least)

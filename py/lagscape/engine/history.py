@@ -1,0 +1,64 @@
+"""The past of a run as pieces of polynomials, appended as the run goes on and read at any time, with one-sided limits at piece ends."""
+
+from __future__ import annotations
+
+from functools import lru_cache
+
+import numpy as np
+
+from lagscape.engine.mesh import points
+from lagscape.loops.protocol import Array
+
+__all__ = ["PiecewiseHistory", "to_chebyshev"]
+
+
+@lru_cache(maxsize=16)
+def to_chebyshev(n: int) -> Array:
+    """Values at the n + 1 points to Chebyshev coefficients, shape (n + 1, n + 1)."""
+    matrix = np.linalg.inv(np.polynomial.chebyshev.chebvander(2.0 * points(n) - 1.0, n))
+    matrix.setflags(write=False)
+    return matrix
+
+
+class PiecewiseHistory:
+    """Signals that are polynomials of degree n between edges; constant before `start`.
+
+    Chebyshev coefficients, because T_k(x) = cos(k arccos x) is a fixed small number of array calls.
+    """
+
+    def __init__(self, n: int, start: float, constant: Array) -> None:
+        self._n = n
+        self._orders = np.arange(n + 1.0)
+        self._count = 1
+        # The constant past is one long piece; its length is nominal, because a constant does not depend on the place.
+        self._edges = np.full(65, np.inf)
+        self._edges[:2] = start - 1.0, start
+        self._coefficients = np.zeros((64, n + 1, len(constant)))
+        self._coefficients[0, 0] = constant
+
+    @property
+    def end(self) -> float:
+        return float(self._edges[self._count])
+
+    def append(self, edges: Array, values: Array) -> None:
+        """Adds pieces: `edges`, shape (m + 1,), the first being the end so far; `values` at the points, (m, n + 1, n_signals)."""
+        need = self._count + len(values)
+        if need > len(self._coefficients):
+            grown = np.zeros((2 * need, *self._coefficients.shape[1:]))
+            grown[: self._count] = self._coefficients[: self._count]
+            longer = np.full(2 * need + 1, np.inf)
+            longer[: self._count + 1] = self._edges[: self._count + 1]
+            self._coefficients, self._edges = grown, longer
+        self._coefficients[self._count : need] = to_chebyshev(self._n) @ values
+        self._edges[self._count + 1 : need + 1] = edges[1:]
+        self._count = need
+
+    def at(self, times: Array, signal: Array, inner: Array | None = None) -> Array:
+        """Signal numbers `signal` at `times`, arrays of one shape; `inner`, slightly moved times, decide which piece is meant."""
+        piece = np.searchsorted(self._edges[: self._count + 1], times if inner is None else inner, side="right") - 1
+        piece = np.minimum(np.maximum(piece, 0), self._count - 1)
+        left = self._edges[piece]
+        place = 2.0 * (times - left) / (self._edges[piece + 1] - left) - 1.0
+        angle = np.arccos(np.minimum(np.maximum(place, -1.0), 1.0))
+        basis = np.cos(angle[..., None] * self._orders)
+        return np.einsum("...k,...k->...", basis, self._coefficients[piece, :, signal])

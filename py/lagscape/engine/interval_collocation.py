@@ -1,0 +1,262 @@
+"""Interval collocation: the drag path. The run is cut into steps of the shortest delay, so that on each step what is sensed is known.
+
+On a step the sensed signals come from former steps by constant matrices, the controller's states are a constant linear operator of
+them, the controlled signal follows, and the plant is then linear with known coefficients (`plant_steps`). Every step has the same
+pieces; the images of each disturbance's break under the shortest delay fall on the same place of every step, so they are piece ends
+everywhere at once. A cut-off drive (a ventilation that stops) is sampled densely and projected back by least squares, which blurs the
+corner far less than its values at the nodes would.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+
+from lagscape.engine.mesh import evaluation, gauss_places, nodes, oversampling, points, tail_weights
+from lagscape.engine.plant_steps import chained_operator, plant_step
+from lagscape.engine.run import Run
+from lagscape.engine.trace import Trace, find_silences
+from lagscape.loops.protocol import Array
+
+__all__ = ["FixedMesh", "interval_collocation", "mesh_for"]
+
+_OVERSAMPLES = 32
+_MOST_EXTRA_PIECES = 8
+
+
+@dataclass(frozen=True)
+class FixedMesh:
+    """The same pieces in every step."""
+
+    start: float
+    """s: where the first step begins; before it the loop rests."""
+    step: float
+    """s: the shortest delay."""
+    edges: Array
+    """Shape (m + 1,), s from the start of a step; the last is `step`."""
+    degree: int
+    """n, the number of Radau nodes a piece."""
+
+
+def mesh_for(run: Run, rate: float, pieces_per_rate: float, degree: int, start: float) -> FixedMesh:
+    """Equal pieces of about 1 / (rate x pieces_per_rate) s, and the breaks of the run folded into a step as further piece ends."""
+    step = run.form.delays[0]
+    count = max(1, math.ceil(step * rate * pieces_per_rate))
+    edges = np.linspace(0.0, step, count + 1)
+    delays = [delay for delay in run.form.delays if delay > step]
+    breaks = np.concatenate([[start], run.breaks[run.breaks > start]])
+    # First what jumps, then the images under the longer delays, which are smoother; many breaks (noise) are left to the estimate.
+    if len(breaks) > _MOST_EXTRA_PIECES:
+        breaks = breaks[:1]
+    extra = np.concatenate([breaks, *[breaks + delay for delay in delays]])[: 2 * _MOST_EXTRA_PIECES]
+    folded = np.mod(extra - start, step)
+    near = 1e-6 * step
+    for place in folded:
+        gap = np.abs(edges - place).min()
+        if gap > near:
+            edges = np.sort(np.append(edges, place))
+    return FixedMesh(start, step, edges, degree)
+
+
+class _SensedHistory:
+    """What is sensed on a step, from the observed signals of former steps by constant matrices."""
+
+    def __init__(self, run: Run, mesh: FixedMesh) -> None:
+        form = run.form
+        self.rows, self._row_of = np.unique(form.sensed_rows, axis=0, return_inverse=True)
+        self._row_of = self._row_of.reshape(-1)
+        step, n = mesh.step, mesh.degree
+        lengths = np.diff(mesh.edges)
+        where = (mesh.edges[:-1, None] + lengths[:, None] * points(n)) / step
+        # A point on a piece's edge is looked up from inside its own piece, because the past may have a corner there.
+        inner = (mesh.edges[:-1, None] + lengths[:, None] * np.clip(points(n), 1e-9, 1.0 - 1e-9)) / step
+        self._plans: list[tuple[int, int, Array | None]] = []
+        deepest = 1
+        for j, delay in enumerate(form.sensed_delays):
+            back = float(delay) / step
+            whole = math.floor(back + 1e-9)
+            rest = max(back - whole, 0.0)
+            if rest < 1e-9:
+                self._plans.append((int(self._row_of[j]), whole, None))
+                deepest = max(deepest, whole)
+            else:
+                self._plans.append((int(self._row_of[j]), whole, _shift_matrix(mesh, where - rest, inner - rest)))
+                deepest = max(deepest, whole + 1)
+        self.depth = deepest
+        self._shape = where.shape
+
+    def sense(self, observed: Array, k: int, into: Array) -> None:
+        """Fills into[:n_sensed], each (m, n + 1), on step k; `observed` holds step k at index k + depth."""
+        here = k + self.depth
+        for j, (row, whole, matrix) in enumerate(self._plans):
+            if matrix is None:
+                into[j] = observed[here - whole, row]
+            else:
+                past = observed[here - whole - 1 : here - whole + 1, row].reshape(-1)
+                into[j] = matrix.dot(past).reshape(self._shape)
+
+
+def _shift_matrix(mesh: FixedMesh, where: Array, inner: Array) -> Array:
+    """Values on two steps in a row to values at places (-1, 1] steps, 0 being the border between the two."""
+    n, m = mesh.degree, len(mesh.edges) - 1
+    edges = mesh.edges / mesh.step
+    both = np.concatenate([edges[:-1] - 1.0, edges])
+    piece = np.clip(np.searchsorted(both, inner.reshape(-1), side="right") - 1, 0, 2 * m - 1)
+    local = (where.reshape(-1) - both[piece]) / (both[piece + 1] - both[piece])
+    matrix = np.zeros((len(piece), 2 * m, n + 1))
+    matrix[np.arange(len(piece)), piece] = evaluation(n, np.clip(local, 0.0, 1.0))
+    return matrix.reshape(len(piece), -1)
+
+
+class _ControlStep:
+    """The controller's states at the points, a constant operator of their start and of what is sensed at the nodes."""
+
+    def __init__(self, run: Run, mesh: FixedMesh) -> None:
+        form = run.form
+        self._size, m, n = form.n_control, len(mesh.edges) - 1, mesh.degree
+        self._shape = (self._size, m, n + 1)
+        if not self._size:
+            return
+        y0, yw = chained_operator(form.control, np.diff(mesh.edges), n)
+        self._used = np.flatnonzero(np.any(form.control_by_sensed != 0.0, axis=0))
+        by_sensed = np.tensordot(yw, form.control_by_sensed[:, self._used], axes=([3], [0]))
+        by_sensed = np.moveaxis(by_sensed, -1, 3).reshape(int(np.prod(self._shape)), -1)
+        constant = np.einsum("ipqjkl,j->ipq", yw, form.control_constant).reshape(-1, 1)
+        self._operator = np.concatenate([y0.reshape(-1, self._size), by_sensed, constant], axis=1)
+        self._input = np.ones(self._operator.shape[1])
+
+    def advance(self, start: Array, arguments: Array) -> Array:
+        """Fills the controller's rows of `arguments`, (n_sensed + n_control, m, n + 1), and returns its states at the end."""
+        if not self._size:
+            return start
+        self._input[: self._size] = start
+        self._input[self._size : -1] = arguments[self._used, :, 1:].reshape(-1)
+        values = self._operator.dot(self._input).reshape(self._shape)
+        arguments[-self._size :] = values
+        return values[:, -1, -1]
+
+
+class _Signals:
+    """Every disturbance signal of the run at the places where it is needed, worked out before the first step."""
+
+    def __init__(self, run: Run, mesh: FixedMesh, count: int, drive_places: Array) -> None:
+        self.drive: Array | None = None
+        self.output: Array | None = None
+        self._plant: Array | None = None
+        self._by_output: Array | None = None
+        if run.used_channels:
+            at_drive = _step_times(mesh, count, drive_places)
+            at_nodes = _step_times(mesh, count, nodes(mesh.degree))
+            self.drive, self.output = (
+                signal if isinstance(signal, np.ndarray) else None
+                for signal in (run.push(at_drive), run.output_push(at_drive))
+            )
+            self._plant, self._by_output = (
+                np.moveaxis(signal, 0, 1) if isinstance(signal, np.ndarray) else None
+                for signal in (run.plant_push(at_nodes), run.plant_push_by_output(at_nodes))
+            )
+
+    def forcing(self, v: Array, steps: Any) -> Array | None:
+        """w = sum u (p + v q) on these steps: v of shape (..., m, n) gives (..., n_plant, m, n); None where nothing pushes."""
+        total = None if self._plant is None else self._plant[steps]
+        if self._by_output is not None:
+            product = self._by_output[steps] * v[..., None, :, :]
+            total = product if total is None else total + product
+        return total
+
+
+def _step_times(mesh: FixedMesh, count: int, places: Array) -> Array:
+    """Times of these places of [0, 1] in every piece of every step, drawn in a little from the piece ends: (count, m, n_places)."""
+    lengths = np.diff(mesh.edges)
+    inner = mesh.edges[:-1, None] + lengths[:, None] * np.clip(places, 1e-7, 1.0 - 1e-7)
+    return mesh.start + mesh.step * np.arange(count)[:, None, None] + inner
+
+
+def interval_collocation(run: Run, times: Array, mesh: FixedMesh, stiff: bool = False) -> Trace:
+    """One run on a fixed mesh, evaluated at `times`, shape (n,). Its status is completed or diverged; judge its error estimate.
+
+    `stiff` forbids the integrating factor of a one-state plant; it is set by itself where that was not to be trusted.
+    """
+    form, n = run.form, mesh.degree
+    count = max(1, math.ceil((run.duration - mesh.start) / mesh.step - 1e-9))
+    history = _SensedHistory(run, mesh)
+    m = len(mesh.edges) - 1
+    plant = plant_step(form, history.rows, np.diff(mesh.edges), n, stiff)
+    control = _ControlStep(run, mesh)
+    blurred = form.drive.has_kink
+    up, down = oversampling(n, _OVERSAMPLES)
+    up, down = up.T, down.T
+    signals = _Signals(run, mesh, count, gauss_places(_OVERSAMPLES) if blurred else nodes(n))
+
+    observed = np.empty((count + history.depth, len(history.rows), m, n + 1))
+    observed[: history.depth] = (history.rows @ run.initial[: form.n_plant])[None, :, None, None]
+    arguments = np.empty((count, form.n_sensed + form.n_control, m, n + 1))
+    v_all, x_all = np.empty((count, m, n)), np.empty((count, form.n_plant))
+    x, c = run.initial[: form.n_plant], run.initial[form.n_plant :]
+    sensed_count, drive = form.n_sensed, form.drive.value
+    floored = bool(run.used_channels) and math.isfinite(run.floor)
+    done = count
+    with np.errstate(over="ignore", invalid="ignore", divide="ignore"):  # a loop that leaves every range is a status
+        for k in range(count):
+            here = arguments[k]
+            history.sense(observed, k, here)
+            c = control.advance(c, here)
+            given = here.dot(up) if blurred else here[..., 1:]
+            v = drive(given[:sensed_count], given[sensed_count:], 0.0 if signals.drive is None else signals.drive[k])
+            if signals.output is not None:
+                v = v + signals.output[k]
+            if floored:
+                v = np.maximum(v, run.floor)
+            if blurred:
+                v = v.dot(down)
+            v_all[k], x_all[k] = v, x
+            x = plant.advance(x, v, signals.forcing(v, k), observed[k + history.depth])
+            if not math.isfinite(x[0]):
+                done = k
+                break
+    if not plant.trusted(v_all[:done]):
+        return interval_collocation(run, times, mesh, stiff=True)
+    v_all, x_all, arguments = v_all[:done], x_all[:done], arguments[:done]
+    states = plant.states(x_all, v_all, signals.forcing(v_all, slice(done)))
+    table = np.concatenate([states, np.moveaxis(arguments, 1, 3)], axis=3)
+    return _trace(run, times, mesh, table, "completed" if done == count else "diverged")
+
+
+def _trace(run: Run, times: Array, mesh: FixedMesh, table: Array, status: str) -> Trace:
+    """The trace from the table of plant states, sensed signals and controller states at the points, (count, m, n + 1, n_signals)."""
+    form, n = run.form, mesh.degree
+    count, m = table.shape[:2]
+    if status == "diverged":
+        times = times[times < mesh.start + count * mesh.step]
+    still = times < mesh.start
+    k = np.clip(((times - mesh.start) / mesh.step).astype(int), 0, max(count - 1, 0))
+    within = times - mesh.start - k * mesh.step
+    piece = np.clip(np.searchsorted(mesh.edges, within, side="right") - 1, 0, m - 1)
+    places = np.clip((within - mesh.edges[piece]) / np.diff(mesh.edges)[piece], 0.0, 1.0)
+    at_rest = np.concatenate([run.initial[: form.n_plant], form.sensed_rows @ run.initial[: form.n_plant], run.initial[form.n_plant :]])
+    values = np.tile(at_rest, (len(times), 1))
+    if count:
+        moving = (evaluation(n, places)[:, None, :] @ table[k, piece])[:, 0]
+        values = np.where(still[:, None], values, moving)
+    sensed = values[:, form.n_plant : form.n_plant + form.n_sensed].T
+    controller = values[:, form.n_plant + form.n_sensed :]
+    output = run.controlled(sensed, controller.T, times)
+    level = run.silence_level(sensed, controller.T, times, output)
+    states = np.concatenate([values[:, : form.n_plant], controller], axis=1)
+    return Trace(
+        times, states, output, form.state_names, status, _error_estimate(run, table), find_silences(times, level),
+        "interval collocation",
+    )  # fmt: skip
+
+
+def _error_estimate(run: Run, table: Array) -> float:
+    """The unresolved part of the plant's states: their two highest Legendre coefficients against their size."""
+    if not table.size:
+        return math.inf
+    states = table[..., : run.form.n_plant]
+    tail = np.abs(np.einsum("kmps,pc->kmcs", states, tail_weights(table.shape[2] - 1))).max(axis=(0, 1, 2))
+    size = np.maximum(np.abs(states).max(axis=(0, 1, 2)), 1e-300)
+    return float((tail / size).max())
