@@ -45,7 +45,10 @@ function joinDrop(page) {
 const ARROWS = { ArrowLeft: [-1, 0], ArrowRight: [1, 0], ArrowUp: [0, 1], ArrowDown: [0, -1] };
 
 function joinKeys(page) {
-  document.getElementById("slot-map").addEventListener("keydown", (event) => {
+  const map = document.getElementById("slot-map");
+  // What is drawn inside cannot take the focus itself: a touch of the map gives it to the map, and the arrow keys work.
+  map.addEventListener("pointerdown", () => map.focus({ preventScroll: true, focusVisible: false }));
+  map.addEventListener("keydown", (event) => {
     const step = ARROWS[event.key];
     if (!step || event.ctrlKey || event.metaKey || event.altKey || event.target.id !== "slot-map") return;
     event.preventDefault();
