@@ -9,6 +9,7 @@ shortest delay, so that what is sensed is always in the past; inside an advance 
 from __future__ import annotations
 
 import heapq
+import itertools
 import math
 from dataclasses import dataclass
 
@@ -33,10 +34,10 @@ _MOST_ROUNDS = 40
 class ExactSettings:
     """How exact: the defaults give 1e-7 or better on the loops of this project."""
 
-    degree: int = 10
+    degree: int = 12
     highest_order: int = 3
     """Breaks are piece ends while the lowest derivative of the state that jumps there is of this order or lower; 0 for none at all."""
-    tolerance: float = 2e-8
+    tolerance: float = 1e-7
     """Largest unresolved share of a state in a piece."""
     locate_kinks: bool = True
     piece: float = 1.0
@@ -85,26 +86,26 @@ class _Breaks:
 def _linear_pieces(system: Array, forcing: Array, lengths: Array, start: Array, n: int) -> Array:
     """x' = M x + w on pieces in a row. M (m, n, s, s) or (s, s) and w (m, s, n) at the nodes; x at the points, (m, s, n + 1)."""
     m, size = forcing.shape[:2]
-    q = integration(n)
-    scaled = lengths[:, None, None] * q
+    scaled = lengths[:, None, None] * integration(n)
     if system.ndim == 2:
-        big = -(system[None, :, None, :, None] * scaled[:, None, :, None, :])
+        big = -system[:, None, :, None] * scaled[:, None, :, None, :]
     else:
-        big = -(np.moveaxis(system, 1, 3)[:, :, None] * scaled[:, None, :, None, :])
-    big = big.reshape(m, size * n, size * n)
-    diagonal = np.arange(size * n)
-    big[:, diagonal, diagonal] += 1.0
+        big = -system.transpose(0, 2, 3, 1)[:, :, None] * scaled[:, None, :, None, :]
+    unknowns = size * n
+    big = big.reshape(m, unknowns, unknowns)
+    big.reshape(m, -1)[:, :: unknowns + 1] += 1.0
     right = np.zeros((m, size, n, size + 1))
     for i in range(size):
         right[:, i, :, i] = 1.0
-    right[..., size] = forcing @ scaled.swapaxes(1, 2)
-    solved = np.linalg.solve(big, right.reshape(m, size * n, size + 1)).reshape(m, size, n, size + 1)
+    right[..., size] = forcing @ scaled.transpose(0, 2, 1)
+    solved = np.linalg.solve(big, right.reshape(m, unknowns, size + 1)).reshape(m, size, n, size + 1)
     values = np.empty((m, size, n + 1))
+    ends, gains = solved[:, :, -1, :size], solved[:, :, -1, size]
     x = start
     for i in range(m):
         values[i, :, 0] = x
-        values[i, :, 1:] = solved[i] @ np.append(x, 1.0)
-        x = values[i, :, -1]
+        x = ends[i].dot(x) + gains[i]
+    values[:, :, 1:] = (solved[..., :size] @ values[:, None, :, :1])[..., 0] + solved[..., size]
     return values
 
 
@@ -137,8 +138,7 @@ class _Path:
         gap = 1e-9 * self.advance_by
         inside = self.breaks.until(end, begin, gap)
         marks = [begin, *inside, end]
-        parts = [np.linspace(a, b, max(1, math.ceil((b - a) / self.longest)) + 1)[:-1] for a, b in zip(marks, marks[1:], strict=False)]
-        edges = np.append(np.concatenate(parts), end)
+        edges = np.array(_subdivided(marks, self.longest))
         kinks: list[float] = []
         kink_rounds = _MOST_KINK_ROUNDS if self.settings.locate_kinks else 0
         for _ in range(_MOST_ROUNDS):
@@ -173,9 +173,8 @@ class _Path:
         arguments = np.empty((form.n_sensed + form.n_control, *times.shape))
         arguments[: form.n_sensed] = sensed
         if form.n_control:
-            forcing = np.tensordot(form.control_by_sensed, sensed[..., 1:], axes=(1, 0)) + form.control_constant[:, None, None]
-            control = _linear_pieces(form.control, np.moveaxis(forcing, 0, 1), lengths[:, 0], self.c, n)
-            arguments[form.n_sensed :] = np.moveaxis(control, 1, 0)
+            forcing = form.control_by_sensed @ sensed[..., 1:].transpose(1, 0, 2) + form.control_constant[:, None]
+            arguments[form.n_sensed :] = _linear_pieces(form.control, forcing, lengths[:, 0], self.c, n).transpose(1, 0, 2)
         return inner, arguments
 
     def _kinks(self, edges: Array, times: Array, arguments: Array) -> list[float]:
@@ -242,15 +241,14 @@ class _Path:
         v = run.controlled(given[: form.n_sensed], given[form.n_sensed :], nodes)
         forcing = v[:, None, :] * form.input_vector[:, None] + form.constant[:, None]
         if run.used_channels:
-            by_output = run.plant_push_by_output(nodes) * v
-            forcing = forcing + _pieces_first(by_output) + _pieces_first(run.plant_push(nodes))
+            forcing = forcing + _pieces_first(run.plant_push_by_output(nodes)) * v[:, None, :] + _pieces_first(run.plant_push(nodes))
         system = form.plant + v[..., None, None] * form.plant_by_output if np.any(form.plant_by_output) else form.plant
         return _linear_pieces(system, forcing, np.diff(edges), self.x, self.n)
 
     def _unresolved(self, edges: Array, states: Array, arguments: Array) -> Array:
         """Pieces to halve: those whose two highest coefficients are too large, unless they are already very short."""
         form = self.run.form
-        control = np.moveaxis(arguments[form.n_sensed :], 0, 1)
+        control = arguments[form.n_sensed :].transpose(1, 0, 2)
         everything = np.concatenate([states, control], axis=1)
         self.size = np.maximum(self.size, np.abs(everything).max(axis=(0, 2)))
         tail = (np.abs(everything @ tail_weights(self.n)).max(axis=2) / self.size).max(axis=1)
@@ -262,11 +260,21 @@ class _Path:
 
     def _accept(self, edges: Array, states: Array, arguments: Array) -> None:
         form = self.run.form
-        self.history.append(edges, np.moveaxis(np.tensordot(self.rows, states, axes=(1, 1)), 0, 2))
+        self.history.append(edges, (self.rows @ states).transpose(0, 2, 1))
         self.x = states[-1, :, -1]
         self.c = arguments[form.n_sensed :, -1, -1]
         self.edges.append(edges[:-1])
-        self.tables.append(np.concatenate([states, np.moveaxis(arguments, 0, 1)], axis=1))
+        self.tables.append(np.concatenate([states, arguments.transpose(1, 0, 2)], axis=1))
+
+
+def _subdivided(marks: list[float], longest: float) -> list[float]:
+    """The marks and, between them, equally spaced edges so that no piece is longer than `longest`."""
+    edges = [marks[0]]
+    for a, b in itertools.pairwise(marks):
+        count = max(1, math.ceil((b - a) / longest - 1e-9))
+        edges += [a + (b - a) * i / count for i in range(1, count)]
+        edges.append(b)
+    return edges
 
 
 def _pieces_first(signal: Array | float) -> Array | float:
@@ -276,26 +284,26 @@ def _pieces_first(signal: Array | float) -> Array | float:
 def _refine(coefficients: Array, low: Array, high: Array) -> Array:
     """Roots of Chebyshev series on [0, 1], each bracketed: Newton steps, halving where a step leaves the bracket."""
     orders = np.arange(coefficients.shape[1])
-    slopes = np.polynomial.chebyshev.chebder(coefficients, axis=1)
-    start = _series(coefficients, low, orders)
+    both = np.stack([coefficients, coefficients])
+    both[1, :, :-1] = 2.0 * np.polynomial.chebyshev.chebder(coefficients, axis=1)
+    both[1, :, -1] = 0.0
+    rising = _series(both, high, orders)[0] > 0.0
     place = 0.5 * (low + high)
     for _ in range(60):
-        value = _series(coefficients, place, orders)
-        same = value * start > 0.0
-        low, high = np.where(same, place, low), np.where(same, high, place)
-        slope = 2.0 * _series(slopes, place, orders[:-1])
-        with np.errstate(divide="ignore", invalid="ignore"):
-            following = place - value / slope
+        value, slope = _series(both, place, orders)
+        above = (value > 0.0) == rising
+        low, high = np.where(above, low, place), np.where(above, place, high)
+        following = place - value / np.where(slope == 0.0, 1.0, slope)
         following = np.where((following > low) & (following < high), following, 0.5 * (low + high))
-        done = np.abs(following - place).max() < 1e-13
+        moved = np.abs(following - place).max()
         place = following
-        if done:
+        if moved < 1e-11:
             break
     return place
 
 
 def _series(coefficients: Array, place: Array, orders: Array) -> Array:
-    return (coefficients * np.cos(np.arccos(2.0 * place - 1.0)[:, None] * orders)).sum(axis=1)
+    return (coefficients * np.cos(np.arccos(2.0 * place - 1.0)[:, None] * orders)).sum(axis=-1)
 
 
 def exact_path(run: Run, times: Array, rate: float, start: float = 0.0, settings: ExactSettings | None = None) -> Trace:

@@ -21,10 +21,12 @@ from lagscape.engine.run import Run
 from lagscape.engine.trace import Trace, find_silences
 from lagscape.loops.protocol import Array
 
-__all__ = ["FixedMesh", "interval_collocation", "mesh_for"]
+__all__ = ["FixedMesh", "holds_every_break", "interval_collocation", "mesh_for"]
 
 _OVERSAMPLES = 32
 _MOST_EXTRA_PIECES = 8
+_SAME_PLACE = 1e-6
+"""Piece ends closer than this share of a step are one."""
 
 
 @dataclass(frozen=True)
@@ -42,23 +44,38 @@ class FixedMesh:
 
 
 def mesh_for(run: Run, rate: float, pieces_per_rate: float, degree: int, start: float) -> FixedMesh:
-    """Equal pieces of about 1 / (rate x pieces_per_rate) s, and the breaks of the run folded into a step as further piece ends."""
+    """Equal pieces of about 1 / (rate x pieces_per_rate) s, and the breaks of the run folded into a step as further piece ends.
+
+    With noise the step is a whole number of holds or a whole fraction of one, so that every jump falls on a piece end.
+    """
     step = run.form.delays[0]
-    count = max(1, math.ceil(step * rate * pieces_per_rate))
-    edges = np.linspace(0.0, step, count + 1)
-    delays = [delay for delay in run.form.delays if delay > step]
     breaks = np.concatenate([[start], run.breaks[run.breaks > start]])
-    # First what jumps, then the images under the longer delays, which are smoother; many breaks (noise) are left to the estimate.
-    if len(breaks) > _MOST_EXTRA_PIECES:
-        breaks = breaks[:1]
-    extra = np.concatenate([breaks, *[breaks + delay for delay in delays]])[: 2 * _MOST_EXTRA_PIECES]
-    folded = np.mod(extra - start, step)
-    near = 1e-6 * step
-    for place in folded:
-        gap = np.abs(edges - place).min()
-        if gap > near:
-            edges = np.sort(np.append(edges, place))
-    return FixedMesh(start, step, edges, degree)
+    holds = [item.span for item in run.disturbances if item.kind == "noise"]
+    marks = np.array([0.0, 1.0])
+    if holds:
+        whole = math.floor(step / holds[0] + 1e-9)
+        step = holds[0] * whole if whole else holds[0] / math.ceil(holds[0] / step - 1e-9)
+        marks = np.arange(max(whole, 1) + 1) / max(whole, 1)
+        shift = np.mod(min(item.start for item in run.disturbances if item.kind == "noise") - start, step)
+        marks = np.unique(np.concatenate([marks, np.mod(marks + shift / step, 1.0)]))
+    # First what jumps, then the images under the other delays, which are smoother.
+    images = [breaks[:_MOST_EXTRA_PIECES] + delay for delay in run.form.delays if delay % step > 0.0]
+    extra = np.concatenate([breaks, *images])
+    for place in np.mod(extra - start, step)[: 4 * _MOST_EXTRA_PIECES if holds else 2 * _MOST_EXTRA_PIECES] / step:
+        if np.abs(marks - place).min() > _SAME_PLACE:
+            marks = np.sort(np.append(marks, place))
+    edges = [0.0]
+    for a, b in zip(marks[:-1].tolist(), marks[1:].tolist(), strict=True):
+        count = max(1, math.ceil((b - a) * step * rate * pieces_per_rate - 1e-9))
+        edges += [step * (a + (b - a) * i / count) for i in range(1, count + 1)]
+    return FixedMesh(start, step, np.array(edges), degree)
+
+
+def holds_every_break(run: Run, mesh: FixedMesh) -> bool:
+    """Whether every break of the disturbances after the mesh's start falls on a piece end."""
+    places = np.mod(run.breaks[run.breaks > mesh.start] - mesh.start, mesh.step)
+    near = np.abs(places[:, None] - mesh.edges).min(axis=1, initial=mesh.step)
+    return bool(np.all(near <= 2.0 * _SAME_PLACE * mesh.step))
 
 
 class _SensedHistory:

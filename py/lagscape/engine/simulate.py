@@ -16,8 +16,8 @@ from typing import Any, Literal
 import numpy as np
 
 from lagscape.engine.disturbance import Disturbance, check_channels
-from lagscape.engine.exact_path import exact_path
-from lagscape.engine.interval_collocation import interval_collocation, mesh_for
+from lagscape.engine.exact_path import ExactSettings, exact_path
+from lagscape.engine.interval_collocation import holds_every_break, interval_collocation, mesh_for
 from lagscape.engine.run import Run
 from lagscape.engine.runge_kutta import runge_kutta, step_for
 from lagscape.engine.trace import Trace, output_grid
@@ -32,6 +32,9 @@ DRAG_ERROR = 5e-4
 """Above this error estimate a drag trace is refined, then flagged."""
 RELEASE_ERROR = 1e-6
 """Above this error estimate a release trace is flagged."""
+
+_ROUGH = ExactSettings(degree=8, highest_order=1, tolerance=1e-4)
+"""For a drag with more breaks than a fixed mesh can hold."""
 
 _MOST_REFINEMENTS = 3
 _MOST_EXACT_STEPS = 2500
@@ -151,11 +154,14 @@ def _dispatch(run: Run, times: Array, purpose: str) -> Trace:
 
 
 def _on_a_fixed_mesh(run: Run, times: Array, rate: float, start: float) -> Trace:
-    """Interval collocation, with twice the pieces where the estimate asks for it."""
+    """Interval collocation, with twice the pieces where the estimate asks for it; a rough exact path where breaks do not fit."""
     kinked = run.form.drive.has_kink
     degree, pieces = (8, 1.25) if kinked else (12, 1.0)
     for _ in range(_MOST_REFINEMENTS):
-        trace = interval_collocation(run, times, mesh_for(run, rate, pieces, degree, start))
+        mesh = mesh_for(run, rate, pieces, degree, start)
+        if not holds_every_break(run, mesh):
+            return exact_path(run, times, rate, start, _ROUGH)
+        trace = interval_collocation(run, times, mesh)
         if trace.status != "completed" or trace.error_estimate <= DRAG_ERROR:
             return trace
         pieces *= 2.0
