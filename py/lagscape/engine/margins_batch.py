@@ -16,13 +16,15 @@ import numpy as np
 from lagscape.engine.open_loop import OpenLoop, open_loop
 from lagscape.loops.protocol import Array, DriveForm, Rest
 
-__all__ = ["MarginsBatch", "margins_batch"]
+__all__ = ["GainCrossings", "MarginsBatch", "gain_crossings", "margins_batch", "margins_of"]
 
 _CHUNK = 2048
 """Members worked on at once, so that the work arrays stay in the cache."""
 _LEAST_FREQUENCIES, _MOST_FREQUENCIES = 20, 400
 _STEPS_PER_HALF_TURN = 3.0
 _ABOUT_RESONANCE = np.array([-3.0, -1.0, -0.4, 0.0, 0.4, 1.0, 3.0])[:, None]
+_KINDS = (bool, int, float, bool, float, bool, float, float, bool, float, float)
+"""Of the columns of `MarginsBatch`, in order."""
 _TURN = 2.0 * math.pi
 
 
@@ -32,6 +34,8 @@ class MarginsBatch:
 
     stable: Array
     """bool; by Nyquist's criterion."""
+    unstable_roots: Array
+    """Roots with positive real part, a pair counted twice."""
     loop_gain: Array
     """|L| at the deciding phase crossover; 0 where there is none."""
     has_phase_crossover: Array
@@ -69,7 +73,11 @@ def margins_batch(form: DriveForm, rest: Rest, opened: OpenLoop | None = None, g
     The dominant oscillation is the root that belongs to the deciding phase crossover, as in `roots`. Where several pairs are unstable
     it is in rare cases not the rightmost; its sign is always right, because it is checked against Nyquist's count.
     """
-    opened = open_loop(form, rest) if opened is None else opened
+    return margins_of(open_loop(form, rest) if opened is None else opened, growth)
+
+
+def margins_of(opened: OpenLoop, growth: bool = True) -> MarginsBatch:
+    """The same as `margins_batch` from the open loops themselves."""
     shape = opened.batch
     members = math.prod(shape)
     flat = OpenLoop(
@@ -77,7 +85,7 @@ def margins_batch(form: DriveForm, rest: Rest, opened: OpenLoop | None = None, g
         tuple(np.broadcast_to(np.asarray(delay, dtype=float), shape).reshape(members) for delay in opened.delays),
         tuple((np.broadcast_to(p, shape).reshape(members), np.broadcast_to(q, shape).reshape(members)) for p, q in opened.quadratics),
     )
-    columns = [np.zeros(members, dtype=bool if index in (0, 2, 4, 7) else float) for index in range(10)]
+    columns = [np.zeros(members, dtype=kind) for kind in _KINDS]
     careful = 0
     end = _search_end(flat)
     # Members that need as many frequencies as each other go together, so that one odd member does not slow them all.
@@ -119,7 +127,7 @@ def _chunk(opened: OpenLoop, end: Array, growth: bool, density: float = 1.0) -> 
     has_phase &= feedback
 
     has_gain, phase_margin, delay_margin = _lags(opened, frequency, response, stable)
-    columns = [stable, loop_gain, has_phase, crossover, has_gain & feedback, phase_margin, delay_margin]
+    columns = [stable, unstable, loop_gain, has_phase, crossover, has_gain & feedback, phase_margin, delay_margin]
     if not growth:
         return [*columns, np.zeros(members, dtype=bool), np.zeros(members), np.zeros(members)], 0
     has_root, root, redone = _dominant(opened, has_phase, crossover, stable)
@@ -254,19 +262,34 @@ def _routh_stable(denominator: Array) -> Array:
     return positive
 
 
-def _lags(opened: OpenLoop, frequency: Array, response: np.ndarray, stable: Array) -> tuple[Array, Array, Array]:
-    members = opened.coefficients.shape[2]
+@dataclass(frozen=True)
+class GainCrossings:
+    """Every place where |L(i w)| = 1, over all members of a one-axis batch."""
+
+    member: Array
+    frequency: Array
+    """rad/s."""
+    lag_left: Array
+    """rad in (-pi, pi]: pi + arg L."""
+    falling: Array
+    """bool: |L| falls with frequency, so that more delay moves a root pair to the right."""
+
+
+def gain_crossings(opened: OpenLoop) -> GainCrossings:
+    """All gain crossovers of the members of a one-axis batch."""
+    frequency = _frequencies(opened, _search_end(opened), 1.0)
+    return _close_gain(opened, frequency, opened.response(frequency))
+
+
+def _close_gain(opened: OpenLoop, frequency: Array, response: np.ndarray) -> GainCrossings:
     size = response.real**2 + response.imag**2
     above = size > 1.0
     row, who = np.nonzero(above[1:] != above[:-1])
-    has = np.zeros(members, dtype=bool)
-    phase_margin, delay_margin = np.zeros(members), np.zeros(members)
+    falls = above[row, who]
     if not who.size:
-        return has, phase_margin, delay_margin
-    has[who] = True
+        return GainCrossings(who, np.zeros(0), np.zeros(0), falls)
     few = opened.member(who)
     low, high = frequency[row, who], frequency[row + 1, who]
-    falls = above[row, who]
     level = np.log(size[row, who])
     share = level / (level - np.log(size[row + 1, who]))
     w = low * (high / low) ** share
@@ -275,11 +298,22 @@ def _lags(opened: OpenLoop, frequency: Array, response: np.ndarray, stable: Arra
         w, done = _inside(w, np.log(np.abs(value)) / (slope / value).imag, low, high)
         if done:
             break
-    lag = np.angle(-few.response(w[None])[0])
+    return GainCrossings(who, w, np.angle(-few.response(w[None])[0]), falls)
+
+
+def _lags(opened: OpenLoop, frequency: Array, response: np.ndarray, stable: Array) -> tuple[Array, Array, Array]:
+    members = opened.coefficients.shape[2]
+    found = _close_gain(opened, frequency, response)
+    who, w, lag = found.member, found.frequency, found.lag_left
+    has = np.zeros(members, dtype=bool)
+    phase_margin, delay_margin = np.zeros(members), np.zeros(members)
+    if not who.size:
+        return has, phase_margin, delay_margin
+    has[who] = True
     ahead = np.mod(lag, _TURN)
     calm = stable[who]
     # Of an unstable member only crossings with falling gain can give the roots back.
-    back = np.where(falls, np.mod(-lag, _TURN), 0.0)
+    back = np.where(found.falling, np.mod(-lag, _TURN), 0.0)
     for target, missing in ((phase_margin, 1.0), (delay_margin, w)):
         smallest = np.full(members, np.inf)
         np.minimum.at(smallest, who[calm], (ahead / missing)[calm])
