@@ -213,8 +213,9 @@ def _lobes(
     """|G| rises somewhere: several crossings for some sensitivities. Refined until smooth, and each point tested for being an edge."""
     width, height = delays[1] - delays[0], math.log(sensitivities[1] / sensitivities[0])
     curves: list[BoundaryCurve] = []
+    share = np.array([0.25, 0.5, 0.75])[:, None]
     for turns in range(-1, 4):
-        w = frequency
+        w, edge, fresh = frequency, np.zeros(frequency.size, dtype=bool), np.ones(frequency.size, dtype=bool)
         for last in (False, False, False, True):
             response = undelayed.response(w)
             sensitivity = own[0] / np.abs(response)
@@ -222,14 +223,17 @@ def _lobes(
             visible = (at >= delays[0]) & (at <= delays[1]) & (sensitivity >= sensitivities[0]) & (sensitivity <= sensitivities[1])
             if not visible.any():
                 break
-            edge = _is_edge(opened, sensitivity / own[0], at - own[1], visible)
+            edge |= _is_edge(opened, sensitivity / own[0], at - own[1], visible & fresh)
             if last:
                 curves += _runs(edge, sensitivity, at, 2.0 * math.pi / w)
                 break
             step = np.hypot(np.diff(at) / width, np.diff(np.log(sensitivity)) / height)
             wanted = (edge[1:] | edge[:-1]) & (step > 1.5 / points) | (edge[1:] != edge[:-1])
-            share = np.array([0.25, 0.5, 0.75])[:, None]
-            w = np.sort(np.concatenate([w, (w[:-1] + share * np.diff(w))[:, wanted].ravel()]))
+            more = (w[:-1] + share * np.diff(w))[:, wanted].ravel()
+            order = np.argsort(np.concatenate([w, more]))
+            fresh = order >= w.size
+            w = np.concatenate([w, more])[order]
+            edge = np.concatenate([edge, np.zeros(more.size, dtype=bool)])[order]
     return curves
 
 
@@ -242,6 +246,9 @@ def _runs(keep: Array, sensitivity: Array, delay: Array, period: Array) -> list[
 def _is_edge(opened: OpenLoop, factor: Array, shift: Array, visible: Array) -> Array:
     """Where stability differs a little to either side in sensitivity."""
     where = np.flatnonzero(visible)
+    edge = np.zeros(factor.size, dtype=bool)
+    if not where.size:
+        return edge
     scale = np.concatenate([factor[where] * (1.0 - _NUDGE), factor[where] * (1.0 + _NUDGE)])
     coefficients = np.repeat(opened.coefficients[:, :, None], scale.size, axis=2)
     coefficients[:, 1:] *= scale
@@ -252,7 +259,6 @@ def _is_edge(opened: OpenLoop, factor: Array, shift: Array, visible: Array) -> A
         tuple((np.full(scale.size, p), np.full(scale.size, q)) for p, q in opened.quadratics),
     )
     stable = margins_of(many, growth=False).stable
-    edge = np.zeros(factor.size, dtype=bool)
     edge[where] = stable[: where.size] != stable[where.size :]
     return edge
 

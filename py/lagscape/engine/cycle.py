@@ -15,6 +15,7 @@ from typing import Any
 import numpy as np
 
 from lagscape.engine.harmonic import Balance, Harmonics, prepare, solve
+from lagscape.engine.harmonic_single import single_balance
 from lagscape.engine.margins import Margins, margins
 from lagscape.loops.protocol import Array, DriveForm, Rest
 
@@ -23,6 +24,8 @@ __all__ = ["Cycle", "CycleStatus", "limit_cycle"]
 _ORDER = 16
 _FIRST_ORDER = 6
 _DRAWN = 256
+_FINE = 1024
+"""Samples a period for extremes and silence."""
 _SMALLEST = 1e-7
 """A solution whose first harmonic is under this share of the guess's has fallen back to rest."""
 
@@ -95,24 +98,51 @@ def limit_cycle(
     known = margins(form, rest) if known is None else known
     if known.stable:
         return Cycle(CycleStatus.SETTLES)
-    balance = prepare(form, rest)
+    solver = _Solver(form, rest)
     if start is not None and start.harmonics is not None:
-        found = _settle(balance, start.harmonics.resized(order))
+        found = solver.settle(start.harmonics.resized(order))
         if found is not None:
-            return describe_cycle(form, balance, *found)
+            return solver.describe(*found)
     if known.phase_crossover_frequency is None:
         return Cycle(CycleStatus.NOT_FOUND)
-    found = _from_describing_function(form, rest, balance, known.phase_crossover_frequency, order)
+    found = _from_describing_function(solver, known.phase_crossover_frequency, order)
     if found is None:
-        found = _from_boundary(balance, known, order)
-    return Cycle(CycleStatus.NOT_FOUND) if found is None else describe_cycle(form, balance, *found)
+        found = _from_boundary(solver, known, order)
+    return Cycle(CycleStatus.NOT_FOUND) if found is None else solver.describe(*found)
 
 
-def _settle(balance: Balance, guess: Harmonics, most: int = 12) -> tuple[Harmonics, float] | None:
-    solved = solve(balance, guess, most=most)
-    if not solved.converged[0] or abs(solved.harmonics.force[0, 0, 1]) < _SMALLEST * abs(guess.force[0, 0, 1]):
-        return None
-    return solved.harmonics, float(solved.residual[0])
+class _Solver:
+    """The balance equations of one loop in the quick form if it has one, else in the general form."""
+
+    def __init__(self, form: DriveForm, rest: Rest) -> None:
+        self.form, self.rest = form, rest
+        self.single = single_balance(form, rest)
+        self._general: Balance | None = None
+
+    @property
+    def general(self) -> Balance:
+        if self._general is None:
+            self._general = prepare(self.form, self.rest)
+        return self._general
+
+    def settle(self, guess: Harmonics, most: int = 12) -> tuple[Harmonics, float] | None:
+        """The solution that Newton's steps reach from `guess` and its imbalance; None where they fail or fall back to rest."""
+        if self.single is not None:
+            found = self.single.solve(guess, most)
+        else:
+            solved = solve(self.general, guess, most=most)
+            found = (solved.harmonics, float(solved.residual[0])) if solved.converged[0] else None
+        if found is None or abs(found[0].force[0, 0, 1]) < _SMALLEST * abs(guess.force[0, 0, 1]):
+            return None
+        return found
+
+    def describe(self, harmonics: Harmonics, residual: float) -> Cycle:
+        """The figures of a solved cycle."""
+        if self.single is not None:
+            states, sensed, means = self.single.curves(harmonics, _FINE)
+        else:
+            states, sensed, means = self.general.curves(harmonics, _FINE)
+        return _describe(self.form, harmonics, residual, states, sensed, means)
 
 
 def first_harmonic_gain(balance: Balance, omega: float, amplitudes: Array) -> np.ndarray:
@@ -130,26 +160,25 @@ def first_harmonic_gain(balance: Balance, omega: float, amplitudes: Array) -> np
     return np.fft.fft(product, axis=1)[:, 1] / 32 / amplitudes
 
 
-def _from_describing_function(
-    form: DriveForm, rest: Rest, balance: Balance, omega: float, order: int
-) -> tuple[Harmonics, float] | None:
-    unit = float(np.max(np.abs(balance.level[0]))) * max(abs(float(balance.output_rest[0])), 1e-3)
+def _from_describing_function(solver: _Solver, omega: float, order: int) -> tuple[Harmonics, float] | None:
+    copies = prepare(solver.form, solver.rest, copies=73)
+    unit = float(np.max(np.abs(copies.level[0]))) * max(abs(float(copies.output_rest[0])), 1e-3)
     amplitudes = unit * np.geomspace(1e-5, 1e4, 73)
     with np.errstate(all="ignore"):
-        gain = first_harmonic_gain(prepare(form, rest, copies=73), omega, amplitudes).real
+        gain = first_harmonic_gain(copies, omega, amplitudes).real
     passes = np.flatnonzero((gain[:-1] >= 1.0) & (gain[1:] < 1.0))
     if not passes.size:
         return None
     amplitude = amplitudes[passes[0]]
     factors = np.array([1.0, 0.6, 1.6, 0.3, 2.6])
-    several = prepare(form, rest, copies=factors.size)
-    force = np.zeros((factors.size, len(balance.rows), _FIRST_ORDER + 1), dtype=complex)
+    several = prepare(solver.form, solver.rest, copies=factors.size)
+    force = np.zeros((factors.size, len(several.rows), _FIRST_ORDER + 1), dtype=complex)
     force[:, 0, 1] = amplitude * factors
     solved = solve(several, Harmonics(force, np.full(factors.size, omega)), most=20, tolerance=1e-6)
     alive = solved.converged & (np.abs(solved.harmonics.force[:, 0, 1]) > 1e-3 * amplitude)
     for index in np.flatnonzero(alive).tolist():
         guess = solved.harmonics.member(slice(index, index + 1)).resized(order)
-        found = _settle(balance, _rotated(guess), most=20)
+        found = solver.settle(_rotated(guess), most=20)
         if found is not None:
             return found
     return None
@@ -162,14 +191,14 @@ def _rotated(harmonics: Harmonics) -> Harmonics:
     return Harmonics(harmonics.force * turn, harmonics.omega)
 
 
-def _from_boundary(balance: Balance, known: Margins, order: int) -> tuple[Harmonics, float] | None:
-    for point in follow_branch(balance, known, most=80):
+def _from_boundary(solver: _Solver, known: Margins, order: int) -> tuple[Harmonics, float] | None:
+    for point in follow_branch(solver.general, known, most=80):
         previous, following = point
         if previous.gain < 1.0 <= following.gain:
             share = (1.0 - previous.gain) / (following.gain - previous.gain)
             force = previous.harmonics.force + share * (following.harmonics.force - previous.harmonics.force)
             omega = previous.harmonics.omega + share * (following.harmonics.omega - previous.harmonics.omega)
-            return _settle(balance, Harmonics(force, omega).resized(order), most=20)
+            return solver.settle(Harmonics(force, omega).resized(order), most=20)
     return None
 
 
@@ -214,20 +243,12 @@ def follow_branch(balance: Balance, known: Margins, order: int = 8, most: int = 
         previous, kappa = point, point.gain
 
 
-def describe_cycle(form: DriveForm, balance: Balance, harmonics: Harmonics, residual: float) -> Cycle:
-    """The figures of a solved cycle."""
+def _describe(form: DriveForm, harmonics: Harmonics, residual: float, states: Array, sensed: Array, means: Array) -> Cycle:
     n = form.n_plant
-    fine = 1024
-    plant, control = balance._plant_control(harmonics)
-    spectrum = np.concatenate([plant, control], axis=1)[0]
-    rest = balance.state_rest[0]
-    states = np.fft.irfft(spectrum, fine, axis=1) * fine + rest[:, None]
-    s = 1j * harmonics.omega[:, None] * np.arange(harmonics.order + 1)
-    sensed = np.fft.irfft(balance._delayed(s, plant)[0], fine, axis=1) * fine + balance.sensed_rest[0][:, None]
     output = np.asarray(form.drive.value(sensed, states[n:]))
     silent = _silent_share(form, sensed, states[n:], output)
     period = 2.0 * math.pi / float(harmonics.omega[0])
-    every = np.append(np.arange(0, fine, fine // _DRAWN), 0)
+    every = np.append(np.arange(0, _FINE, _FINE // _DRAWN), 0)
     both = np.concatenate([states, output[None]])
     amplitude = _extreme(both) + _extreme(-both)
     force = np.abs(harmonics.force[0])
@@ -237,7 +258,7 @@ def describe_cycle(form: DriveForm, balance: Balance, harmonics: Harmonics, resi
         output_amplitude=float(amplitude[-1]),
         output_mean=float(np.mean(output)),
         state_amplitudes=amplitude[:-1],
-        state_means=spectrum[:, 0].real + rest,
+        state_means=means,
         silent_fraction=silent,
         duty_ratio=1.0 - silent,
         times=np.linspace(0.0, period, _DRAWN + 1),
@@ -266,10 +287,11 @@ def _silent_share(form: DriveForm, sensed: Array, control: Array, output: Array)
         return 0.0
     # Where the law has a corner its smooth switch crosses zero cleanly; the clipped signal itself only touches.
     height = np.asarray(form.drive.switch(sensed, control)) if form.drive.has_kink and level == 0.0 else output - level
-    following = np.roll(height, -1)
     here = height <= 0.0
-    crosses = here != (following <= 0.0)
-    with np.errstate(divide="ignore", invalid="ignore"):
-        share = np.abs(height) / (np.abs(height) + np.abs(following))
-    part = np.where(crosses, np.where(here, share, 1.0 - share), here.astype(float))
-    return float(np.mean(part))
+    silent = float(np.count_nonzero(here))
+    for i in np.flatnonzero(here != np.roll(here, -1)).tolist():
+        # The sample counts for the step that follows it; the straight line says how much of that step is silent.
+        left, right = abs(float(height[i])), abs(float(height[(i + 1) % height.size]))
+        share = left / (left + right) if left + right else 0.0
+        silent += share - 1.0 if here[i] else 1.0 - share
+    return silent / height.size

@@ -24,8 +24,8 @@ from lagscape.loops.protocol import Array, Drive, DriveForm, Rest
 
 __all__ = ["Balance", "Harmonics", "Solved", "prepare", "samples_for", "solve"]
 
-_SMALLEST_POLE = 1e-7
-"""M counts as singular if its smallest singular value is under this share of its largest: then the loop has an integrator."""
+SMALLEST_POLE = 1e-9
+"""M counts as singular if its smallest singular value is under this share of its size and N's together: then the loop has an integrator."""
 
 
 @dataclass(frozen=True)
@@ -109,10 +109,15 @@ class Balance:
     def with_gain(self, gain: Array) -> Balance:
         return replace(self, gain=np.broadcast_to(np.asarray(gain, dtype=float), (self.size,)))
 
-    def states(self, harmonics: Harmonics) -> np.ndarray:
-        """Harmonics of the deviations of plant and controller states, (B, n + m, H + 1) complex."""
+    def curves(self, harmonics: Harmonics, samples: int, member: int = 0) -> tuple[Array, Array, Array]:
+        """States (n_states, samples), sensed signals (n_sensed, samples) and mean states (n_states,) of one member over a period."""
         plant, control = self._plant_control(harmonics)
-        return np.concatenate([plant, control], axis=1)
+        s = 1j * harmonics.omega[:, None] * np.arange(harmonics.order + 1)
+        spectrum = np.concatenate([plant, control], axis=1)[member]
+        rest = self.state_rest[member]
+        states = np.fft.irfft(spectrum, samples, axis=1) * samples + rest[:, None]
+        sensed = np.fft.irfft(self._delayed(s, plant)[member], samples, axis=1) * samples + self.sensed_rest[member][:, None]
+        return states, sensed, spectrum[:, 0].real + rest
 
     def _plant_control(self, harmonics: Harmonics) -> tuple[np.ndarray, np.ndarray]:
         s = 1j * harmonics.omega[:, None] * np.arange(harmonics.order + 1)
@@ -351,7 +356,8 @@ def prepare(form: DriveForm, rest: Rest, copies: int | None = None) -> Balance:
     level = np.einsum("bin,bn->bi", by_output[:, chosen], state[:, :n]) + push[:, chosen]
     held = output.copy()
     sizes = np.linalg.svd(matrix + held[:, None, None] * by_output, compute_uv=False)
-    held = np.where(sizes[:, -1] < _SMALLEST_POLE * sizes[:, 0], held + 1.0, held)
+    scale = sizes[:, 0] + np.sqrt(np.sum(by_output**2, axis=(1, 2)))
+    held = np.where(sizes[:, -1] < SMALLEST_POLE * scale, held + 1.0, held)
     return Balance(
         plant=matrix + held[:, None, None] * by_output,
         rows=rows,

@@ -22,7 +22,7 @@ import numpy as np
 from lagscape.errors import InvalidInputError
 from lagscape.loops.protocol import Array, DriveForm, Rest
 
-__all__ = ["OpenLoop", "open_loop"]
+__all__ = ["OpenLoop", "open_loop", "resolvent"]
 
 
 @dataclass(frozen=True)
@@ -217,8 +217,8 @@ def open_loop(form: DriveForm, rest: Rest) -> OpenLoop:
         _sum(entry, _dot(by_row, state))
         for entry, by_row in zip(_elements(form.input_vector), by_output, strict=True)
     ]
-    plant_determinant, plant_adjugate = _resolvent(plant)
-    control_determinant, control_adjugate = _resolvent([_elements(row) for row in form.control])
+    plant_determinant, plant_adjugate = resolvent(plant)
+    control_determinant, control_adjugate = resolvent([_elements(row) for row in form.control])
     inputs = [_elements(row) for row in form.control_by_sensed]
 
     answer = [_vector_product(matrix, push) for matrix in plant_adjugate]
@@ -297,7 +297,7 @@ def _polynomial_product(a: list[Any], b: list[Any]) -> list[Any]:
     return product
 
 
-def _resolvent(matrix: list[list[Any]]) -> tuple[list[Any], list[list[list[Any]]]]:
+def resolvent(matrix: list[list[Any]]) -> tuple[list[Any], list[list[list[Any]]]]:
     """det(sI - M) as coefficients from the highest power down, and adj(sI - M) as matrices of the same powers, one fewer."""
     size = len(matrix)
     determinant: list[Any] = [1.0]
