@@ -41,6 +41,9 @@ FORMAT = "lagscape-case"
 LARGEST_FILE_BYTES = 65536
 """A case file is a few kilobytes; anything longer is not read."""
 
+MOST_BRACKETS = 300
+"""A case holds some forty objects and lists; more opening brackets than this are not read."""
+
 _FIELDS = ("format", "version", "loop", "starting_case", "numbers", "choices", "levers", "disturbance")
 
 
@@ -90,12 +93,13 @@ def parse_json(text: str | bytes) -> Any:
         plain = text.decode("utf-8") if isinstance(text, bytes) else text
     except UnicodeDecodeError:
         raise CaseFormatError("The file is not UTF-8 text, so it is not a case file.") from None
+    # Deep nesting overflows the browser's stack, which ends the runtime instead of raising RecursionError: refused before parsing.
+    if plain.count("[") + plain.count("{") > MOST_BRACKETS:
+        raise CaseFormatError("The case is not a case file: it holds far more objects and lists than a case has.")
     try:
         return json.loads(plain.removeprefix("\ufeff"), object_pairs_hook=_object, parse_constant=_refuse_constant, parse_int=_whole)
     except json.JSONDecodeError as error:
         raise CaseFormatError(f"The case is not JSON: {error.msg.lower()} at line {error.lineno}, column {error.colno}.") from None
-    except RecursionError:
-        raise CaseFormatError("The case is not a case file: it is nested too deeply.") from None
 
 
 def case_to_document(case: Case) -> dict[str, Any]:
