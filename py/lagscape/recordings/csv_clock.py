@@ -11,7 +11,7 @@ import numpy as np
 
 from lagscape.recordings.decimals import decimals, gather
 
-__all__ = ["clock_seconds", "clock_column", "unroll_midnights"]
+__all__ = ["clock_column", "clock_seconds", "unroll_midnights"]
 
 _DAY_S = 86400.0
 _CLOCK = re.compile(

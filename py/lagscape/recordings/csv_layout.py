@@ -171,7 +171,7 @@ def _header_above(lines: list[str], first: int, separator: str, n_columns: int) 
     fits = [len(fields) in (n_columns, n_columns - 1) and not any(is_number(f) for f in fields) for fields in candidates]
     if len(candidates) == 2 and all(fits) and len(candidates[0]) == len(candidates[1]) and _looks_like_units(candidates[0]):
         return candidates[1], candidates[0], before[:-2]
-    if fits[0] or n_columns == 2 * len(candidates[0]) and not any(is_number(f) for f in candidates[0]):
+    if fits[0] or (n_columns == 2 * len(candidates[0]) and not any(is_number(f) for f in candidates[0])):
         return candidates[0], [], before[:-1]
     if len(candidates[0]) == n_columns:
         # Names such as "1" and "2" are names where a line of plain text would not have as many fields.
@@ -213,7 +213,7 @@ def _role(column: list[str]) -> str:
     carrying = sum(re.match(r"[+-]?[\d.,]", field) is not None for field in filled)
     if clocks > 0.5 * len(filled):
         return "clock"
-    return "number" if numbers >= 0.3 * len(filled) or carrying > 0.9 * len(filled) and numbers > 0 else "text"
+    return "number" if numbers >= 0.3 * len(filled) or (carrying > 0.9 * len(filled) and numbers > 0) else "text"
 
 
 def _find_time(

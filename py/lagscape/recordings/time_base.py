@@ -141,7 +141,8 @@ def _pieces(t: np.ndarray, kept: np.ndarray, n_rows: int, typical: float, origin
     lengths = np.diff(edges)
     spans = t[edges[1:] - 1] - t[edges[:-1]]
     rate = float((lengths - 1).sum() / spans.sum()) if spans.sum() > 0 else 1.0 / typical
-    rate = _neat(rate, float(spans.sum()))
+    longest = int(lengths.argmax())
+    rate = _neat(rate, t[edges[longest] : edges[longest + 1]])
     filled = _LONGEST_FILLED_S
     short = breaks[steps[breaks] <= filled] if breaks.size else breaks
     if short.size:
@@ -201,9 +202,14 @@ def _refuse_bloat(n_samples: float, n_rows: int) -> None:
         )
 
 
-def _neat(rate: float, span_s: float) -> float:
-    """The round rate nearby where the written times cannot tell them apart."""
-    for candidate in (round(rate), round(rate, 1), round(rate, 2)):
-        if candidate > 0 and abs(candidate - rate) * span_s < 0.5 and abs(candidate - rate) < 2e-3 * rate:
-            return float(candidate)
+def _neat(rate: float, piece: np.ndarray) -> float:
+    """The round rate nearby where the written times, given how roughly they are written, cannot tell the two apart."""
+    span = piece[-1] - piece[0]
+    if span <= 0.0:
+        return rate
+    roughness = float(np.abs(piece - np.linspace(piece[0], piece[-1], piece.size)).max())
+    doubt = rate * (2.0 * roughness + 1e-9 * span) / span
+    for candidate in (float(round(rate)), round(rate, 1), round(rate, 2)):
+        if candidate > 0.0 and abs(candidate - rate) <= doubt:
+            return candidate
     return rate
