@@ -233,7 +233,7 @@ def open_loop(form: DriveForm, rest: Rest) -> OpenLoop:
         numerator = [_times(-1.0, value) for value in _polynomial_product(law, seen)]
         delay = form.sensed_delays[j]
         for index, (known, total) in enumerate(grouped):
-            if known is delay or (isinstance(known, float) and known == delay) or np.array_equal(known, delay):
+            if known is delay or (isinstance(known, float) and isinstance(delay, float) and known == delay) or np.array_equal(known, delay):
                 grouped[index] = (known, [_sum(a, b) for a, b in zip(total, numerator, strict=True)])
                 break
         else:
