@@ -12,6 +12,7 @@ import heapq
 import itertools
 import math
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 
@@ -26,6 +27,8 @@ __all__ = ["ExactSettings", "exact_path"]
 _NUDGE = 1e-9
 _SAME_PLACE = 1e-6
 """A root closer than this share of a piece to its end is that end: what is cut off there is the square of it."""
+_GRAZING = 0.01
+"""A polynomial that stays further from zero than this share of its range at all samples cannot reach it between two of them."""
 _MOST_KINK_ROUNDS = 6
 _MOST_ROUNDS = 40
 
@@ -194,44 +197,38 @@ class _Path:
 
     def _roots(self, edges: Array, values: Array) -> list[float]:
         """Roots well inside the pieces of the polynomials through these values at the points, (m, n + 1)."""
-        if values.min() > 0.0 and not self._may_graze(values):
-            return []
         dense = values @ self.to_dense
-        size = np.abs(dense).max(axis=1, keepdims=True)
-        sign = np.where(np.abs(dense) <= 1e-9 * size, 0.0, np.sign(dense))
-        places = []
-        for piece in np.flatnonzero((sign.max(axis=1) > 0.0) & (sign.min(axis=1) < 0.0)).tolist():
-            kept = np.flatnonzero(sign[piece])
-            for a, b in zip(kept[:-1].tolist(), kept[1:].tolist(), strict=True):
-                if sign[piece, a] != sign[piece, b]:
-                    places.append((piece, self.dense[a], self.dense[b]))
-        # Grazing: a dip between samples that does not change the sign at any of them.
-        middle, before, after = dense[:, 1:-1], dense[:, :-2], dense[:, 2:]
-        dips = (middle * before > 0.0) & (middle * after > 0.0) & (np.abs(middle) < np.abs(before)) & (np.abs(middle) < np.abs(after))
-        for piece, place in zip(*(item.tolist() for item in np.nonzero(dips)), strict=True):
-            places += self._grazing(piece, place + 1, dense[piece], to_chebyshev(self.n) @ values[piece])
-        if not places:
+        lowest, highest = dense.min(axis=1).tolist(), dense.max(axis=1).tolist()
+        brackets: list[tuple[int, float, float]] = []
+        for piece, (low, high) in enumerate(zip(lowest, highest, strict=True)):
+            near = _GRAZING * (high - low)
+            if low <= near and high >= -near:
+                brackets += self._brackets(piece, dense[piece], values[piece])
+        if not brackets:
             return []
-        pieces = np.array([item[0] for item in places])
-        low, high = np.array([item[1] for item in places]), np.array([item[2] for item in places])
-        where = _refine(values[pieces] @ to_chebyshev(self.n).T, low, high)
+        pieces = np.array([item[0] for item in brackets])
+        low_ends, high_ends = np.array([item[1] for item in brackets]), np.array([item[2] for item in brackets])
+        where = _refine(values[pieces] @ to_chebyshev(self.n).T, low_ends, high_ends)
         kept = (where > _SAME_PLACE) & (where < 1.0 - _SAME_PLACE)
-        lengths = edges[pieces + 1] - edges[pieces]
-        return (edges[pieces] + where * lengths)[kept].tolist()
+        return (edges[pieces] + where * (edges[pieces + 1] - edges[pieces]))[kept].tolist()
 
-    def _may_graze(self, values: Array) -> bool:
-        """Whether the polynomials through positive values may still dip below zero between them."""
-        return bool(np.any(values.min(axis=1) < 0.1 * (values.max(axis=1) - values.min(axis=1))))
-
-    def _grazing(self, piece: int, j: int, dense: Array, coefficients: Array) -> list[tuple[int, float, float]]:
-        """Two brackets if the polynomial changes sign between the neighbours of dense sample j although the samples do not."""
-        a, b = self.dense[j - 1], self.dense[j + 1]
-        fine = np.linspace(a, b, 33)
-        values = np.polynomial.chebyshev.chebval(2.0 * fine - 1.0, coefficients) * np.sign(dense[j])
-        low = int(np.argmin(values))
-        if values[low] >= 0.0 or low in (0, 32):
-            return []
-        return [(piece, float(a), float(fine[low])), (piece, float(fine[low]), float(b))]
+    def _brackets(self, piece: int, dense: Array, values: Array) -> list[tuple[int, float, float]]:
+        """Intervals of [0, 1] with one sign change each: between dense samples, or beside a dip that no sample shows (grazing)."""
+        size = np.abs(dense).max()
+        kept = np.flatnonzero(np.abs(dense) > 1e-9 * size)
+        places, signs = self.dense[kept], np.sign(dense[kept])
+        found = [(piece, places[i], places[i + 1]) for i in np.flatnonzero(signs[1:] != signs[:-1]).tolist()]
+        inner, before, after = np.abs(dense[1:-1]), np.abs(dense[:-2]), np.abs(dense[2:])
+        dips = (inner < before) & (inner < after) & (inner < _GRAZING * 2.0 * size) & (dense[:-2] * dense[2:] > 0.0)
+        for j in (np.flatnonzero(dips) + 1).tolist():
+            if dense[j] * dense[j - 1] <= 0.0:
+                continue
+            fine = np.linspace(self.dense[j - 1], self.dense[j + 1], 33)
+            height = np.polynomial.chebyshev.chebval(2.0 * fine - 1.0, to_chebyshev(self.n) @ values) * np.sign(dense[j])
+            lowest = int(np.argmin(height))
+            if height[lowest] < 0.0:
+                found += [(piece, fine[0], fine[lowest]), (piece, fine[lowest], fine[-1])]
+        return found
 
     def _plant(self, edges: Array, times: Array, arguments: Array) -> Array:
         """Plant states at the points, (m, n_plant, n + 1)."""
@@ -281,12 +278,19 @@ def _pieces_first(signal: Array | float) -> Array | float:
     return np.moveaxis(signal, 0, 1) if isinstance(signal, np.ndarray) else signal
 
 
+@lru_cache(maxsize=16)
+def _slope_matrix(count: int) -> Array:
+    """Chebyshev coefficients, as a row, to those of the derivative by a place of [0, 1]."""
+    matrix = np.zeros((count, count))
+    matrix[:, :-1] = 2.0 * np.polynomial.chebyshev.chebder(np.eye(count), axis=1)
+    return matrix
+
+
 def _refine(coefficients: Array, low: Array, high: Array) -> Array:
     """Roots of Chebyshev series on [0, 1], each bracketed: Newton steps, halving where a step leaves the bracket."""
     orders = np.arange(coefficients.shape[1])
     both = np.stack([coefficients, coefficients])
-    both[1, :, :-1] = 2.0 * np.polynomial.chebyshev.chebder(coefficients, axis=1)
-    both[1, :, -1] = 0.0
+    both[1] = coefficients @ _slope_matrix(coefficients.shape[1])
     rising = _series(both, high, orders)[0] > 0.0
     place = 0.5 * (low + high)
     for _ in range(60):

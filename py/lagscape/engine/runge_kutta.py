@@ -21,7 +21,7 @@ from lagscape.engine.run import Run
 from lagscape.engine.trace import Trace, find_silences
 from lagscape.loops.protocol import Array
 
-__all__ = ["MOST_STEPS", "runge_kutta", "step_for"]
+__all__ = ["MOST_STEPS", "runge_kutta", "stage_signals", "step_for"]
 
 MOST_STEPS = 2_000_000
 """A run with more steps than this is refused with a status: a minute of computing in a browser."""
@@ -97,7 +97,7 @@ def _sensed(run: Run, states: Array, starts: Array, ends: Array, step: float, ti
     return np.array(rows)
 
 
-def _stage_signals(run: Run, step: float, count: int) -> dict[str, Array]:
+def stage_signals(run: Run, step: float, count: int) -> dict[str, Array]:
     """Every disturbance signal at the three stage times of every step, shape (count, 3); means where it jumps inside a step."""
     form = run.form
     edges = step * np.arange(count + 1)
@@ -128,7 +128,7 @@ def _stage_signals(run: Run, step: float, count: int) -> dict[str, Array]:
 
 def _integrate(run: Run, step: float, count: int) -> tuple[Array, Array, Array]:
     """States at the grid, shape (count + 1, n), and each cell's start and end derivatives, shape (count, n)."""
-    signals = _stage_signals(run, step, count)
+    signals = stage_signals(run, step, count)
     source = _loop_source(run, step, sorted(signals))
     space: dict[str, Any] = {"drive": _in_plain_floats(run.form.drive).scalar}
     exec(compile(source, "<runge-kutta loop>", "exec"), space)  # our own text, made of numbers alone

@@ -37,7 +37,7 @@ _ROUGH = ExactSettings(degree=8, highest_order=1, tolerance=1e-4)
 """For a drag with more breaks than a fixed mesh can hold."""
 
 _MOST_REFINEMENTS = 3
-_MOST_EXACT_STEPS = 2500
+_MOST_STEPS_RELEASE = 2500
 _FEW_STEPS = 40
 _STEP_DRAG = 0.1
 _STEP_RELEASE = 0.02
@@ -139,30 +139,35 @@ def _checked_times(duration: float, output_times: Any) -> Array:
 
 
 def _dispatch(run: Run, times: Array, purpose: str) -> Trace:
-    rate = fastest_rate(run)
-    start = _first_move(run)
+    rate, start = fastest_rate(run), _first_move(run)
     steps = run.duration / run.form.delays[0]
-    short = run.form.delays[0] * rate < _shortest_delay_in_rates(run)
     if purpose == "release":
-        if steps > _MOST_EXACT_STEPS:
-            return _by_steps(run, times, _STEP_RELEASE / rate, RELEASE_ERROR)
-        trace = exact_path(run, times, rate, start)
-        return trace if trace.error_estimate <= RELEASE_ERROR else _flagged(trace)
-    if short and steps > _FEW_STEPS:
+        if not run.form.drive.has_kink and steps <= _MOST_STEPS_RELEASE:
+            # Without a cut-off everything is smooth between the breaks, and the fixed mesh converges spectrally.
+            trace = _on_a_fixed_mesh(run, times, rate, start, 16, 1.0, RELEASE_ERROR / 2.0)
+            if trace is not None and trace.status == "completed":
+                return trace
+        if steps <= _MOST_STEPS_RELEASE:
+            trace = exact_path(run, times, rate, start)
+            return trace if trace.error_estimate <= RELEASE_ERROR else _flagged(trace)
+        return _by_steps(run, times, _STEP_RELEASE / rate, RELEASE_ERROR)
+    if run.form.delays[0] * rate < _shortest_delay_in_rates(run) and steps > _FEW_STEPS:
         return _by_steps(run, times, _STEP_DRAG / rate, DRAG_ERROR)
-    return _on_a_fixed_mesh(run, times, rate, start)
+    degree, pieces = (8, 1.25) if run.form.drive.has_kink else (12, 1.0)
+    trace = _on_a_fixed_mesh(run, times, rate, start, degree, pieces, DRAG_ERROR)
+    return trace if trace is not None else exact_path(run, times, rate, start, _ROUGH)
 
 
-def _on_a_fixed_mesh(run: Run, times: Array, rate: float, start: float) -> Trace:
-    """Interval collocation, with twice the pieces where the estimate asks for it; a rough exact path where breaks do not fit."""
-    kinked = run.form.drive.has_kink
-    degree, pieces = (8, 1.25) if kinked else (12, 1.0)
+def _on_a_fixed_mesh(
+    run: Run, times: Array, rate: float, start: float, degree: int, pieces: float, promised: float
+) -> Trace | None:
+    """Interval collocation, with more pieces where the estimate asks for it; None where the mesh cannot hold every break."""
     for _ in range(_MOST_REFINEMENTS):
         mesh = mesh_for(run, rate, pieces, degree, start)
         if not holds_every_break(run, mesh):
-            return exact_path(run, times, rate, start, _ROUGH)
+            return None
         trace = interval_collocation(run, times, mesh)
-        if trace.status != "completed" or trace.error_estimate <= DRAG_ERROR:
+        if trace.status != "completed" or trace.error_estimate <= promised:
             return trace
         pieces *= 2.0
     return _flagged(trace)
