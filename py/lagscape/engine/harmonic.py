@@ -162,28 +162,38 @@ class Balance:
         parts = (sensed, by @ answer, sensed_slope * factor, (by @ slope) * factor)
         return tuple(np.moveaxis(part, 1, 3) for part in parts)  # type: ignore[return-value]
 
+    def _in_drive_order(self, arguments: np.ndarray, samples: int) -> tuple[Array, Array]:
+        """Sensed signals and controller states in time, shaped as the drive takes them: samples before the loops' batch axes."""
+        rest = np.concatenate([self.sensed_rest, self.state_rest[:, self.plant.shape[1] :]], axis=1)
+        signal = np.fft.irfft(arguments, samples, axis=2) * samples + rest[:, :, None]
+        ordered = np.moveaxis(signal, 0, -1)
+        if self.members is not None:
+            ordered = ordered.reshape(*ordered.shape[:2], *self.members)
+        return ordered[: self.sensed_rows.shape[0]], ordered[self.sensed_rows.shape[0] :]
+
+    def _member_first(self, values: Any, samples: int) -> Array:
+        """From (..., samples, batch axes) to (B, ..., samples)."""
+        array = np.asarray(values, dtype=float)
+        batch = (self.size,) if self.members is None else self.members
+        lead = array.shape[: array.ndim - len(batch) - 1]
+        return np.moveaxis(np.broadcast_to(array, (*lead, samples, *batch)).reshape(*lead, samples, self.size), -1, 0)
+
     def in_time(self, arguments: np.ndarray, samples: int) -> tuple[Array, Array]:
         """Controlled signal (B, S) and its gradient (B, n_a, S) from harmonics of the drive's arguments (B, n_a, K)."""
-        signal = np.fft.irfft(arguments, samples, axis=2) * samples
-        n_sensed = self.sensed_rows.shape[0]
-        rest = np.concatenate([self.sensed_rest, self.state_rest[:, self.plant.shape[1] :]], axis=1)
-        signal = signal + rest[:, :, None]
-        if self.members is None:
-            ordered = np.moveaxis(signal, 0, -1)[..., 0] if self.size == 1 else np.moveaxis(signal, 0, 1)
-        else:
-            ordered = np.moveaxis(signal, 0, -1)
-            ordered = ordered.reshape(*ordered.shape[:2], *self.members)
-        sensed, control = ordered[:n_sensed], ordered[n_sensed:]
-        value = np.asarray(self.drive.value(sensed, control))
-        gradient = np.asarray(self.drive.gradient(sensed, control))
-        if self.members is None and self.size == 1:
-            value, gradient = value[None], gradient[None]
-        elif self.members is None:
-            gradient = np.moveaxis(gradient, 1, 0)
-        else:
-            value = np.moveaxis(value.reshape(value.shape[0], self.size), -1, 0)
-            gradient = np.moveaxis(gradient.reshape(*gradient.shape[:2], self.size), -1, 0)
-        return value, gradient
+        sensed, control = self._in_drive_order(arguments, samples)
+        value, gradient = self.drive.value(sensed, control), self.drive.gradient(sensed, control)
+        return self._member_first(value, samples), self._member_first(gradient, samples)
+
+    def heights(self, arguments: np.ndarray, samples: int, silent_level: Any) -> tuple[Array, Array | None]:
+        """Controlled signal (B, S), and a smooth height (B, S) that is negative in silence, or None where nothing counts as silence."""
+        sensed, control = self._in_drive_order(arguments, samples)
+        output = self._member_first(self.drive.value(sensed, control), samples)
+        level = np.asarray(silent_level, dtype=float)
+        if not np.isfinite(level).all():
+            return output, None
+        if self.drive.has_kink and not level.any():
+            return output, self._member_first(self.drive.switch(sensed, control), samples)
+        return output, output - (np.broadcast_to(level, self.members).reshape(-1)[:, None] if self.members is not None else level)
 
     def equations(self, harmonics: Harmonics, samples: int) -> tuple[np.ndarray, Array, np.ndarray, np.ndarray]:
         """Residual (B, r, K) complex; Jacobian (B, 2rK, 2rK) real on [Re, Im] of w; columns by omega and by kappa (B, r, K) complex."""
