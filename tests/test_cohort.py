@@ -89,6 +89,7 @@ def test_results_come_out_row_by_row_with_every_digit():
     out = io.StringIO()
     counts = write_cohort(analysed_rows(cases("lung_volume_l\n2.2\n2.0\n99\n"), analyse), out)
     assert counts == (3, 2)
+    assert out.getvalue().splitlines()[0] == "row,loop,standing,loop_gain,gain_margin,equilibrium_paco2_mmhg,error"
     first, second, third = csv.DictReader(io.StringIO(out.getvalue()))
     assert (first["row"], first["loop"], first["standing"], first["gain_margin"], first["error"]) == ("1", "breathing", "rings", "", "")
     assert float(first["loop_gain"]).hex() == (2.2 / 3.0).hex() and first["equilibrium_paco2_mmhg"] == "40.0"

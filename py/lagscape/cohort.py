@@ -51,14 +51,15 @@ def read_cohort(lines: Iterable[str]) -> Iterator[Case | InvalidInputError]:
 def analysed_rows(rows: Iterable[Case | InvalidInputError], analyse: Callable[[Case], Mapping[str, Any]]) -> Iterator[CohortRow]:
     """One flat result a row: `row` (from 1), the figures, and `error` (a sentence, or empty).
 
-    `analyse` gives a case's figures as a plain mapping; its InvalidInputError becomes the row's error.
+    `analyse` gives a case's figures as a plain mapping; its InvalidInputError becomes the row's error. The figure `kind` is left out:
+    it is the column `loop`.
     """
     for index, case in enumerate(rows, start=1):
         if isinstance(case, InvalidInputError):
             yield {"row": index, "error": str(case)}
             continue
         try:
-            figures = flat(analyse(case))
+            figures = {name: value for name, value in flat(analyse(case)).items() if name != "kind"}
         except InvalidInputError as error:
             yield {"row": index, "loop": case.kind, "error": str(error)}
         else:

@@ -6,7 +6,7 @@ import pickle
 import re
 
 import pytest
-from hypothesis import given, settings
+from hypothesis import given
 from hypothesis import strategies as st
 
 from lagscape.case.case import (
@@ -148,7 +148,6 @@ def test_moving_beyond_the_range_stops_at_it(case):
 
 
 @given(any_case())
-@settings(max_examples=60, deadline=None)
 def test_equal_cases_are_equal_whatever_they_are_made_from(case):
     backwards = Case(
         case.kind,

@@ -29,7 +29,6 @@ def edited(*path_and_value) -> str:
 
 
 @given(any_case())
-@settings(max_examples=100, deadline=None)
 def test_a_file_brings_back_the_case_to_the_last_bit(case):
     text = case_to_json(case)
     again = case_from_json(text)
@@ -138,14 +137,14 @@ def test_levers_are_shown_to_the_check_and_its_refusal_is_the_files():
 
 
 @given(st.binary(max_size=300) | st.text(max_size=300))
-@settings(max_examples=300)
+@settings(max_examples=5 * settings.default.max_examples)
 def test_whatever_comes_in_is_refused_in_words(garbage):
     with pytest.raises(CaseFormatError):
         case_from_json(garbage)
 
 
 @given(st.data())
-@settings(max_examples=300, deadline=None)
+@settings(max_examples=5 * settings.default.max_examples)
 def test_a_damaged_file_is_a_case_or_is_refused(data):
     """One byte changed: never any other error than our own, never a case that breaks a rule."""
     content = bytearray(case_to_json(GOOD).encode())

@@ -24,7 +24,6 @@ def packed(text: str) -> str:
 
 
 @given(any_case())
-@settings(max_examples=100, deadline=None)
 def test_a_link_brings_back_the_case_to_the_last_bit(case):
     link = case_to_link(case)
     assert case_from_link(link) == case
@@ -55,7 +54,7 @@ def test_a_link_is_read_with_or_without_what_stands_before_it(around):
 
 
 @given(st.data())
-@settings(max_examples=300, deadline=None)
+@settings(max_examples=5 * settings.default.max_examples)
 def test_a_link_with_one_wrong_character_is_refused(data):
     at = data.draw(st.integers(0, len(LINK) - 1))
     other = data.draw(st.characters(codec="utf-8").filter(lambda letter: letter != LINK[at] and not letter.isspace() and letter != "#"))

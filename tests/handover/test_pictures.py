@@ -68,6 +68,14 @@ def test_the_map_shows_the_boundary_the_case_the_start_the_levers_and_the_contou
     assert all(word in legend for word in ("Hatched: hunts", "filled dot: the case", "hollow dot", "diamond"))
 
 
+def test_a_contours_words_keep_off_the_case():
+    contour = Contour("60 s", np.full(101, 1.0), np.linspace(0.0, 3.0, 101))
+    root = parsed(boundary_map_svg(the_map(case=(1.0, 1.5), contours=(contour,))))
+    words = next(item for item in root.iter(f"{NAMESPACE}text") if item.text == "60 s")
+    disc = next(root.iter(f"{NAMESPACE}circle"))
+    assert abs(float(words.get("y")) - float(disc.get("cy"))) > 20.0
+
+
 def test_without_start_and_levers_the_legend_does_not_speak_of_them():
     root = parsed(boundary_map_svg(the_map()))
     assert len(list(root.iter(f"{NAMESPACE}circle"))) == 1 and not list(root.iter(f"{NAMESPACE}polygon"))

@@ -71,9 +71,10 @@ def boundary_map_svg(picture: MapPicture) -> str:
     plot = Plot(picture.delay, picture.sensitivity, _LEFT, 44.0, _WIDTH - _LEFT - _RIGHT, 380.0, "map")
     for xs, ys in picture.outside:
         plot.area(xs, ys)
+    marks = [point for point in (picture.case, picture.start, picture.levers) if point is not None]
     for contour in picture.contours:
         plot.curve(contour.xs, contour.ys, Style(QUIET, 0.7))
-        spot = _inside_middle(plot, contour.xs, contour.ys)
+        spot = _clear_spot(plot, contour.xs, contour.ys, marks)
         if spot is not None:
             plot.words(*spot, contour.words, size=10)
     plot.curve(picture.boundary_x, picture.boundary_y, Style(INK, 2.2))
@@ -181,14 +182,17 @@ def _range(panel: TracePanel) -> Axis:
     return Axis(panel.label, panel.unit, low if panel.from_zero and low == 0.0 else low - spare, high + spare)
 
 
-def _inside_middle(plot: Plot, xs: Any, ys: Any) -> tuple[float, float] | None:
-    """The middle one of a line's points inside the frame, away from its edge; None where there is none."""
+def _clear_spot(plot: Plot, xs: Any, ys: Any, marks: Sequence[tuple[float, float]]) -> tuple[float, float] | None:
+    """The point nearest to a line's middle that lies inside the frame, off its edge and off the marks; None where there is none."""
     x, y = np.asarray(xs, dtype=float), np.asarray(ys, dtype=float)
     share_x, share_y = plot.x.share(x), plot.y.share(y)
-    inside = np.flatnonzero((share_x > 0.05) & (share_x < 0.95) & (share_y > 0.05) & (share_y < 0.95))
-    if not inside.size:
+    clear = (share_x > 0.05) & (share_x < 0.95) & (share_y > 0.05) & (share_y < 0.95)
+    for mark_x, mark_y in marks:
+        clear &= np.hypot(share_x - plot.x.share(mark_x), share_y - plot.y.share(mark_y)) > 0.08
+    spots = np.flatnonzero(clear)
+    if not spots.size:
         return None
-    middle = inside[inside.size // 2]
+    middle = spots[spots.size // 2]
     return float(x[middle]), float(y[middle])
 
 

@@ -146,7 +146,7 @@ def _numbers(report: Report) -> str:
         rows.append((item.group, f"{item.label} ({item.symbol})", value, basis, _spread(number, item, report), band))
     words = ("Group", "Number", "Value", "Basis", "One SD", "Typical band")
     settings = [(choice.label, choice.options[report.case.choices[choice.name]]) for choice in LOOPS[report.case.kind].choices]
-    table = _table("Numbers", words, rows)
+    table = _table("Numbers", words, rows, "numbers")
     return table + (_table("Settings", ("Setting", "Value"), settings) if settings else "")
 
 
@@ -228,14 +228,15 @@ def _picture(picture: Picture) -> str:
     return f'<figure><img alt="{caption}" src="data:image/svg+xml;base64,{data}"><figcaption>{caption}</figcaption></figure>'
 
 
-def _table(title: str, columns: Sequence[str], rows: Sequence[Sequence[Any]]) -> str:
+def _table(title: str, columns: Sequence[str], rows: Sequence[Sequence[Any]], name: str = "") -> str:
     head = "".join(f'<th scope="col">{escape(name)}</th>' for name in columns) if any(columns) else ""
     lines = []
     for row in rows:
         cells = [escape(str(cell)) for cell in row]
         lines.append("<tr>" + "".join(f"<td>{cell}</td>" for cell in cells) + "</tr>")
     header = f"<thead><tr>{head}</tr></thead>" if head else ""
-    return f"<section><h2>{escape(title)}</h2><table>{header}<tbody>{''.join(lines)}</tbody></table></section>"
+    kind = f' class="{name}"' if name else ""
+    return f"<section><h2>{escape(title)}</h2><table{kind}>{header}<tbody>{''.join(lines)}</tbody></table></section>"
 
 
 def _degrees(radians: float | None) -> float | None:
@@ -255,6 +256,7 @@ h2 { font-size: 11pt; margin: 6mm 0 1.5mm; font-weight: 600 }
 table { border-collapse: collapse; width: 100%; font-size: 9.5pt }
 th { text-align: left; font-weight: 600; border-bottom: 1px solid #1C2530 }
 td, th { padding: 0.8mm 2mm 0.8mm 0; vertical-align: top }
+.numbers td:nth-child(4), .numbers td:nth-child(5) { white-space: nowrap }
 tbody tr { border-bottom: 1px solid #D8D8D0; break-inside: avoid }
 .caution { border-left: 3px solid #B5541C; padding-left: 3mm }
 figure { margin: 5mm 0; break-inside: avoid }
