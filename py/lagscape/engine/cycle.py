@@ -14,7 +14,7 @@ from typing import Any
 
 import numpy as np
 
-from lagscape.engine.harmonic import Balance, Harmonics, prepare, solve
+from lagscape.engine.harmonic import Balance, Harmonics, prepare, solve, to_spectrum, to_time
 from lagscape.engine.harmonic_single import single_balance
 from lagscape.engine.margins import Margins, margins
 from lagscape.loops.protocol import Array, DriveForm, Rest
@@ -145,19 +145,18 @@ class _Solver:
         return _describe(self.form, harmonics, residual, states, sensed, means)
 
 
-def first_harmonic_gain(balance: Balance, omega: float, amplitudes: Array) -> np.ndarray:
-    """Complex gain of the first harmonic once round the loop, for w = 2 a cos(omega t) of each amplitude a; shape of `amplitudes`.
+def first_harmonic_gain(balance: Balance, transfer: np.ndarray, factor: np.ndarray, amplitudes: Array) -> np.ndarray:
+    """Complex gain of the first harmonic once round the loop, for w = 2 a cos(omega t) of each amplitude a.
 
-    `balance` holds one loop with as many copies as there are amplitudes.
+    `amplitudes` has shape (B,), one for each member of `balance`; `transfer` and `factor` are its `transfers` at omega for order 1.
     """
-    transfer, factor, _, _ = balance.transfers(np.full(balance.size, omega), 1)
-    force = np.zeros((balance.size, len(balance.rows), 2), dtype=complex)
-    force[:, 0, 1] = amplitudes
-    arguments = np.einsum("barK,brK->baK", transfer, force)
-    level = balance.level[:, 0, None] + np.fft.irfft(np.einsum("brK,brK->bK", factor[:, 0], force), 32, axis=1) * 32
-    raw, _ = balance.in_time(arguments, 32)
-    product = (balance.gain[:, None] * (raw - balance.output_rest[:, None]) + balance.shift[:, None]) * level
-    return np.fft.fft(product, axis=1)[:, 1] / 32 / amplitudes
+    arguments = np.zeros((*transfer.shape[:2], 2), dtype=complex)
+    arguments[:, :, 1] = transfer[:, :, 0, 1] * amplitudes[:, None]
+    moved = np.zeros((balance.size, 2), dtype=complex)
+    moved[:, 1] = factor[:, 0, 0, 1] * amplitudes
+    raw = balance.output_in_time(arguments, 32)
+    output = balance.gain[:, None] * (raw - balance.output_rest[:, None]) + balance.shift[:, None]
+    return to_spectrum(output * (balance.level[:, :1] + to_time(moved, 32)), 2)[:, 1] / amplitudes
 
 
 def _from_describing_function(solver: _Solver, omega: float, order: int) -> tuple[Harmonics, float] | None:
@@ -165,7 +164,8 @@ def _from_describing_function(solver: _Solver, omega: float, order: int) -> tupl
     unit = float(np.max(np.abs(copies.level[0]))) * max(abs(float(copies.output_rest[0])), 1e-3)
     amplitudes = unit * np.geomspace(1e-5, 1e4, 73)
     with np.errstate(all="ignore"):
-        gain = first_harmonic_gain(copies, omega, amplitudes).real
+        transfer, factor, _, _ = copies.transfers(np.full(73, omega), 1)
+        gain = first_harmonic_gain(copies, transfer, factor, amplitudes).real
     passes = np.flatnonzero((gain[:-1] >= 1.0) & (gain[1:] < 1.0))
     if not passes.size:
         return None

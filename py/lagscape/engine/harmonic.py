@@ -52,9 +52,53 @@ class Harmonics:
 
 
 @lru_cache(maxsize=16)
-def _index(order: int, samples: int) -> tuple[Array, Array]:
+def _index(order: int) -> tuple[Array, Array]:
+    """Where harmonics j - k and j + k stand among -2H .. 2H."""
     j, k = np.arange(order + 1)[:, None], np.arange(order + 1)[None, :]
-    return (j - k) % samples, (j + k) % samples
+    return j - k + 2 * order, j + k + 2 * order
+
+
+@lru_cache(maxsize=16)
+def _waves(count: int, samples: int) -> tuple[Array, Array]:
+    """Matrices from [Re, Im] of harmonics 0 .. count - 1 to time and back; one product beats a short transform."""
+    angle = 2.0 * np.pi * np.arange(count)[:, None] * np.arange(samples) / samples
+    double = np.where(np.arange(count) > 0, 2.0, 1.0)[:, None]
+    wave = np.concatenate([np.cos(angle), -np.sin(angle)])
+    return wave * np.concatenate([double, double]), wave.T / samples
+
+
+def to_time(spectrum: np.ndarray, samples: int) -> Array:
+    """Real signals (..., samples) over one period from harmonics 0 .. K - 1 (..., K)."""
+    wave, _ = _waves(spectrum.shape[-1], samples)
+    return np.concatenate([spectrum.real, spectrum.imag], axis=-1) @ wave
+
+
+def to_spectrum(signal: Array, count: int) -> np.ndarray:
+    """Harmonics 0 .. count - 1 of real signals (..., samples)."""
+    _, back = _waves(count, signal.shape[-1])
+    parts = signal @ back
+    spectrum = np.empty((*signal.shape[:-1], count), dtype=complex)
+    spectrum.real, spectrum.imag = parts[..., :count], parts[..., count:]
+    return spectrum
+
+
+def _two_sided(spectrum: np.ndarray) -> np.ndarray:
+    return np.concatenate([np.conj(spectrum[..., :0:-1]), spectrum], axis=-1)
+
+
+def _inverse(s: np.ndarray, matrix: Array) -> np.ndarray:
+    """(s - M)^-1 for s (B, K) and M (B, n, n): (B, K, n, n)."""
+    n = matrix.shape[1]
+    if n == 1:
+        return (1.0 / (s - matrix[:, 0]))[:, :, None, None]
+    if n > 2:
+        return np.linalg.inv(s[:, :, None, None] * np.eye(n) - matrix[:, None])
+    a, d = s - matrix[:, 0, 0, None], s - matrix[:, 1, 1, None]
+    b, c = matrix[:, 0, 1, None], matrix[:, 1, 0, None]
+    scale = 1.0 / (a * d - b * c)
+    inverse = np.empty((*s.shape, 2, 2), dtype=complex)
+    inverse[..., 0, 0], inverse[..., 0, 1], inverse[..., 1, 0], inverse[..., 1, 1] = d * scale, b * scale, c * scale, a * scale
+    return inverse
 
 
 def _leading(values: Any, axes: int, batch: tuple[int, ...]) -> Array:
@@ -129,12 +173,11 @@ class Balance:
 
     def _plant_answer(self, s: np.ndarray) -> np.ndarray:
         """(s - M)^-1 W, (B, K, n, r)."""
-        return np.linalg.inv(s[:, :, None, None] * np.eye(self.plant.shape[1]) - self.plant[:, None])[:, :, :, list(self.rows)]
+        return _inverse(s, self.plant)[:, :, :, list(self.rows)]
 
     def _control_answer(self, s: np.ndarray) -> np.ndarray:
         """(s - F)^-1 G, (B, K, m, n_sensed)."""
-        inverse = np.linalg.inv(s[:, :, None, None] * np.eye(self.control.shape[1]) - self.control[:, None])
-        return inverse @ self.control_by_sensed[:, None]
+        return _inverse(s, self.control) @ self.control_by_sensed[:, None]
 
     def _delayed(self, s: np.ndarray, plant: np.ndarray) -> np.ndarray:
         return np.matmul(self.sensed_rows, plant) * np.exp(-self.delays[:, :, None] * s[:, None])
@@ -144,14 +187,14 @@ class Balance:
         n_control = self.control.shape[1]
         k = np.arange(order + 1)
         s = 1j * omega[:, None] * k
-        inverse = np.linalg.inv(s[:, :, None, None] * np.eye(self.plant.shape[1]) - self.plant[:, None])
+        inverse = _inverse(s, self.plant)
         answer = inverse[:, :, :, list(self.rows)]
         slope = -(inverse @ answer)
         turn = np.exp(-s[:, :, None] * self.delays[:, None])[..., None]
         sensed = (self.sensed_rows @ answer) * turn
         sensed_slope = (self.sensed_rows @ slope) * turn - self.delays[:, None, :, None] * sensed
         if n_control:
-            inner = np.linalg.inv(s[:, :, None, None] * np.eye(n_control) - self.control[:, None])
+            inner = _inverse(s, self.control)
             reply = inner @ self.control_by_sensed[:, None]
             control = reply @ sensed
             control_slope = reply @ sensed_slope - inner @ control
@@ -165,7 +208,7 @@ class Balance:
     def _in_drive_order(self, arguments: np.ndarray, samples: int) -> tuple[Array, Array]:
         """Sensed signals and controller states in time, shaped as the drive takes them: samples before the loops' batch axes."""
         rest = np.concatenate([self.sensed_rest, self.state_rest[:, self.plant.shape[1] :]], axis=1)
-        signal = np.fft.irfft(arguments, samples, axis=2) * samples + rest[:, :, None]
+        signal = to_time(arguments, samples) + rest[:, :, None]
         ordered = np.moveaxis(signal, 0, -1)
         if self.members is not None:
             ordered = ordered.reshape(*ordered.shape[:2], *self.members)
@@ -183,6 +226,10 @@ class Balance:
         sensed, control = self._in_drive_order(arguments, samples)
         value, gradient = self.drive.value(sensed, control), self.drive.gradient(sensed, control)
         return self._member_first(value, samples), self._member_first(gradient, samples)
+
+    def output_in_time(self, arguments: np.ndarray, samples: int) -> Array:
+        """The controlled signal alone, (B, S)."""
+        return self._member_first(self.drive.value(*self._in_drive_order(arguments, samples)), samples)
 
     def heights(self, arguments: np.ndarray, samples: int, silent_level: Any) -> tuple[Array, Array | None]:
         """Controlled signal (B, S), and a smooth height (B, S) that is negative in silence, or None where nothing counts as silence."""
@@ -208,26 +255,29 @@ class Balance:
         excess = raw - self.output_rest[:, None]
         output = kappa * excess + self.shift[:, None]
         shift_level = self.shift[:, None, None] * self.level[:, :, None]
-        level = self.level[:, :, None] + np.fft.irfft(moved, samples, axis=2) * samples
+        level = self.level[:, :, None] + to_time(moved, samples)
         # Signals whose product with a harmonic is needed: for each row i, m_i grad_a for every argument, and v - v1.
         weight = level[:, :, None] * (kappa[:, :, None] * gradient)[:, None]
         stack = np.concatenate(
             [(output[:, None] * level - shift_level)[:, :, None], (excess[:, None] * level)[:, :, None], weight], axis=2
         )
-        spectrum = np.fft.fft(stack, axis=3) / samples
+        spectrum = to_spectrum(stack, 2 * order + 1)
         residual = force - spectrum[:, :, 0, :size]
         by_gain = -spectrum[:, :, 1, :size]
-        output_spectrum = np.fft.fft(output, axis=1) / samples
-        minus, plus = _index(order, samples)
+        output_spectrum = _two_sided(to_spectrum(output, 2 * order + 1))
+        minus, plus = _index(order)
         # Rows i of the answer by columns r of the unknown: (B, i, a, K, K) against (B, a, r, K).
-        gradient_spectrum = spectrum[:, :, 2:]
-        direct = np.einsum("biajk,bark->bijrk", gradient_spectrum[..., minus], transfer)
-        mirror = np.einsum("biajk,bark->bijrk", gradient_spectrum[..., plus], np.conj(transfer))
-        direct += np.einsum("bjk,birk->bijrk", output_spectrum[:, minus], factor)
-        mirror += np.einsum("bjk,birk->bijrk", output_spectrum[:, plus], np.conj(factor))
+        gradient_spectrum = _two_sided(spectrum[:, :, 2:])
+        direct = output_spectrum[:, None, minus, None] * np.moveaxis(factor, 3, 2)[:, :, None]
+        mirror = output_spectrum[:, None, plus, None] * np.conj(np.moveaxis(factor, 3, 2))[:, :, None]
+        for a in range(transfer.shape[1]):
+            column = np.moveaxis(transfer[:, a], 2, 1)[:, None, None]
+            direct += gradient_spectrum[:, :, a][..., minus, None] * column
+            mirror += gradient_spectrum[:, :, a][..., plus, None] * np.conj(column)
+        direct, mirror = np.moveaxis(direct, 4, 3), np.moveaxis(mirror, 4, 3)
         # The mean has no mirror image: its two halves are one number.
         mirror[..., 0] = 0.0
-        direct = direct.reshape(b, r * size, r * size)
+        direct = direct.reshape(b, r * size, r * size)  # rows (i, j), columns (r, k)
         mirror = mirror.reshape(b, r * size, r * size)
         jacobian = np.empty((b, 2 * r * size, 2 * r * size))
         half = r * size
@@ -239,9 +289,9 @@ class Balance:
         jacobian[:, diagonal, diagonal] += 1.0
         turned = np.einsum("barK,brK->baK", transfer_slope, force)
         turned_level = np.einsum("bqrK,brK->bqK", factor_slope, force)
-        change = np.einsum("biat,bat->bit", weight, np.fft.irfft(turned, samples, axis=2) * samples)
-        change = change + output[:, None] * (np.fft.irfft(turned_level, samples, axis=2) * samples)
-        by_omega = -np.fft.fft(change, axis=2)[:, :, :size] / samples
+        change = np.einsum("biat,bat->bit", weight, to_time(turned, samples))
+        change = change + output[:, None] * to_time(turned_level, samples)
+        by_omega = -to_spectrum(change, size)
         return residual, jacobian, by_omega, by_gain
 
 

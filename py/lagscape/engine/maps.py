@@ -163,9 +163,10 @@ def _describing_start(balance: Balance, omega: Array, order: int) -> Harmonics:
     unit = np.max(np.abs(balance.level), axis=1) * np.maximum(np.abs(balance.output_rest), 1e-3)
     low, high = np.log(unit * 1e-5), np.log(unit * 1e4)
     with np.errstate(all="ignore"):
+        transfer, factor, _, _ = balance.transfers(np.asarray(omega, dtype=float), 1)
         for _ in range(11):
             middle = 0.5 * (low + high)
-            above = first_harmonic_gain(balance, omega, np.exp(middle)).real >= 1.0
+            above = first_harmonic_gain(balance, transfer, factor, np.exp(middle)).real >= 1.0
             low, high = np.where(above, middle, low), np.where(above, high, middle)
     force = np.zeros((balance.size, len(balance.rows), order + 1), dtype=complex)
     force[:, 0, 1] = np.exp(0.5 * (low + high))
