@@ -39,6 +39,11 @@ class Lever:
     act: Callable[[Any, Any], Any]
     """(loop, dose) -> loop. The controller's line is fixed before the first lever acts. Loop and dose may be batches."""
 
+    @property
+    def is_switch(self) -> bool:
+        """True where the page offers on and off only."""
+        return self.minimum == 0.0 and self.step == self.maximum
+
     def check(self, dose: object) -> float:
         """The dose as a float.
 
