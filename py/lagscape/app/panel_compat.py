@@ -7,10 +7,11 @@ for it. Panel's components name style sheets of a content network: they are poin
 
 from __future__ import annotations
 
+import html
 import importlib.abc
 import importlib.machinery
 import sys
-from types import ModuleType
+from types import ModuleType, SimpleNamespace
 from typing import Any
 
 __all__ = ["stand_in_for_pandas", "use_own_style_sheets"]
@@ -27,6 +28,8 @@ def stand_in_for_pandas() -> None:
     _module("pandas.core", __path__=[])
     _module("pandas.core.groupby", GroupBy=type("GroupBy", (), {}))
     _module("pyodide_http", patch_all=lambda: None)
+    # Panel cleans the name of a custom component, which this program makes itself, with bleach: escaping serves as well.
+    _module("bleach", sanitizer=SimpleNamespace(Cleaner=lambda **_: SimpleNamespace(clean=html.escape)))
 
 
 def use_own_style_sheets(address: str) -> None:

@@ -58,7 +58,7 @@ class ReflexLoop:
     damping_n_m_s_rad: Any = 0.35
     stiffness_n_m_rad: Any = 40.0
     activation_time_s: Any = 0.045
-    reflex_gain_per_rad: Any = 8.0
+    reflex_gain_per_rad: Any = 0.6
     velocity_sensitivity_s: Any = 0.07
     largest_torque_n_m: Any = 10.0
     path_length_m: Any = 0.85

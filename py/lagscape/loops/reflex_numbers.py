@@ -52,7 +52,7 @@ SPECIFICATIONS: tuple[ParameterSpecification, ...] = (
         "Where the reflex torque saturates; it sets the size of the shaking, not whether it starts.", "Common practice, no source.", 0.15,
     ),
     ParameterSpecification(
-        "reflex_gain_per_rad", "Reflex gain", "G", "1/rad", "Reflex", 0.0, 500.0, 2.0, 0.5, 4.0, 0.4, "lognormal",
+        "reflex_gain_per_rad", "Reflex gain", "G", "1/rad", "Reflex", 0.0, 500.0, 0.6, 0.2, 1.2, 0.4, "lognormal",
         "Activation per radian of stretch: the sensitivity. Hyperreflexia raises it.", "Common practice, no source.", 0.2,
     ),
     ParameterSpecification(
@@ -64,12 +64,12 @@ SPECIFICATIONS: tuple[ParameterSpecification, ...] = (
 STARTING_CASES: tuple[StartingCase, ...] = (
     StartingCase(
         "ankle-calm", "Ankle, ordinary reflex", "Invented: an adult with an ordinary ankle reflex. A tap dies out.",
-        {"reflex_gain_per_rad": 2.0},
+        {"reflex_gain_per_rad": 0.6},
         source="Typical values; see each number.",
     ),
     StartingCase(
         "ankle-clonus", "Ankle clonus", "Invented: a brisk ankle reflex after an upper motor neurone lesion. The foot beats on.",
-        {"reflex_gain_per_rad": 14.0},
+        {"reflex_gain_per_rad": 3.0},
         source="Typical values with a raised reflex gain; the clonus band is 3 to 7 Hz (Rack, Ross and Thilmann 1984).",
     ),
 )  # fmt: skip

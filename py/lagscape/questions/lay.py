@@ -26,9 +26,12 @@ _NEAR = 1e-4
 class MeasuredSpread(Protocol):
     """A median with its quartiles."""
 
-    median: float
-    lower_quartile: float
-    upper_quartile: float
+    @property
+    def median(self) -> float: ...
+    @property
+    def lower_quartile(self) -> float: ...
+    @property
+    def upper_quartile(self) -> float: ...
 
 
 @dataclass(frozen=True)

@@ -211,11 +211,11 @@ def analyse(case: Case) -> Analysis:
     InvalidInputError
         If its numbers allow no rest, or a lever is unknown to its loop.
     """
+    from lagscape.questions.levers import apply_levers
     from lagscape.questions.wording import standing_sentence
 
-    loop = case.loop()
-    judged = judge_loop(loop)
-    return analysis_of(judged, standing_sentence(judged))
+    judged = judge_loop(apply_levers(case))
+    return analysis_of(judged, standing_sentence(judged), tuple((setting.name, setting.dose) for setting in case.levers))
 
 
 def analysis_of(judged: Judgement, sentence: str, levers: tuple[tuple[str, float], ...] = ()) -> Analysis:

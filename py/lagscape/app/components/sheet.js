@@ -80,7 +80,12 @@ root.addEventListener("click", (event) => {
 })
 root.addEventListener("keydown", (event) => {
   const target = acting(event)
-  if (!target || target.nodeName !== "INPUT" || target.type !== "text") return
+  if (!target || target.nodeName !== "INPUT") return
+  if (target.type === "checkbox" && event.key === "Delete") {
+    target.checked = false
+    state.report(target, "change", false)
+  }
+  if (target.type !== "text") return
   if (event.key === "Enter") {
     state.typing = false
     state.report(target, "change", false)

@@ -1,0 +1,284 @@
+"""The boundary map: delay across, sensitivity up, the case as a dot that is dragged or moved by the arrow keys."""
+
+from __future__ import annotations
+
+import asyncio
+from typing import Any
+
+import numpy as np
+import panel as pn
+from bokeh.core.properties import value
+from bokeh.events import MouseLeave, MouseMove, Pan, PanEnd, PanStart, Tap
+from bokeh.models import Arrow, ColumnDataSource, CustomJS, CustomJSTickFormatter, Label, NormalHead, Range1d
+from bokeh.plotting import figure
+
+from lagscape.app.components.sheet import Sheet
+from lagscape.app.palette import FONT, PALETTES, dress
+from lagscape.app.workbench import Workbench
+from lagscape.quantities import figure as figures
+from lagscape.quantities import quantity, to_display
+from lagscape.questions.boundary_map import BoundaryMap, cycle_contours, map_of, window_of
+from lagscape.questions.standing import judge
+from lagscape.questions.wording import cycle_words, seconds_words
+
+__all__ = ["MapView"]
+
+_FOLLOW_POINTER = """
+const {start, end} = x, across = Math.min(end, Math.max(start, cb_obj.x))
+const up = Math.min(y.end, Math.max(y.start, cb_obj.y))
+dot.data = {delay: [across], sensitivity: [up]}
+"""
+"""Runs in the page, so that the dot is under the pointer before Python has answered."""
+
+_REST_S = 0.25
+
+_STEP = {"fine": 0.01, "coarse": 0.10}
+
+
+class MapView:
+    """The map of one case. Its window is set by where the case started and stays while the dot moves."""
+
+    def __init__(self, bench: Workbench) -> None:
+        self.bench = bench
+        self.delay, self.sensitivity = Range1d(0.0, 1.0), Range1d(0.0, 1.0)
+        self.plot = figure(
+            x_range=self.delay, y_range=self.sensitivity, tools=[], toolbar_location=None, sizing_mode="stretch_both",
+            min_border_left=70, min_border_right=14, min_border_top=8, min_border_bottom=46,
+        )  # fmt: skip
+        one: dict[str, list[float]] = {"delay": [], "sensitivity": []}
+        self.edge = ColumnDataSource({"delay": [], "critical": [], "top": []})
+        self.contours = ColumnDataSource({"delay": [], "sensitivity": []})
+        self.contour_texts = ColumnDataSource({"delay": [], "sensitivity": [], "text": []})
+        self.dot, self.hollow, self.diamond = (ColumnDataSource(dict(one)) for _ in range(3))
+        plot = self.plot
+        self.outside = plot.varea("delay", "critical", "top", source=self.edge, fill_alpha=0.10, hatch_pattern="/", hatch_scale=14)
+        self.inside = plot.varea("delay", 0, "critical", source=self.edge, fill_alpha=0.06)
+        self.contour_lines = plot.multi_line("delay", "sensitivity", source=self.contours, line_width=0.8, line_alpha=0.8)
+        self.contour_words = plot.text(
+            "delay", "sensitivity", "text", source=self.contour_texts, text_font=value(FONT), text_font_size="11px", text_align="center",
+            text_baseline="middle",
+        )  # fmt: skip
+        self.edge_line = plot.line("delay", "critical", source=self.edge, line_width=2.6)
+        text = {"text_font": FONT, "text_font_size": "12px"}
+        self.across = Arrow(end=NormalHead(size=7), x_start=0, x_end=0, y_start=0, y_end=0, visible=False)
+        self.upward = Arrow(end=NormalHead(size=7), x_start=0, x_end=0, y_start=0, y_end=0, visible=False)
+        self.lever = Arrow(end=NormalHead(size=9), x_start=0, x_end=0, y_start=0, y_end=0, visible=False)
+        self.across_words = Label(x=0, y=0, text="", text_align="center", y_offset=5, **text)
+        self.upward_words = Label(x=0, y=0, text="", text_align="left", x_offset=7, text_baseline="middle", **text)
+        self.hunts_words = Label(x=0, y=0, text="hunts", text_align="right", text_baseline="top", x_offset=-8, y_offset=-6, **text)
+        self.quiet_words = Label(x=0, y=0, text="settles or rings", text_align="left", x_offset=8, y_offset=6, **text)
+        for item in (self.across, self.upward, self.lever, self.across_words, self.upward_words, self.hunts_words, self.quiet_words):
+            plot.add_layout(item)
+        self.hollow_mark = plot.scatter("delay", "sensitivity", source=self.hollow, size=13, fill_alpha=0.0, line_width=2)
+        self.diamond_mark = plot.scatter("delay", "sensitivity", source=self.diamond, size=16, marker="diamond")
+        self.dot_mark = plot.scatter("delay", "sensitivity", source=self.dot, size=17, line_width=2)
+        for event in (PanStart, Pan):
+            plot.js_on_event(event, CustomJS(args={"dot": self.dot, "x": self.delay, "y": self.sensitivity}, code=_FOLLOW_POINTER))
+            plot.on_event(event, self._dragged)
+        plot.on_event(PanEnd, self._dropped)
+        plot.on_event(Tap, self._tapped)
+        plot.on_event(MouseMove, self._hovered)
+        plot.on_event(MouseLeave, self._left)
+        self.readout = Sheet()
+        self.root = pn.Column(pn.pane.Bokeh(plot, sizing_mode="stretch_both", min_height=220), self.readout, sizing_mode="stretch_both")
+        self._shape: Any = None
+        self._map: BoundaryMap | None = None
+        self._held = False
+        bench.listen("moving", self.follow)
+        bench.listen("settled", self.draw)
+        bench.listen("units", self.draw)
+        bench.listen("theme", self.dress)
+        bench.page.on("nudge", self._nudge)
+        self.dress()
+        self.draw()
+
+    def dress(self) -> None:
+        palette = PALETTES[self.bench.theme]
+        dress(self.plot, palette)
+        for glyph in (self.outside.glyph,):
+            glyph.fill_color = glyph.hatch_color = palette.outside
+            glyph.hatch_alpha = 0.35
+        self.inside.glyph.fill_color = palette.inside
+        self.edge_line.glyph.line_color = palette.ink
+        self.contour_lines.glyph.line_color = palette.quiet
+        self.contour_words.glyph.text_color = palette.quiet
+        for arrow in (self.across, self.upward, self.lever):
+            arrow.line_color = palette.ink
+            arrow.end.fill_color = arrow.end.line_color = palette.ink
+        for label in (self.across_words, self.upward_words):
+            label.text_color = palette.ink
+            label.background_fill_color = palette.paper
+            label.background_fill_alpha = 0.8
+        self.hunts_words.text_color = palette.outside
+        self.quiet_words.text_color = palette.inside
+        self.hollow_mark.glyph.line_color = palette.ink
+        self.diamond_mark.glyph.fill_color = palette.inside
+        self.diamond_mark.glyph.line_color = palette.paper
+        self.dot_mark.glyph.fill_color = palette.ink
+        self.dot_mark.glyph.line_color = palette.paper
+
+    def draw(self) -> None:
+        """Redraw all; the boundary and the contours only where the loop's shape changed."""
+        case = self.bench.case
+        window = window_of(case)
+        shape = (case.moved_to(window.middle_sensitivity, window.middle_delay).loop(), window)
+        if shape != self._shape:
+            self._shape = shape
+            self._map = map_of(case, window)
+            self._draw_boundary(self._map)
+            self.contours.data = {"delay": [], "sensitivity": []}
+            self.contour_texts.data = {"delay": [], "sensitivity": [], "text": []}
+            self.bench.later(self._contours_later(shape))
+        loop = case.loop()
+        unit = to_display(1.0, loop.sensitivity_unit, self.bench.units)[1]
+        self.plot.yaxis.axis_label = f"{loop.sensitivity_name} ({unit})" if unit else loop.sensitivity_name
+        self.plot.xaxis.axis_label = f"{loop.delay_name} (s)"
+        self._tick_units(loop.sensitivity_unit)
+        start = case.start().loop()
+        self.hollow.data = {"delay": [float(start.delay)], "sensitivity": [float(start.sensitivity)]}
+        self._draw_levers()
+        self._say("")
+        self.follow(settled=True)
+
+    def follow(self, settled: bool = False) -> None:
+        """Redraw what follows the hand: the dot and its two arrows."""
+        judged = self.bench.judged.judgement
+        delay, sensitivity = float(judged.loop.delay), float(judged.loop.sensitivity)
+        if settled or not self._held:
+            self.dot.data = {"delay": [delay], "sensitivity": [sensitivity]}
+        found = judged.margins
+        gain, lag = found.gain_margin, found.delay_margin_s
+        top = None if gain is None else sensitivity * gain
+        self._arrow(
+            self.upward, self.upward_words, (delay, sensitivity), None if top is None else (delay, top),
+            "" if gain is None else _share_words(gain - 1.0),
+        )  # fmt: skip
+        self._arrow(
+            self.across, self.across_words, (delay, sensitivity), None if lag is None else (delay + lag, sensitivity),
+            "" if lag is None else _delay_words(lag),
+        )  # fmt: skip
+
+    def _arrow(self, arrow: Arrow, label: Label, start: Any, end: Any, words: str) -> None:
+        if end is None:
+            arrow.visible = label.visible = False
+            return
+        x = min(max(end[0], self.delay.start), self.delay.end)
+        y = min(max(end[1], self.sensitivity.start), self.sensitivity.end)
+        arrow.update(x_start=start[0], y_start=start[1], x_end=x, y_end=y, visible=True)
+        label.update(x=0.5 * (start[0] + x), y=0.5 * (start[1] + y), text=words, visible=True)
+
+    def _draw_boundary(self, drawn: BoundaryMap) -> None:
+        window = drawn.window
+        self.delay.update(start=window.delay_low, end=window.delay_high)
+        self.sensitivity.update(start=window.sensitivity_low, end=window.sensitivity_high)
+        top = np.full_like(drawn.delays, window.sensitivity_high)
+        self.edge.data = {"delay": drawn.delays, "critical": np.minimum(drawn.critical, 2.0 * top), "top": 2.0 * top}
+        self.hunts_words.update(x=window.delay_high, y=window.sensitivity_high)
+        self.quiet_words.update(x=window.delay_low, y=window.sensitivity_low)
+
+    async def _contours_later(self, shape: Any) -> None:
+        """The contours take longer than a frame: they come when the hand has rested, and not at all if the shape changed meanwhile."""
+        await asyncio.sleep(_REST_S)
+        if shape is not self._shape or self._held:
+            return
+        lines = cycle_contours(self.bench.case, shape[1])
+        self.contours.data = {"delay": [line.delays for line in lines], "sensitivity": [line.sensitivities for line in lines]}
+        self.contour_texts.data = {
+            "delay": [line.label_at[0] for line in lines],
+            "sensitivity": [line.label_at[1] for line in lines],
+            "text": [seconds_words(line.period) if line.period >= 1.0 else f"{1000.0 * line.period:.0f} ms" for line in lines],
+        }
+
+    def _draw_levers(self) -> None:
+        changed = self.bench.judged.with_levers
+        if changed is None:
+            self.diamond.data = {"delay": [], "sensitivity": []}
+            self.lever.visible = False
+            return
+        now = self.bench.judged.judgement
+        point = self._equivalent(changed)
+        self.diamond.data = {"delay": [point[0]], "sensitivity": [point[1]]}
+        self.lever.update(
+            x_start=float(now.loop.delay), y_start=float(now.loop.sensitivity), x_end=point[0], y_end=point[1], visible=True
+        )
+
+    def _equivalent(self, changed: Any) -> tuple[float, float]:
+        """Where the case with levers stands on this map: at its own delay, as far from this boundary as it is from its own."""
+        delay = float(changed.loop.delay)
+        drawn = self._map
+        gain = changed.margins.gain_margin
+        if drawn is None or gain is None:
+            return delay, float(changed.loop.sensitivity)
+        critical = float(np.interp(delay, drawn.delays, np.minimum(drawn.critical, 1e6)))
+        return delay, critical / gain
+
+    def _tick_units(self, unit: str) -> None:
+        factor, _ = to_display(1.0, unit, self.bench.units)
+        self.plot.yaxis.formatter = CustomJSTickFormatter(
+            args={"factor": factor}, code="return String(parseFloat((tick * factor).toPrecision(3)))"
+        )
+
+    def _clamped(self, event: Any) -> tuple[float, float] | None:
+        if event.x is None or event.y is None:
+            return None
+        low, high = self.delay, self.sensitivity
+        x = min(max(float(event.x), low.start + 1e-3 * (low.end - low.start)), low.end)
+        y = min(max(float(event.y), high.start + 1e-3 * (high.end - high.start)), high.end)
+        return x, y
+
+    def _dragged(self, event: Any) -> None:
+        point = self._clamped(event)
+        if point is None:
+            return
+        self._held = True
+        case = self.bench.case
+        self.bench.attempt("map", lambda: case.moved_to(sensitivity=point[1], delay=point[0]), moving=True)
+
+    def _dropped(self, _event: Any) -> None:
+        self._held = False
+        self.bench.settle()
+
+    def _tapped(self, event: Any) -> None:
+        self.bench.page.send("focus", {"place": "slot-map"})
+
+    def _hovered(self, event: Any) -> None:
+        point = self._clamped(event)
+        if point is None or self._held:
+            return
+        case = self.bench.case.moved_to(sensitivity=point[1], delay=point[0])
+        judged = judge(case)
+        loop = judged.loop
+        gain = judged.margins.loop_gain
+        cycle = f", cycle {cycle_words(judged)}" if judged.linear_cycle_length else ""
+        self._say(
+            f"Here, {quantity(float(loop.sensitivity), loop.sensitivity_unit, self.bench.units)} and {figures(float(loop.delay))} s: "
+            f"{judged.standing}, loop gain {figures(gain)}{cycle}"
+        )
+
+    def _left(self, _event: Any) -> None:
+        self._say("")
+
+    def _say(self, words: str) -> None:
+        hint = "Drag the dot, or move it with the arrow keys (Shift for larger steps). Numbers on thin lines are cycle lengths."
+        self.readout.show(f'<p class="readout">{words or hint}</p>')
+
+    def _nudge(self, payload: Any) -> None:
+        """Arrow keys on the map: 1 % of the number each, with Shift 10 %."""
+        step = _STEP["coarse" if payload["large"] else "fine"]
+        case, loop = self.bench.case, self.bench.case.loop()
+        across, up = (1.0 + step) ** payload["right"], (1.0 + step) ** payload["up"]
+        sensitivity = float(loop.sensitivity) * up if payload["up"] else None
+        delay = float(loop.delay) * across if payload["right"] else None
+        self.bench.attempt("map", lambda: case.moved_to(sensitivity=sensitivity, delay=delay))
+
+
+def _share_words(change: float) -> str:
+    if change < 0.0:
+        return f"{-100.0 * change:.0f} % less sensitivity"
+    return f"{100.0 * change:.0f} % more sensitivity" if change < 9.0 else f"{change + 1.0:.0f} times the sensitivity"
+
+
+def _delay_words(delay: float) -> str:
+    size = abs(delay)
+    many = seconds_words(size) if size >= 1.0 else f"{figures(size, 2)} s" if size >= 0.1 else f"{1000.0 * size:.0f} ms"
+    return f"{many} {'less' if delay < 0.0 else 'more'} delay"
