@@ -8,9 +8,9 @@ from the boundary, with the drive's excursions scaled so that the loop stands on
 from __future__ import annotations
 
 import math
+from collections.abc import Iterator
 from dataclasses import dataclass
 from enum import StrEnum
-from typing import Any
 
 import numpy as np
 
@@ -19,7 +19,7 @@ from lagscape.engine.harmonic_single import single_balance
 from lagscape.engine.margins import Margins, margins
 from lagscape.loops.protocol import Array, DriveForm, Rest
 
-__all__ = ["Cycle", "CycleStatus", "limit_cycle"]
+__all__ = ["BranchPoint", "Cycle", "CycleSolver", "CycleStatus", "first_harmonic_gain", "follow_branch", "interpolated_at", "limit_cycle"]
 
 _ORDER = 16
 _FIRST_ORDER = 6
@@ -98,7 +98,7 @@ def limit_cycle(
     known = margins(form, rest) if known is None else known
     if known.stable:
         return Cycle(CycleStatus.SETTLES)
-    solver = _Solver(form, rest)
+    solver = CycleSolver(form, rest)
     if start is not None and start.harmonics is not None:
         found = solver.settle(start.harmonics.resized(order))
         if found is not None:
@@ -111,7 +111,7 @@ def limit_cycle(
     return Cycle(CycleStatus.NOT_FOUND) if found is None else solver.describe(*found)
 
 
-class _Solver:
+class CycleSolver:
     """The balance equations of one loop in the quick form if it has one, else in the general form."""
 
     def __init__(self, form: DriveForm, rest: Rest) -> None:
@@ -159,7 +159,7 @@ def first_harmonic_gain(balance: Balance, transfer: np.ndarray, factor: np.ndarr
     return to_spectrum(output * (balance.level[:, :1] + to_time(moved, 32)), 2)[:, 1] / amplitudes
 
 
-def _from_describing_function(solver: _Solver, omega: float, order: int) -> tuple[Harmonics, float] | None:
+def _from_describing_function(solver: CycleSolver, omega: float, order: int) -> tuple[Harmonics, float] | None:
     copies = prepare(solver.form, solver.rest, copies=73)
     unit = float(np.max(np.abs(copies.level[0]))) * max(abs(float(copies.output_rest[0])), 1e-3)
     amplitudes = unit * np.geomspace(1e-5, 1e4, 73)
@@ -191,15 +191,19 @@ def _rotated(harmonics: Harmonics) -> Harmonics:
     return Harmonics(harmonics.force * turn, harmonics.omega)
 
 
-def _from_boundary(solver: _Solver, known: Margins, order: int) -> tuple[Harmonics, float] | None:
-    for point in follow_branch(solver.general, known, most=80):
-        previous, following = point
+def _from_boundary(solver: CycleSolver, known: Margins, order: int) -> tuple[Harmonics, float] | None:
+    for previous, following in follow_branch(solver.general, known, most=80):
         if previous.gain < 1.0 <= following.gain:
-            share = (1.0 - previous.gain) / (following.gain - previous.gain)
-            force = previous.harmonics.force + share * (following.harmonics.force - previous.harmonics.force)
-            omega = previous.harmonics.omega + share * (following.harmonics.omega - previous.harmonics.omega)
-            return solver.settle(Harmonics(force, omega).resized(order), most=20)
+            return solver.settle(interpolated_at(previous, following, 1.0).resized(order), most=20)
     return None
+
+
+def interpolated_at(previous: BranchPoint, following: BranchPoint, gain: float) -> Harmonics:
+    """A guess for the cycle at this kappa between two neighbours on the branch."""
+    share = (gain - previous.gain) / (following.gain - previous.gain)
+    force = previous.harmonics.force + share * (following.harmonics.force - previous.harmonics.force)
+    omega = previous.harmonics.omega + share * (following.harmonics.omega - previous.harmonics.omega)
+    return Harmonics(force, omega)
 
 
 @dataclass(frozen=True)
@@ -213,7 +217,9 @@ class BranchPoint:
     harmonics: Harmonics
 
 
-def follow_branch(balance: Balance, known: Margins, order: int = 8, most: int = 60, growth: float = 1.25, first: float = 1e-3) -> Any:
+def follow_branch(
+    balance: Balance, known: Margins, order: int = 8, most: int = 60, growth: float = 1.25, first: float = 1e-3
+) -> Iterator[tuple[BranchPoint, BranchPoint]]:
     """Neighbouring pairs of `BranchPoint` along the branch of cycles from the boundary, by growing amplitude; ends where Newton fails.
 
     `first` is the first amplitude as a share of the largest linear one, |m0| |v0| (or |m0| where v0 is 0).

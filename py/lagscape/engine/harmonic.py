@@ -70,13 +70,14 @@ def _waves(count: int, samples: int) -> tuple[Array, Array]:
 def to_time(spectrum: np.ndarray, samples: int) -> Array:
     """Real signals (..., samples) over one period from harmonics 0 .. K - 1 (..., K)."""
     wave, _ = _waves(spectrum.shape[-1], samples)
-    return np.concatenate([spectrum.real, spectrum.imag], axis=-1) @ wave
+    parts = np.concatenate([spectrum.real, spectrum.imag], axis=-1)
+    return (parts.reshape(-1, parts.shape[-1]) @ wave).reshape(*spectrum.shape[:-1], samples)
 
 
 def to_spectrum(signal: Array, count: int) -> np.ndarray:
     """Harmonics 0 .. count - 1 of real signals (..., samples)."""
     _, back = _waves(count, signal.shape[-1])
-    parts = signal @ back
+    parts = (signal.reshape(-1, signal.shape[-1]) @ back).reshape(*signal.shape[:-1], 2 * count)
     spectrum = np.empty((*signal.shape[:-1], count), dtype=complex)
     spectrum.real, spectrum.imag = parts[..., :count], parts[..., count:]
     return spectrum

@@ -24,6 +24,8 @@ __all__ = ["CycleMap", "LinearMap", "cycle_map", "linear_map", "progressive_cycl
 
 _CYCLE_ORDER = 6
 _FINE = 64
+_CHUNK = 2000
+"""Cells worked on at once, so that a large map does not ask for gigabytes."""
 
 
 @dataclass(frozen=True)
@@ -103,17 +105,23 @@ def cycle_map(loop: Loop, first: str, firsts: Any, second: str, seconds: Any, or
     cells = np.flatnonzero(hunts)
     result = [np.zeros(shape[0] * shape[1], dtype=kind) for kind in (bool, float, float, float)]
     if cells.size:
-        some = _cells(loop, first, firsts, second, seconds, cells)
-        form, rest = some.form(), some.rest()
-        balance = prepare(form, rest)
-        start = _describing_start(balance, known.phase_crossover_frequency.reshape(-1)[cells], order)
+        omega = known.phase_crossover_frequency.reshape(-1)[cells]
 
-        def rebuilt(which: Array) -> Balance:
+        def rebuilt(which: Array) -> tuple[Any, Balance]:
             part = _cells(loop, first, firsts, second, seconds, cells[which])
-            return prepare(part.form(), part.rest())
+            form = part.form()
+            return form, prepare(form, part.rest())
 
-        harmonics, converged = _settle_all(balance, start, cells, shape, rebuilt)
-        amplitude, silent = _figures(form, balance, harmonics)
+        parts = [_settled(rebuilt, which, omega[which], order) for which in np.split(np.arange(cells.size), range(_CHUNK, cells.size, _CHUNK))]
+        start = np.concatenate([part[0] for part in parts])
+        harmonics = Harmonics(np.concatenate([part[1].force for part in parts]), np.concatenate([part[1].omega for part in parts]))
+        converged = np.concatenate([part[2] for part in parts])
+        harmonics, converged = _reseeded(harmonics, converged, start, cells, shape, rebuilt)
+        figures = [
+            _figures(*rebuilt(which), harmonics.member(which))
+            for which in np.split(np.arange(cells.size), range(_CHUNK, cells.size, _CHUNK))
+        ]
+        amplitude, silent = (np.concatenate(column) for column in zip(*figures, strict=True))
         for column, values in zip(
             result, (converged, amplitude, 2.0 * math.pi / np.where(converged, harmonics.omega, 1.0), silent), strict=True
         ):
@@ -173,20 +181,46 @@ def _describing_start(balance: Balance, omega: Array, order: int) -> Harmonics:
     return Harmonics(force, np.array(omega, dtype=float))
 
 
-def _settle_all(
-    balance: Balance, start: Harmonics, cells: Array, shape: tuple[int, int], rebuilt: Callable[[Array], Balance]
+def _settled(
+    rebuilt: Callable[[Array], tuple[Any, Balance]], which: Array, omega: Array, order: int
+) -> tuple[Array, Harmonics, Array]:
+    """First amplitudes, harmonics and success of some cells, begun from their describing functions."""
+    balance = rebuilt(which)[1]
+    start = _describing_start(balance, omega, order)
+    least = 1e-3 * np.abs(start.force[:, 0, 1])
+    force, omega = start.force.copy(), start.omega.copy()
+    good = np.zeros(which.size, dtype=bool)
+    active = np.arange(which.size)
+    for steps in (4, 3, 4):
+        # Cells that have settled leave, so that the last steps are taken by the few that need them.
+        solved = solve(balance, Harmonics(force[active], omega[active]), most=steps, tolerance=1e-3)
+        force[active], omega[active] = solved.harmonics.force, solved.harmonics.omega
+        kept = np.abs(force[active, 0, 1]) > least[active]
+        good[active] = solved.converged & kept
+        active = active[~solved.converged & np.isfinite(omega[active]) & kept]
+        if not active.size:
+            break
+        balance = rebuilt(which[active])[1]
+    return 1e3 * least, Harmonics(force, omega), good
+
+
+def _reseeded(
+    harmonics: Harmonics,
+    good: Array,
+    start: Array,
+    cells: Array,
+    shape: tuple[int, int],
+    rebuilt: Callable[[Array], tuple[Any, Balance]],
 ) -> tuple[Harmonics, Array]:
-    solved = solve(balance, start, most=9, tolerance=1e-4)
-    good = solved.converged & (np.abs(solved.harmonics.force[:, 0, 1]) > 1e-3 * np.abs(start.force[:, 0, 1]))
-    force, omega = solved.harmonics.force.copy(), solved.harmonics.omega.copy()
+    """Cells that failed, begun again from the nearest that did not, until no more come right."""
+    force, omega, good = harmonics.force.copy(), harmonics.omega.copy(), good.copy()
     for _ in range(6):
         bad = np.flatnonzero(~good)
         if not bad.size or not good.any():
             break
         nearest = _nearest_good(cells, good, bad, shape)
-        force[bad], omega[bad] = force[nearest], omega[nearest]
-        again = solve(rebuilt(bad), Harmonics(force[bad], omega[bad]), most=9, tolerance=1e-4)
-        alive = again.converged & (np.abs(again.harmonics.force[:, 0, 1]) > 1e-3 * np.abs(start.force[bad, 0, 1]))
+        again = solve(rebuilt(bad)[1], Harmonics(force[nearest], omega[nearest]), most=9, tolerance=1e-3)
+        alive = again.converged & (np.abs(again.harmonics.force[:, 0, 1]) > 1e-3 * start[bad])
         force[bad[alive]], omega[bad[alive]] = again.harmonics.force[alive], again.harmonics.omega[alive]
         good[bad[alive]] = True
         if not alive.any():
