@@ -184,17 +184,20 @@ class Balance:
         return np.matmul(self.sensed_rows, plant) * np.exp(-self.delays[:, :, None] * s[:, None])
 
     def transfers(self, omega: Array, order: int) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
-        """T_a (B, n_a, r, K), T_m (B, r, r, K) and their derivatives by omega; K = order + 1."""
-        n_control = self.control.shape[1]
+        """T_a (B, n_a, r, K), T_m (B, r, r, K) at the harmonics of omega, and their derivatives by omega; K = order + 1."""
         k = np.arange(order + 1)
-        s = 1j * omega[:, None] * k
+        value, moved, slope, moved_slope = self.transfers_at(1j * omega[:, None] * k)
+        return value, moved, slope * (1j * k), moved_slope * (1j * k)
+
+    def transfers_at(self, s: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
+        """T_a and T_m at any complex points s (B, K), and their derivatives by s."""
         inverse = _inverse(s, self.plant)
         answer = inverse[:, :, :, list(self.rows)]
         slope = -(inverse @ answer)
         turn = np.exp(-s[:, :, None] * self.delays[:, None])[..., None]
         sensed = (self.sensed_rows @ answer) * turn
         sensed_slope = (self.sensed_rows @ slope) * turn - self.delays[:, None, :, None] * sensed
-        if n_control:
+        if self.control.shape[1]:
             inner = _inverse(s, self.control)
             reply = inner @ self.control_by_sensed[:, None]
             control = reply @ sensed
@@ -202,8 +205,7 @@ class Balance:
             sensed = np.concatenate([sensed, control], axis=2)
             sensed_slope = np.concatenate([sensed_slope, control_slope], axis=2)
         by = self.by_output[:, None]
-        factor = (1j * k)[None, :, None, None]
-        parts = (sensed, by @ answer, sensed_slope * factor, (by @ slope) * factor)
+        parts = (sensed, by @ answer, sensed_slope, by @ slope)
         return tuple(np.moveaxis(part, 1, 3) for part in parts)  # type: ignore[return-value]
 
     def _in_drive_order(self, arguments: np.ndarray, samples: int) -> tuple[Array, Array]:
