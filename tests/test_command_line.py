@@ -12,7 +12,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 
-from lagscape.case.case import Case
+from lagscape.case.case import Case, LeverSetting
 from lagscape.command_line import main
 from lagscape.questions.standing import Standing, analyse
 from lagscape.version import VERSION
@@ -134,6 +134,21 @@ def test_a_broken_case_is_one_sentence_and_exit_code_two():
     done = run("analyse", "-", text='{"format": "lagscape-case", "version": 99}')
     assert done.returncode == 2 and done.stdout == ""
     assert done.stderr == "lagscape: The case has version 99, and this Lagscape reads up to version 1; open it in a newer Lagscape.\n"
+
+
+def test_an_unknown_lever_is_one_sentence_and_exit_code_two():
+    done = run("analyse", "-", text=Case.typical("breathing").with_levers(LeverSetting("magic_l_min", 1.0)).to_json())
+    assert done.returncode == 2 and done.stdout == "" and done.stderr.count("\n") == 1
+    assert done.stderr.startswith("lagscape: The case cannot be read: The breathing loop has no lever 'magic_l_min'; it has: ")
+
+
+def test_a_lever_changes_what_analyse_says():
+    case = Case.from_starting_case("heart-failure-periodic")
+    laid = case.with_levers(LeverSetting("oxygen_l_min", 2.0))
+    result = json.loads(run("analyse", "-", text=laid.to_json()).stdout)
+    assert result["levers"] == [{"name": "oxygen_l_min", "dose": 2.0}]
+    # Oxygen takes from the peripheral gain, so the loop gain must fall.
+    assert result["loop_gain"] == analyse(laid).loop_gain < analyse(case).loop_gain
 
 
 def test_a_case_that_allows_no_rest_is_one_sentence_and_exit_code_two():

@@ -85,9 +85,13 @@ def _parser() -> argparse.ArgumentParser:
 
 def _analyse(options: argparse.Namespace) -> int:
     from lagscape.case.case_file import LARGEST_FILE_BYTES, case_from_json, read_case_file
+    from lagscape.questions.levers import check_lever
     from lagscape.questions.standing import analyse
 
-    case = case_from_json(sys.stdin.buffer.read(LARGEST_FILE_BYTES + 1)) if options.case == "-" else read_case_file(options.case)
+    if options.case == "-":
+        case = case_from_json(sys.stdin.buffer.read(LARGEST_FILE_BYTES + 1), check_lever)
+    else:
+        case = read_case_file(options.case, check_lever)
     _print_json(analyse(case).to_json())
     return 0
 

@@ -41,7 +41,7 @@ def case_schema() -> dict[str, Any]:
             "numbers": {"type": "object"},
             "choices": {"type": "object"},
             "levers": {
-                "description": "Levers in the order in which they act; a lever's name ends in the unit of its dose.",
+                "description": "Levers laid on the case; a lever's name ends in the unit of its dose.",
                 "type": "array",
                 "maxItems": MOST_LEVERS,
                 "items": {
