@@ -27,8 +27,10 @@ TOP_FILES = ("index.html", "start.js", "service_worker.js", "icon.svg", "manifes
 BOKEH_SCRIPTS = ("bokeh.min.js", "bokeh-widgets.min.js", "bokeh-tables.min.js")
 
 
-def build_site(dist: Path, progress: Progress) -> Path:
+def build_site(dist: Path, progress: Progress, package: Path = PACKAGE, web: Path = WEB) -> Path:
     """Builds the whole site into `dist`, changing only files whose content changed. Returns `dist`.
+
+    `package` and `web` may be other folders of the same form, for a test that breaks one on purpose.
 
     Raises
     ------
@@ -44,16 +46,16 @@ def build_site(dist: Path, progress: Progress) -> Path:
 
     library = _library_files(compiler, runtime, wheels, node, progress)
     library_folder = f"lib-{_hash(library)}"
-    web = {path.name: path.read_bytes() for path in sorted(WEB.iterdir()) if path.is_file() and path.name not in TOP_FILES}
-    app = {**web, "lagscape.zip": pack(compiler.compile(package_files(PACKAGE)))}
-    version = _hash({**app, **{name: (WEB / name).read_bytes() for name in TOP_FILES}, "library": library_folder.encode()})
+    app = {path.name: path.read_bytes() for path in sorted(web.iterdir()) if path.is_file() and path.name not in TOP_FILES}
+    app["lagscape.zip"] = pack(compiler.compile(package_files(package)))
+    top = {name: (web / name).read_bytes() for name in TOP_FILES}
+    version = _hash({**app, **top, "library": library_folder.encode()})
     app["site.js"] = _site_module(version, library_folder, library, app)
     app_folder = f"app-{version}"
 
     files = {f"{library_folder}/{name}": data for name, data in library.items()}
     files |= {f"{app_folder}/{name}": data for name, data in app.items()}
-    for name in TOP_FILES:
-        data = (WEB / name).read_bytes()
+    for name, data in top.items():
         if name == "index.html":
             data = data.replace(b"app-version/", f"{app_folder}/".encode())
         elif name == "service_worker.js":

@@ -36,10 +36,19 @@ class SiteHandler(SimpleHTTPRequestHandler):
         """Says nothing: every request of a page would be a line."""
 
 
+class SiteServer(ThreadingHTTPServer):
+    """Says nothing when a browser closes a connection early, as it does with every tab that is closed while loading."""
+
+    def handle_error(self, request: object, client_address: object) -> None:
+        """Prints only what is not a closed connection."""
+        if not isinstance(sys.exc_info()[1], ConnectionError):
+            super().handle_error(request, client_address)  # type: ignore[arg-type]
+
+
 def serve(dist: Path, port: int) -> None:
     """Serves `dist` on 127.0.0.1 until interrupted; the address is printed first."""
     try:
-        server = ThreadingHTTPServer(("127.0.0.1", port), partial(SiteHandler, directory=str(dist)))
+        server = SiteServer(("127.0.0.1", port), partial(SiteHandler, directory=str(dist)))
     except OSError as error:
         raise BuildError(f"Port {port} cannot be used ({error.strerror}): give another with --port.") from error
     print(f"Lagscape is at http://127.0.0.1:{server.server_port}/  (Ctrl+C stops it)", flush=True)

@@ -18,12 +18,26 @@ export function countedFetch(plainFetch, sizes, report) {
     }
   }
 
+  function countWhenFetched(address, size) {
+    const observer = new PerformanceObserver((list) => {
+      if (!list.getEntriesByName(address).length) return;
+      observer.disconnect();
+      count(size);
+    });
+    observer.observe({ type: "resource", buffered: true });
+  }
+
   return async function fetchCounted(resource, options) {
     const address = typeof resource === "string" ? resource : (resource.url ?? String(resource));
     const name = address.split(/[?#]/)[0].split("/").pop();
     const answer = await plainFetch(resource, options);
     if (!answer.ok) throw new Error(`${name} could not be fetched (status ${answer.status})`);
     if (!(name in sizes) || !answer.body) return answer;
+    if (name.endsWith(".wasm")) {
+      // The browser keeps compiled WebAssembly with the answer itself: a copy of the answer would be compiled anew at every visit.
+      countWhenFetched(address, sizes[name]);
+      return answer;
+    }
     const counter = new TransformStream({
       transform(chunk, controller) {
         count(chunk.byteLength);

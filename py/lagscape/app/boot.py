@@ -6,6 +6,7 @@ Boot goes in the order of the functions: prepare, import_drawing, import_widgets
 
 from __future__ import annotations
 
+import gc
 import importlib
 import json
 import traceback
@@ -18,7 +19,9 @@ __all__ = ["build", "change", "command", "drawn", "import_application", "import_
 
 def prepare(style_sheets: str) -> None:
     """Sets what must be in place before Bokeh and Panel are imported; `style_sheets`: address of Panel's own files."""
-    panel_compat.stand_in_for_pandas()
+    # Importing makes hundreds of thousands of objects that stay: looking through them for garbage only costs time.
+    gc.disable()
+    panel_compat.stand_in_for_unused()
     panel_compat.use_own_style_sheets(style_sheets)
 
 
@@ -61,8 +64,10 @@ class _Running:
         self.page = PageLink(self._post, **settings)
         self.page.join(self._draw, self.trouble)
         self.roots: dict[str, str] = {}
-        for slot, viewable in main.build(self.page).items():
-            self._add_root(slot, viewable)
+        viewables = main.build(self.page)
+        with self.document.models.freeze():  # the set of all models is worked out once, not once a root
+            for slot, viewable in viewables.items():
+                self._add_root(slot, viewable)
 
     def document_json(self) -> str:
         """The whole document and the slot of each root, as JSON text."""
@@ -126,6 +131,10 @@ def drawn() -> None:
     """The page has drawn the document: changes may flow."""
     assert _running is not None
     _running.start()
+    # What is there now stays till the end: garbage is looked for among later objects only, so a drag never waits for it.
+    gc.collect()
+    gc.freeze()
+    gc.enable()
 
 
 def change(patch: str) -> None:

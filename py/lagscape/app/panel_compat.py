@@ -1,8 +1,9 @@
-"""Lets Panel and Bokeh start in the browser without pandas, without network patches and with style sheets of this site.
+"""Lets Panel and Bokeh start in the browser without what they import and this page never uses, and with style sheets of this site.
 
 Bokeh 3.7 imports pandas only to ask whether a value is a data frame; nothing here ever makes one, so empty classes answer. Panel asks
-for pandas unless pyodide-http is there; it would patch network libraries that the page must not use, so a name without function stands
-for it. Panel's components name style sheets of a content network: they are pointed at the site's own copy before anything reads them.
+for pandas unless pyodide-http is there; that would patch network libraries that the page must not use, so a name without function stands
+for it. Map tiles, YAML themes and Panel's chat widgets are imported at the start and never used: together they cost about a twentieth
+of the start. Panel's components name style sheets of a content network: they are pointed at the site's own copy before anything reads them.
 """
 
 from __future__ import annotations
@@ -14,13 +15,13 @@ import sys
 from types import ModuleType, SimpleNamespace
 from typing import Any
 
-__all__ = ["stand_in_for_pandas", "use_own_style_sheets"]
+__all__ = ["stand_in_for_unused", "use_own_style_sheets"]
 
 RESOURCES = "panel.io.resources"
 
 
-def stand_in_for_pandas() -> None:
-    """Puts modules `pandas` and `pyodide_http` in place that hold names for isinstance checks and nothing else."""
+def stand_in_for_unused() -> None:
+    """Puts modules in place of libraries that are only imported: they hold names for isinstance checks and nothing else."""
     if "pandas" in sys.modules:
         return
     frames = {name: type(name, (), {}) for name in ("DataFrame", "Series", "Index", "MultiIndex", "Timestamp", "Timedelta", "Period")}
@@ -28,6 +29,9 @@ def stand_in_for_pandas() -> None:
     _module("pandas.core", __path__=[])
     _module("pandas.core.groupby", GroupBy=type("GroupBy", (), {}))
     _module("pyodide_http", patch_all=lambda: None)
+    _module("yaml", SafeLoader=type("SafeLoader", (), {}), load=_refuse, safe_load=_refuse)
+    _module("xyzservices", TileProvider=type("TileProvider", (), {}))
+    _module("panel.chat")
     # Panel cleans the name of a custom component, which this program makes itself, with bleach: escaping serves as well.
     _module("bleach", sanitizer=SimpleNamespace(Cleaner=lambda **_: SimpleNamespace(clean=html.escape)))
 
@@ -35,6 +39,10 @@ def stand_in_for_pandas() -> None:
 def use_own_style_sheets(address: str) -> None:
     """Makes Panel look for its style sheets under `address`, which ends with a slash. Call it before Panel is imported."""
     sys.meta_path.insert(0, _ResourcesFinder(address))
+
+
+def _refuse(*_: Any, **__: Any) -> None:
+    raise NotImplementedError("YAML files are not read in the browser")
 
 
 def _module(name: str, **members: Any) -> None:
