@@ -49,9 +49,7 @@ def breathing_rates(p: dict[str, float], ventilation: float, pa: float, pv: floa
     beta, q = p["co2_solubility_per_mmhg"], p["cardiac_output_l_min"]
     share = 1.0 - p["dead_space_fraction"]
     lung_per_min = (CO2_CONSTANT * beta * q * (pv - pa) - share * ventilation * (pa - p["inspired_pco2_mmhg"])) / p["lung_volume_l"]
-    tissue_per_min = (CO2_CONSTANT * p["co2_production_l_min"] - CO2_CONSTANT * beta * q * (pv - pa)) / (
-        p["tissue_volume_l"] * CO2_CONSTANT * beta
-    )
+    tissue_per_min = (CO2_CONSTANT * p["co2_production_l_min"] - CO2_CONSTANT * beta * q * (pv - pa)) / (p["tissue_volume_l"] * CO2_CONSTANT * beta)
     central_per_s = (pa_central - pc) / p["central_time_constant_s"]
     return lung_per_min / 60.0, tissue_per_min / 60.0, central_per_s
 
