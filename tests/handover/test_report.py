@@ -145,6 +145,8 @@ def test_levers_stand_with_dose_effect_and_caution_and_the_standing_before_and_a
     made = page(analysis=CALM, without_levers=HUNTS, levers=(line,), cautions=("In heart failure, mind the trial.",))
     assert ["Oxygen", "2 L/min", "loop gain −31 %", "Watch the PaCO2."] in made.rows
     assert ["Loop gain", "1.46", "0.180"] in made.rows
+    words = " ".join(made.text.split())
+    assert f"Without levers: {HUNTS.sentence}" in words and f"With levers: {CALM.sentence}" in words
     assert "In heart failure, mind the trial." in made.text and line.source in made.text
 
 

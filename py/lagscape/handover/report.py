@@ -81,7 +81,7 @@ def report_html(report: Report) -> str:
     body = [
         f"<header><p>Lagscape {escape(VERSION)}</p><p>{escape(CAUTION)}</p></header>",
         f"<h1>{escape(loop.title)}</h1>",
-        f'<p class="standing">{escape(report.analysis.sentence)}</p>',
+        _sentences(report),
         _figures(report),
         _cautions(report.cautions),
         *(_picture(item) for item in report.pictures),
@@ -99,6 +99,16 @@ def report_html(report: Report) -> str:
         '<meta name="viewport" content="width=device-width, initial-scale=1">'
         f"<title>{escape(loop.title)}: {escape(str(report.analysis.standing))}</title><style>{_STYLE}</style></head>\n"
         f"<body>{''.join(body)}</body></html>\n"
+    )
+
+
+def _sentences(report: Report) -> str:
+    """The verdict in the largest type; where levers are laid, both verdicts, each saying which it is."""
+    if report.without_levers is None:
+        return f'<p class="standing">{escape(report.analysis.sentence)}</p>'
+    return "".join(
+        f'<p class="standing"><span>{words}</span> {escape(analysis.sentence)}</p>'
+        for words, analysis in (("Without levers:", report.without_levers), ("With levers:", report.analysis))
     )
 
 
@@ -249,6 +259,8 @@ _STYLE = """
 body { font: 11pt/1.4 system-ui, -apple-system, 'Segoe UI', Roboto, 'Liberation Sans', sans-serif; color: #1C2530; background: #fff;
   max-width: 180mm; margin: 0 auto; padding: 8mm 4mm; font-variant-numeric: tabular-nums }
 header { display: flex; justify-content: space-between; gap: 1em; border-bottom: 1px solid #D8D8D0; font-size: 9pt; color: #3A434C }
+header p:first-child { white-space: nowrap }
+.standing span { font-size: 11pt }
 header p, footer p { margin: 0 0 2mm }
 h1 { font-size: 13pt; margin: 5mm 0 1mm; font-weight: 600 }
 h2 { font-size: 11pt; margin: 6mm 0 1.5mm; font-weight: 600 }
