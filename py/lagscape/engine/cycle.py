@@ -1,8 +1,9 @@
 """The limit cycle of one loop that hunts: how large, how long, how much of it in silence.
 
-Harmonic balance (see `harmonic`) from one of three starts: the cycle of the last moment, while a case is dragged; the describing
-function, which balances the first harmonic alone over a range of amplitudes; and, where that fails, the branch of cycles followed
-from the boundary, with the drive's excursions scaled so that the loop stands on the boundary and the scale brought back to 1.
+Harmonic balance (see `harmonic`) from one of four starts: the cycle of the last moment, while a case is dragged; the describing
+function, which balances the first harmonic alone over a range of amplitudes; where that fails, the branch of cycles followed
+from the boundary, with the drive's excursions scaled so that the loop stands on the boundary and the scale brought back to 1; and
+last, a simulation.
 """
 
 from __future__ import annotations
@@ -108,6 +109,8 @@ def limit_cycle(
     found = _from_describing_function(solver, known.phase_crossover_frequency, order)
     if found is None:
         found = _from_boundary(solver, known, order)
+    if found is None:
+        found = _from_simulation(solver, known.phase_crossover_frequency, order)
     return Cycle(CycleStatus.NOT_FOUND) if found is None else solver.describe(*found)
 
 
@@ -182,6 +185,36 @@ def _from_describing_function(solver: CycleSolver, omega: float, order: int) -> 
         if found is not None:
             return found
     return None
+
+
+def _from_simulation(solver: CycleSolver, omega: float, order: int) -> tuple[Harmonics, float] | None:
+    """Let the loop run until it cycles and take the last whole cycle: slow, and only for steep loops whose waves are nearly square."""
+    from lagscape.engine.simulate import simulate
+
+    form, rest = solver.form, solver.rest
+    period = 2.0 * math.pi / omega
+    push = 0.05 * np.where(rest.state != 0.0, np.abs(rest.state), 0.0)
+    push[0] = push[0] or 0.05
+    trace = simulate(form, duration=50.0 * period, rest=rest, offset=push, output_times=50 * 400 + 1)
+    if trace.status == "diverged" or trace.times.size < 1000:
+        return None
+    late = slice(trace.times.size // 2, None)
+    times, states, output = trace.times[late], trace.states[late, : form.n_plant], trace.output[late]
+    height = output - 0.5 * (np.max(output) + np.min(output))
+    rises = np.flatnonzero((height[:-1] < 0.0) & (height[1:] >= 0.0))
+    if rises.size < 3 or not np.ptp(output) > 0.0:
+        return None
+    start, end = (times[i] - height[i] * (times[i + 1] - times[i]) / (height[i + 1] - height[i]) for i in rises[[-2, -1]])
+    samples = 2048
+    at = start + (end - start) * np.arange(samples) / samples
+    balance = solver.general
+    held = balance.output_rest[0] - balance.shift[0]
+    state = np.array([np.interp(at, times, column) for column in states.T])
+    moved = balance.by_output[0] @ (state - rest.state[: form.n_plant, None])
+    level = balance.level[0][:, None]
+    force = np.interp(at, times, output) * (level + moved) - balance.output_rest[0] * level - held * moved
+    spectrum = np.fft.fft(force, axis=1)[:, : order + 1] / samples
+    return solver.settle(_rotated(Harmonics(spectrum[None], np.array([2.0 * math.pi / (end - start)]))), most=30)
 
 
 def _rotated(harmonics: Harmonics) -> Harmonics:
