@@ -114,6 +114,10 @@ class BrowserRuntime:
         """Lays the files of a served bundle on the runtime's disk under `folder`."""
         self._ask("files", address=address, folder=folder)
 
+    def add_path(self, folder: str) -> None:
+        """Puts a folder of the runtime's disk first among those that Python imports from."""
+        self._ask("path", folder=folder)
+
     def load_scipy(self) -> None:
         """Loads scipy as the application does when it needs it."""
         self._ask("scipy")

@@ -37,6 +37,10 @@ const tasks = {
     pyodide.runPython("importlib.invalidate_caches()");
     return null;
   },
+  async path({ folder }) {
+    pyodide.pyimport("sys").path.insert(0, folder);
+    return null;
+  },
   async scipy() {
     await pyodide.loadPackage("scipy", { messageCallback: () => {}, checkIntegrity: true });
     return null;

@@ -8,13 +8,16 @@ from __future__ import annotations
 
 import hashlib
 import json
+import os
 import shutil
+import subprocess
 import zipfile
 from collections.abc import Mapping
 from pathlib import Path
 
 from build_environment import ROOT, environment_python, node_program
 from build_progress import Progress
+from build_stills import NAMES
 from bundle_python import STANDARD_LIBRARY, Compiler, merged, pack, package_files, runtime_lock_text, wheel_files
 from fetch_files import RUNTIME_LOCK, WHEELS_LOCK, fetch_runtime, fetch_wheels
 
@@ -24,6 +27,8 @@ CACHE = ROOT / ".cache"
 WEB = ROOT / "web"
 PACKAGE = ROOT / "py" / "lagscape"
 TOP_FILES = ("index.html", "start.js", "service_worker.js", "icon.svg", "manifest.webmanifest")
+STILLS_SCRIPT = Path(__file__).with_name("build_stills.py")
+EMPTY_PICTURE = b'<svg xmlns="http://www.w3.org/2000/svg" viewBox="0 0 720 420"/>'
 BOKEH_SCRIPTS = ("bokeh.min.js", "bokeh-widgets.min.js", "bokeh-tables.min.js")
 
 
@@ -47,6 +52,7 @@ def build_site(dist: Path, progress: Progress, package: Path = PACKAGE, web: Pat
     library = _library_files(compiler, runtime, wheels, node, progress)
     library_folder = f"lib-{_hash(library)}"
     app = {path.name: path.read_bytes() for path in sorted(web.iterdir()) if path.is_file() and path.name not in TOP_FILES}
+    app |= _stills(python, package, progress)
     app["lagscape.zip"] = pack(compiler.compile(package_files(package)))
     top = {name: (web / name).read_bytes() for name in TOP_FILES}
     version = _hash({**app, **top, "library": library_folder.encode()})
@@ -65,6 +71,22 @@ def build_site(dist: Path, progress: Progress, package: Path = PACKAGE, web: Pat
     changed = _write(dist, files)
     progress.step(f"dist/ is up to date: {len(files)} files, {sum(map(len, files.values())) / 1e6:.1f} MB, {changed} changed")
     return dist
+
+
+def _stills(python: Path, package: Path, progress: Progress) -> dict[str, bytes]:
+    """The opening case's pictures, drawn anew when the package changed; empty pictures where they cannot be drawn."""
+    folder = CACHE / "stills" / _hash({**package_files(package), "script": STILLS_SCRIPT.read_bytes()})
+    if package == PACKAGE and not folder.is_dir():
+        progress.step("drawing the still pictures")
+        shutil.rmtree(folder.parent, ignore_errors=True)
+        part = folder.with_suffix(".part")
+        environment = {**os.environ, "PYTHONDONTWRITEBYTECODE": "1"}
+        run = subprocess.run([str(python), str(STILLS_SCRIPT), str(part)], capture_output=True, text=True, env=environment)
+        if run.returncode == 0:
+            part.rename(folder)
+        else:
+            progress.step(f"note: no still pictures, the page starts with empty frames: {run.stderr.strip().splitlines()[-1]}")
+    return {name: (folder / name).read_bytes() if folder.is_dir() else EMPTY_PICTURE for name in NAMES}
 
 
 def _library_files(compiler: Compiler, runtime: Path, wheels: Mapping[str, Path], node: Path | None,
