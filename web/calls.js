@@ -56,7 +56,7 @@ const answers = {
   keep_case: (page, { link }) => {
     page.keptCase = link;
   },
-  focus: (page, { place }) => document.getElementById(place)?.focus(),
+  focus: (page, { place }) => (document.getElementById(place) ?? document.getElementById(`slot-${place}`))?.focus(),
   say: (page, { place, text, tone }) => page.state.say(place, text, tone),
   standing: (page, { text, state }) => page.state.standing(text, state),
   show: (page, { view, open }) => page.state.show(view, open),

@@ -3,6 +3,9 @@
   "use strict";
   var app = document.currentScript.getAttribute("data-app");
 
+  // A link brings its own case: the opening case's pictures must not stand above somebody else's numbers, not even for seconds.
+  if (location.hash.length > 1) document.body.setAttribute("data-linked", "");
+
   function say(sentence, support) {
     document.body.setAttribute("data-state", "failed");
     document.getElementById("boot").hidden = true;
