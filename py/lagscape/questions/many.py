@@ -8,7 +8,9 @@ from typing import Any
 
 import numpy as np
 
+from lagscape.engine.dominant_batch import dominant_batch
 from lagscape.engine.margins_batch import margins_batch
+from lagscape.engine.open_loop import open_loop
 from lagscape.errors import InvalidInputError
 from lagscape.loops.protocol import Array, batch_shape
 from lagscape.questions.standing import SETTLED_SHARE, Standing
@@ -77,15 +79,17 @@ def judge_many(build: Callable[[Array], Any], count: int, growth: bool = False) 
             loop = build(which)
             if batch_shape(loop) != which.shape:
                 loop = loop.with_delay(loop.delay + np.zeros(which.size))
-            found = margins_batch(loop.form(), loop.rest(), growth=growth)
+            form, rest = loop.form(), loop.rest()
+            opened = open_loop(form, rest)
+            found = margins_batch(form, rest, opened, growth=False)
         except InvalidInputError:
             if which.size > 1:
                 waiting += [which[: which.size // 2], which[which.size // 2 :]]
             continue
-        values = (
-            True, found.stable, found.loop_gain, found.has_phase_crossover, found.has_oscillation, found.growth_rate_per_s,
-            found.cycle_length_s,
-        )  # fmt: skip
-        for column, value in zip(columns, values, strict=True):
+        values: list[Any] = [True, found.stable, found.loop_gain, found.has_phase_crossover]
+        if growth:
+            dominant = dominant_batch(opened, found)
+            values += [dominant.has, dominant.growth_rate_per_s, dominant.cycle_length_s]
+        for column, value in zip(columns, values, strict=False):
             column[which] = value
     return Many(*columns)
