@@ -15,7 +15,10 @@ from lagscape.engine.crossings import Crossings, GainCrossing, PhaseCrossing, fi
 from lagscape.engine.open_loop import OpenLoop, open_loop
 from lagscape.loops.protocol import DriveForm, Rest
 
-__all__ = ["MarginStatus", "Margins", "margins"]
+__all__ = ["ON_BOUNDARY", "MarginStatus", "Margins", "margins"]
+
+ON_BOUNDARY = 1e-9
+"""rad; a lag this close to none is none."""
 
 
 class MarginStatus(StrEnum):
@@ -125,10 +128,10 @@ def _lag_part(opened: OpenLoop, crossings: Crossings) -> tuple[float | None, flo
         return None, None, _no_crossover(opened)
     turn = 2.0 * math.pi
     if crossings.unstable_roots == 0:
-        lag, item = min(((item.lag_left % turn, item) for item in crossings.gain), key=lambda pair: pair[0])
+        lag, item = min(((_round_turn(item.lag_left), item) for item in crossings.gain), key=lambda pair: pair[0])
         return lag, item.frequency, MarginStatus.FOUND
     events = sorted(
-        ((-item.lag_left) % turn + turn * k, item.frequency, item.falling)
+        (_round_turn(-item.lag_left) + turn * k, item.frequency, item.falling)
         for item in crossings.gain
         for k in range(crossings.unstable_roots // 2 + 1)
     )
@@ -141,16 +144,21 @@ def _delay_part(opened: OpenLoop, crossings: Crossings) -> tuple[float | None, f
         return None, None, _no_crossover(opened)
     turn = 2.0 * math.pi
     if crossings.unstable_roots == 0:
-        delay, item = min((((item.lag_left % turn) / item.frequency, item) for item in crossings.gain), key=lambda pair: pair[0])
+        delay, item = min(((_round_turn(item.lag_left) / item.frequency, item) for item in crossings.gain), key=lambda pair: pair[0])
         return delay, item.frequency, MarginStatus.FOUND
     events = []
     for item in crossings.gain:
-        cut = ((-item.lag_left) % turn) / item.frequency
+        cut = _round_turn(-item.lag_left) / item.frequency
         while cut < opened.shortest_delay:
             events.append((cut, item.frequency, item.falling))
             cut += turn / item.frequency
     found = _walk_back(crossings.unstable_roots, sorted(events))
     return (None, None, MarginStatus.NO_DELAY_RESTORES) if found is None else (-found[0], found[1], MarginStatus.FOUND)
+
+
+def _round_turn(lag: float) -> float:
+    """The lag in [0, 2 pi); a rounding error under 0 is 0, for a loop that stands on the boundary itself."""
+    return 0.0 if -ON_BOUNDARY < lag <= 0.0 else lag % (2.0 * math.pi)
 
 
 def _walk_back(unstable: int, events: list[tuple[float, float, bool]]) -> tuple[float, float] | None:

@@ -13,6 +13,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from lagscape.engine.margins import ON_BOUNDARY
 from lagscape.engine.open_loop import OpenLoop, open_loop
 from lagscape.loops.protocol import Array, DriveForm, Rest
 
@@ -301,6 +302,10 @@ def _close_gain(opened: OpenLoop, frequency: Array, response: np.ndarray) -> Gai
     return GainCrossings(who, w, np.angle(-few.response(w[None])[0]), falls)
 
 
+def _round_turn(lag: Array) -> Array:
+    return np.where((lag > -ON_BOUNDARY) & (lag <= 0.0), 0.0, np.mod(lag, _TURN))
+
+
 def _lags(opened: OpenLoop, frequency: Array, response: np.ndarray, stable: Array) -> tuple[Array, Array, Array]:
     members = opened.coefficients.shape[2]
     found = _close_gain(opened, frequency, response)
@@ -310,10 +315,10 @@ def _lags(opened: OpenLoop, frequency: Array, response: np.ndarray, stable: Arra
     if not who.size:
         return has, phase_margin, delay_margin
     has[who] = True
-    ahead = np.mod(lag, _TURN)
+    ahead = _round_turn(lag)
     calm = stable[who]
     # Of an unstable member only crossings with falling gain can give the roots back.
-    back = np.where(found.falling, np.mod(-lag, _TURN), 0.0)
+    back = np.where(found.falling, _round_turn(-lag), 0.0)
     for target, missing in ((phase_margin, 1.0), (delay_margin, w)):
         smallest = np.full(members, np.inf)
         np.minimum.at(smallest, who[calm], (ahead / missing)[calm])

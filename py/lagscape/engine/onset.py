@@ -19,10 +19,10 @@ from lagscape.engine.harmonic import Balance, Harmonics, prepare, solve
 from lagscape.engine.margins import Margins, margins
 from lagscape.loops.protocol import DriveForm, Loop, Rest
 
-__all__ = ["Coexistence", "Onset", "OnsetKind", "coexisting_cycles", "onset"]
+__all__ = ["Coexistence", "Onset", "OnsetKind", "branch_curvature", "coexisting_cycles", "onset"]
 
 _SMALL = 0.02
-"""First amplitude at which the curvature is read, as a share of the drive's linear range at rest."""
+"""First amplitude at which the curvature is read: of the controlled signal, as a share of its rest."""
 
 
 class OnsetKind(StrEnum):
@@ -45,7 +45,8 @@ class Onset:
     """On the boundary, in the loop's unit."""
     period_s: float | None = None
     curvature: float | None = None
-    """c: relative rise of the scale kappa for an oscillation of the controlled signal's drive as large as the rest itself."""
+    """c: the relative rise of kappa, were the law parabolic throughout, for an oscillation of the controlled signal with the amplitude of
+    its rest (of 1 in its unit where the rest is 0)."""
 
 
 @dataclass(frozen=True)
@@ -78,17 +79,17 @@ def onset(loop: Loop) -> Onset:
 
 
 def branch_curvature(form: DriveForm, rest: Rest, known: Margins) -> float | None:
-    """c of kappa = kappa_0 (1 + c a^2), a relative to the drive's linear range at rest; None where the balance fails."""
+    """c of kappa = kappa_0 (1 + c a^2), a the amplitude of the controlled signal over its rest; None where the balance fails."""
     if not known.loop_gain or known.phase_crossover_frequency is None:
         return None
-    balance = prepare(form, rest)
-    scale = linear_scale(balance)
+    balance = prepare(form, rest).with_gain(np.array([1.0 / known.loop_gain]))
+    scale = linear_scale(balance, known.phase_crossover_frequency)
     values = []
     for share in (_SMALL, 2.0 * _SMALL):
         force = np.zeros((1, len(balance.rows), 5), dtype=complex)
         force[0, 0, 1] = share * scale
         guess = Harmonics(force, np.array([known.phase_crossover_frequency]))
-        solved = solve(balance.with_gain(np.array([1.0 / known.loop_gain])), guess, free_gain=True, most=20, tolerance=1e-13)
+        solved = solve(balance, guess, free_gain=True, most=20, tolerance=1e-13)
         if not np.isfinite(solved.gain[0]) or solved.residual[0] > 1e-9:
             return None
         values.append((solved.gain[0] * known.loop_gain - 1.0) / share**2)
@@ -96,9 +97,12 @@ def branch_curvature(form: DriveForm, rest: Rest, known: Margins) -> float | Non
     return float((4.0 * values[0] - values[1]) / 3.0)
 
 
-def linear_scale(balance: Balance) -> float:
-    """The size of w at which the drive's excursion equals the rest: |m_0| |v_0|, or |m_0| where the rest is 0."""
-    return float(np.max(np.abs(balance.level[0]))) * (abs(float(balance.output_rest[0])) or 1.0)
+def linear_scale(balance: Balance, omega: float) -> float:
+    """|w_1| at which the linear oscillation of the controlled signal has the amplitude of its rest (or 1 where the rest is 0)."""
+    transfer, _, _, _ = balance.transfers(np.full(balance.size, omega), 1)
+    _, gradient = balance.in_time(np.zeros((balance.size, transfer.shape[1], 2), dtype=complex), 1)
+    answer = abs(complex(balance.gain[0] * (gradient[0, :, 0] @ transfer[0, :, 0, 1])))
+    return 0.5 * (abs(float(balance.output_rest[0])) or 1.0) / answer
 
 
 def coexisting_cycles(
