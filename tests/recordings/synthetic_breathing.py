@@ -55,3 +55,15 @@ def regular(*, rate_hz, duration_s=1800.0, breath_hz=0.27, noise_db=10.0, spread
     breathing = sizes[which] * 0.5 * (1.0 - np.cos(2.0 * np.pi * np.clip(part, 0.0, 1.0)))
     noise = rng.normal(size=t.size) * np.std(breathing) * 10.0 ** (-noise_db / 20.0)
     return t, breathing + noise + drift * np.sin(2.0 * np.pi * t / 400.0)
+
+
+def as_recording(values, rate_hz, *, name="effort", gap=None):
+    """A recording of one channel by way of the text reader. `gap` (start, length in s) is cut out of it."""
+    from lagscape.recordings import read_recording
+
+    times = np.arange(values.size) / rate_hz
+    if gap is not None:
+        keep = (times < gap[0]) | (times >= gap[0] + gap[1])
+        times, values = times[keep], values[keep]
+    lines = "\n".join(f"{t:.4f},{v:.6g}" for t, v in zip(times, values, strict=True))
+    return read_recording(f"time_s,{name}\n{lines}\n".encode())

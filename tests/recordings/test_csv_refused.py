@@ -26,10 +26,11 @@ from lagscape.recordings import measure_breathing, read_recording
         (b"time,flow\n5,1\n5,2\n5,3\n5,4\n", "the time column never changes"),
         (b"time,flow\n" + b"".join(b"%d,1\n" % (i * 7 % 50) for i in range(50)), "time column runs backwards in"),
         (b"a,b\n1,5,2,5\n1,6,2,6\n", "2 names stand over 4 numbers a line"),
-        (b"time,flow\n" + b"".join(b"%.6f,1\n%.6f,2\n%.6f,3\n" % (i, i + 1e-5, i + 2.5e-5) for i in range(50)), "too uneven"),
+        (b"time,flow\n" + b"".join(b"%.6f,1\n%.6f,2\n%.6f,3\n" % (i, i + 1e-4, i + 2.5e-4) for i in range(50)), "too uneven"),
+        (b"time,flow\n" + b"".join(b"%de-9,2\n" % i for i in range(50)), "steps by 1e-09 s, more than 100,000 samples a second"),
     ],
     ids=["empty", "blank", "words", "binary", "zip", "pdf", "gzip", "no-rate", "one-line", "time-only", "text-only", "still-time",
-         "backwards", "comma-comma", "uneven"],
+         "backwards", "comma-comma", "uneven", "nanoseconds"],
 )  # fmt: skip
 def test_refused_in_words(data, words):
     with pytest.raises(RecordingError, match=words):
@@ -37,7 +38,7 @@ def test_refused_in_words(data, words):
 
 
 def test_arguments_are_checked():
-    with pytest.raises(RecordingError, match=r"sampling_frequency_hz must be over 0 and below 1e6 \(Hz\), got -1"):
+    with pytest.raises(RecordingError, match=r"sampling_frequency_hz must be over 0 and at most 1e5 \(Hz\), got -1"):
         read_recording(b"1\n2\n", sampling_frequency_hz=-1)
     with pytest.raises(RecordingError, match="no time column 'tid'; the file has: 'time', 'flow'"):
         read_recording(b"time,flow\n0,1\n1,2\n", time_column="tid")
@@ -47,7 +48,7 @@ def test_arguments_are_checked():
         read_recording(7)
     with pytest.raises(RecordingError, match="must be opened in binary mode, its read"):
         read_recording(io.StringIO("time,flow\n0,1\n"))
-    with pytest.raises(RecordingError, match="cannot open 'absent.csv': No such file"):
+    with pytest.raises(RecordingError, match=r"cannot open 'absent\.csv': No such file"):
         read_recording("/nowhere/absent.csv")
 
 

@@ -83,7 +83,7 @@ def measure_breathing(
     breaths: list[Breaths] = []
     for piece in pieces:
         envelope = envelope_of(piece, smoothing_hz, is_ventilation)
-        here = masked_stretches(piece, thresholds, envelope.smoothing_s)
+        here = masked_stretches(piece, thresholds, envelope.smoothing_s, is_ventilation)
         hidden = hidden_samples(piece, here)
         found = _cycles(bursts_of(envelope, hidden, thresholds, is_ventilation), here, thresholds, len(cycles))
         stretches += _stretches(piece, found)

@@ -1,6 +1,7 @@
 """One block of table lines into columns of numbers, with a count of everything that was not as it should be."""
 
 import re
+from collections.abc import Callable
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -114,7 +115,9 @@ def _unquoted(buffer: np.ndarray, separator: int, decimal_comma: bool) -> np.nda
     return result[~quote]
 
 
-def _numbers(buffer: np.ndarray, starts: np.ndarray, lengths: np.ndarray, name: str, line_of, tally: Tally) -> np.ndarray:  # type: ignore[no-untyped-def]
+def _numbers(
+    buffer: np.ndarray, starts: np.ndarray, lengths: np.ndarray, name: str, line_of: Callable[[int], int], tally: Tally
+) -> np.ndarray:
     values, plain = decimals(buffer, starts, lengths)
     rest = np.flatnonzero(~plain)
     if not rest.size:

@@ -4,6 +4,7 @@ Judged from its first lines alone, the way a person looks at it.
 """
 
 import csv
+import itertools
 import re
 from collections import Counter
 from dataclasses import dataclass
@@ -242,7 +243,7 @@ def _find_time(
 
 def _rises(data: list[list[str]], column: int, evenly: bool = False) -> bool:
     values = [float(row[column].replace(",", ".")) for row in data if is_number(row[column])]
-    steps = [b - a for a, b in zip(values, values[1:], strict=False)]
+    steps = [b - a for a, b in itertools.pairwise(values)]
     if len(steps) < 2:
         return not evenly
     forward = sum(step >= 0 for step in steps)
@@ -268,6 +269,6 @@ def _stated_rate(before: list[str]) -> float | None:
         found = _RATE.search(line)
         if found:
             value = float(found[1].replace(",", ".")) * (1000.0 if (found[2] or "").casefold() == "khz" else 1.0)
-            if 0.01 <= value <= 1e6:
+            if 0.01 <= value <= 1e5:
                 return value
     return None

@@ -32,8 +32,8 @@ def read_csv(
     progress: Progress | None = None,
 ) -> Recording:
     """Read a text table. See `lagscape.recordings.read_recording` for the arguments and what is raised."""
-    if sampling_frequency_hz is not None and not 0.0 < sampling_frequency_hz < 1e6:
-        raise RecordingError(f"sampling_frequency_hz must be over 0 and below 1e6 (Hz), got {sampling_frequency_hz!r}")
+    if sampling_frequency_hz is not None and not 0.0 < sampling_frequency_hz <= 1e5:
+        raise RecordingError(f"sampling_frequency_hz must be over 0 and at most 1e5 (Hz), got {sampling_frequency_hz!r}")
     with open_source(source) as (stream, total, source_name):
         layout: Layout | None = None
         tally = Tally()

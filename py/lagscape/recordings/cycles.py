@@ -5,10 +5,12 @@ its own peak, well above the noise, and are then carried to zero ventilation: al
 assumes where the edge is gradual, and back by the known spread of the smoothing where it is abrupt.
 """
 
+import itertools
 from dataclasses import dataclass
 
 import numpy as np
 
+from lagscape.recordings.burst_shape import burst_shape
 from lagscape.recordings.envelope import Envelope, runs_of
 
 __all__ = ["Burst", "Thresholds", "bursts_of", "local_peak"]
@@ -93,15 +95,19 @@ def bursts_of(envelope: Envelope, hidden: np.ndarray, thresholds: Thresholds, is
     twice = envelope.smoothed_again()
     peaks = [a + int(values[a:b].argmax()) for a, b in runs]
     tops = [float(twice[a:b].max()) for a, b in runs]
-    floors = [float(np.median(values[_middle(a_end, b_start)])) for (_, a_end), (b_start, _) in zip(runs[:-1], runs[1:], strict=True)]
+    floors = [float(np.median(values[_middle(a_end, b_start)])) for (_, a_end), (b_start, _) in itertools.pairwise(runs)]
     edges = [_edges(values, runs, peaks, tops, floors, i, thresholds.edge_at, is_ventilation) for i in range(len(runs))]
     result = []
     for i, (rise, fall) in enumerate(edges):
         cycle = _cycle_samples(edges, i) / envelope.rate_hz
         above = (fall[0] - rise[0]) / envelope.rate_hz
         peak = tops[i]
-        shift_on, gradual_on = _to_zero(rise[1] / envelope.rate_hz, above, cycle, envelope.smoothing_s, thresholds.edge_at, is_ventilation)
-        shift_off, gradual_off = _to_zero(fall[1] / envelope.rate_hz, above, cycle, envelope.smoothing_s, thresholds.edge_at, is_ventilation)
+        shape = burst_shape(envelope.smoothing_s / cycle, thresholds.edge_at, is_ventilation)
+        on, off = (shape.read(above / cycle, edge[1] / envelope.rate_hz / cycle) for edge in (rise, fall))
+        shift_on, shift_off = (0.5 * (duty * cycle - above) for duty, _ in (on, off))
+        # Next to a hypopnoea ventilation has no zero to be carried to.
+        shift_on = shift_on if floors[max(i - 1, 0)] < thresholds.apnoea_below * peak else 0.0
+        shift_off = shift_off if floors[min(i, len(floors) - 1)] < thresholds.apnoea_below * peak else 0.0
         pause_level = floors[i] / peak if i < len(floors) else np.nan
         result.append(
             Burst(
@@ -110,7 +116,7 @@ def bursts_of(envelope: Envelope, hidden: np.ndarray, thresholds: Thresholds, is
                 peak,
                 envelope.start_s + peaks[i] / envelope.rate_hz,
                 pause_level,
-                0.5 * (gradual_on + gradual_off),
+                0.5 * (on[1] + off[1]),
             )
         )
     return result
@@ -195,53 +201,3 @@ def _cycle_samples(edges: list[tuple[tuple[float, float], tuple[float, float]]],
     if i + 1 < len(edges):
         gaps.append(edges[i + 1][0][0] - edges[i][0][0])
     return float(min(gaps))
-
-
-def _to_zero(edge_s: float, above_s: float, cycle_s: float, smoothing_s: float, level: float, linear: bool) -> tuple[float, float]:
-    """How far outside the crossing of `level` ventilation is zero (s, negative: inside), and how gradual the edge is.
-
-    For the sine v = 1 - A (1 - cos phi) cut off at zero, phi counted from the peak, the share of the cycle over the level
-    gives A, and v is zero at cos phi = 1 - 1/A. Smoothing is allowed for to second order in its width: it lowers the peak
-    and lifts the foot, which matters for short cycles.
-    """
-    low, high = _step_crossings(level, linear)
-    step_edge = (high - low) * smoothing_s
-    share = float(np.clip(above_s / max(cycle_s, 1e-9), 0.02, 0.98))
-    turn = cycle_s / (2.0 * np.pi)
-    at_level = np.pi * share
-    swing = _swing(at_level, level, (smoothing_s / turn) ** 2, linear)
-    at_zero = np.arccos(np.clip(1.0 - 1.0 / swing, -1.0, 1.0))
-    at_high = np.arccos(np.clip(1.0 - 0.3 / swing, -1.0, 1.0))
-    sine_edge = float(np.hypot((at_level - at_high) * turn, 0.5 * step_edge))
-    if sine_edge <= step_edge:
-        likeness = 1.0 if edge_s > 0.5 * (sine_edge + step_edge) else 0.0
-    else:
-        likeness = (edge_s - step_edge) / (sine_edge - step_edge)
-    # Noise blurs the measure; near either end it means that end.
-    gradual = float(np.clip((likeness - 0.2) / 0.4, 0.0, 1.0))
-    sine_shift = float((at_zero - at_level) * turn)
-    return gradual * sine_shift + (1.0 - gradual) * low * smoothing_s, gradual
-
-
-def _swing(at_level: float, level: float, blur: float, linear: bool) -> float:
-    """A of the sine whose smoothed envelope is at `level` of its own peak at phase `at_level`; blur = (phase width)^2."""
-    c, s = 1.0 - np.cos(at_level), np.sin(at_level)
-    cosine = np.cos(at_level)
-    plain = (1.0 - level) / c
-    if linear:
-        below = c + 0.5 * blur * (cosine - 2.0 * level)
-        return float((1.0 - level) / below) if below > 0.2 * c else float(plain)
-    # E^2 = v^2 + blur (v'^2 + v v'') at the level, 1 - 2 blur A at the peak, which is smoothed twice: a quadratic in A.
-    square = c * c + blur * (s * s + c * cosine)
-    half = c + 0.5 * blur * (cosine - 2.0 * level**2)
-    inside = half * half - square * (1.0 - level**2)
-    if square <= 0.0 or inside < 0.0:
-        return float(plain)
-    return float((half - np.sqrt(inside)) / square)
-
-
-def _step_crossings(level: float, linear: bool) -> tuple[float, float]:
-    from scipy.special import ndtri
-
-    power = 1.0 if linear else 2.0
-    return float(ndtri(level**power)), float(ndtri(0.7**power))

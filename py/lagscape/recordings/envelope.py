@@ -10,6 +10,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from lagscape.recordings.burst_shape import MOTION_SMOOTHING
 from lagscape.recordings.recording import Progress, Signal, report_progress
 
 __all__ = ["Envelope", "WorkingPiece", "breath_frequency", "envelope_of", "working_pieces"]
@@ -23,7 +24,7 @@ _CLIP_RUN = 3
 
 @dataclass(frozen=True, eq=False)
 class WorkingPiece:
-    """An unbroken stretch at the working rate: values, and the share of each that was missing or at the rail.
+    """An unbroken stretch at the working rate: values, which of them were missing, and the share of each at the rails.
 
     `values` has no nan: missing samples are carried along a straight line and told by `missing`.
     """
@@ -32,7 +33,8 @@ class WorkingPiece:
     rate_hz: float
     values: np.ndarray
     missing: np.ndarray
-    at_rail: np.ndarray
+    at_top: np.ndarray
+    at_bottom: np.ndarray
 
     @property
     def times_s(self) -> np.ndarray:
@@ -97,9 +99,8 @@ def working_pieces(
         values = np.concatenate([block.values for block in stretch])
         if values.size < 2:
             continue
-        rail = np.concatenate(
-            [np.where(block.top == top, block.at_top, 0.0) + np.where(block.bottom == bottom, block.at_bottom, 0.0) for block in stretch]
-        )
+        at_top = np.concatenate([np.where(block.top == top, block.at_top, 0.0) for block in stretch])
+        at_bottom = np.concatenate([np.where(block.bottom == bottom, block.at_bottom, 0.0) for block in stretch])
         missing = np.isnan(values)
         if missing.all():
             values = np.zeros(values.size)
@@ -107,7 +108,7 @@ def working_pieces(
             at = np.arange(values.size)
             values = np.interp(at, at[~missing], values[~missing])
         middle = 0.5 * (ratio - 1) / signal.sampling_frequency_hz
-        pieces.append(WorkingPiece(stretch[0].first_s + middle, rate, values, missing, rail))
+        pieces.append(WorkingPiece(stretch[0].first_s + middle, rate, values, missing, at_top, at_bottom))
     return pieces
 
 
@@ -189,7 +190,7 @@ def envelope_of(piece: WorkingPiece, breath_hz: float, is_ventilation: bool) -> 
     if is_ventilation:
         values = gaussian_filter1d(piece.values, smoothing_s * piece.rate_hz, mode="nearest")
         return Envelope(piece.start_s, piece.rate_hz, np.maximum(values, 0.0), values, smoothing_s, True)
-    sigma = 0.12 / breath_hz * piece.rate_hz
+    sigma = MOTION_SMOOTHING * smoothing_s * piece.rate_hz
     motion = gaussian_filter1d(piece.values - np.median(piece.values), sigma, order=1, mode="nearest") * piece.rate_hz
     # A pure sine of this frequency and amplitude A gives motion of amplitude A.
     omega = 2.0 * np.pi * breath_hz

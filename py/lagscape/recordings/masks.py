@@ -29,13 +29,13 @@ class MaskedStretch:
         return self.stop_s - self.start_s
 
 
-def masked_stretches(piece: WorkingPiece, thresholds: Thresholds, margin_s: float) -> list[MaskedStretch]:
+def masked_stretches(piece: WorkingPiece, thresholds: Thresholds, margin_s: float, is_ventilation: bool) -> list[MaskedStretch]:
     """What to leave out of one stretch, in time order; movement is widened by `margin_s` on either side."""
     result = []
     for reason, mask, wider_s in (
         ("missing", piece.missing, 0.0),
         ("flat", _flat(piece, thresholds.longest_flat_s), 0.0),
-        ("clipped", _clipped(piece), 0.0),
+        ("clipped", _clipped(piece, is_ventilation), 0.0),
         ("movement", _movement(piece, thresholds.movement_ratio), margin_s),
     ):
         shortest = _SHORTEST_MISSING_S if reason == "missing" else 0.0
@@ -73,20 +73,21 @@ def _flat(piece: WorkingPiece, longest_s: float) -> np.ndarray:
     return result
 
 
-def _clipped(piece: WorkingPiece) -> np.ndarray:
-    """Where the signal sits at its rail for a good part of some seconds. A flat recording is not clipped but flat."""
+def _clipped(piece: WorkingPiece, is_ventilation: bool) -> np.ndarray:
+    """Where the signal sits at its rail for a good part of some seconds. The floor of ventilation is apnoea, no rail."""
     from scipy.ndimage import maximum_filter1d, uniform_filter1d
 
-    if not piece.at_rail.any() or np.ptp(piece.values) == 0.0:
+    at_rail = piece.at_top if is_ventilation else piece.at_top + piece.at_bottom
+    if not at_rail.any() or np.ptp(piece.values) == 0.0:
         return np.zeros(piece.values.size, dtype=bool)
     size = max(int(_CLIPPED_SPAN_S * piece.rate_hz), 1)
-    often = uniform_filter1d(piece.at_rail, size, mode="nearest") > _CLIPPED_SHARE
-    return maximum_filter1d(often & (piece.at_rail > 0.0), size, mode="nearest")
+    often = uniform_filter1d(at_rail, size, mode="nearest") > _CLIPPED_SHARE
+    return maximum_filter1d(often & (at_rail > 0.0), size, mode="nearest")
 
 
 def _movement(piece: WorkingPiece, ratio: float) -> np.ndarray:
     """Samples much further from the baseline than the largest breaths about them."""
-    from scipy.ndimage import median_filter, percentile_filter
+    from scipy.ndimage import percentile_filter
 
     rate = piece.rate_hz
     stride = max(int(rate), 1)
@@ -95,10 +96,13 @@ def _movement(piece: WorkingPiece, ratio: float) -> np.ndarray:
         return np.zeros(piece.values.size, dtype=bool)
     middles = np.median(coarse, axis=1)
     at = (np.arange(middles.size) + 0.5) * stride
-    baseline = median_filter(middles, size=_odd(_BASELINE_SPAN_S * rate / stride, middles.size), mode="nearest")
+    # The middle of the quartiles: a median alone jumps with the phase of a regular breath.
+    size = _odd(_BASELINE_SPAN_S * rate / stride, middles.size)
+    lower, upper = (percentile_filter(middles, q, size=size, mode="mirror") for q in (25.0, 75.0))
+    baseline = 0.5 * (lower + upper)
     away = np.abs(piece.values - np.interp(np.arange(piece.values.size), at, baseline))
     largest = away[: coarse.size].reshape(-1, stride).max(axis=1)
-    usual = percentile_filter(largest, 95.0, size=_odd(_REFERENCE_SPAN_S * rate / stride, largest.size), mode="nearest")
+    usual = percentile_filter(largest, 95.0, size=_odd(_REFERENCE_SPAN_S * rate / stride, largest.size), mode="mirror")
     return away > ratio * np.interp(np.arange(piece.values.size), at, np.maximum(usual, np.finfo(float).tiny))
 
 

@@ -4,6 +4,7 @@ Recorders write times rounded, doubled, out of order, with breaks. The rule: the
 stretches, not of single steps, so that rounding of the written times does not matter.
 """
 
+import itertools
 from dataclasses import dataclass
 
 import numpy as np
@@ -15,6 +16,7 @@ __all__ = ["TimeBase", "even_time_base", "time_base_of_rate"]
 
 _LONGEST_FILLED_S = 1.0
 _MOST_BACKWARDS = 0.05
+_SHORTEST_STEP_S = 1e-5
 
 
 @dataclass(frozen=True, eq=False)
@@ -71,6 +73,11 @@ def even_time_base(times: np.ndarray) -> TimeBase:
         t, kept = t[~double], kept[~double]
     steps = np.diff(t)
     typical = float(np.median(steps))
+    if typical < _SHORTEST_STEP_S:
+        raise RecordingError(
+            f"the time column steps by {typical:.2g} s, more than 100,000 samples a second; give its unit (time_unit), "
+            "or the sampling rate instead (sampling_frequency_hz)"
+        )
     uneven = np.mean(np.abs(steps - typical) > 0.5 * typical)
     if uneven > 0.05 and not _on_a_grid(t, typical):
         return _resampled(t, kept, typical, origin, notes)
@@ -125,7 +132,7 @@ def _on_a_grid(t: np.ndarray, typical: float) -> bool:
         return bool(np.mean(small) > 0.8)
     breaks = np.flatnonzero(steps > 3.0 * typical)
     edges = np.concatenate(([0], breaks + 1, [t.size]))
-    for a, b in zip(edges[:-1], edges[1:], strict=True):
+    for a, b in itertools.pairwise(edges):
         piece = t[a:b]
         if piece.size > 2:
             line = np.linspace(piece[0], piece[-1], piece.size)
@@ -158,7 +165,7 @@ def _pieces(t: np.ndarray, kept: np.ndarray, n_rows: int, typical: float, origin
     if short.size:
         _refuse_bloat(float((t[edges[1:] - 1] - t[edges[:-1]]).sum()) * rate, t.size)
     segments, firsts, grid, n = [], [], [], 0
-    for a, b in zip(edges[:-1], edges[1:], strict=True):
+    for a, b in itertools.pairwise(edges):
         size = int(b - a) if not short.size else max(round((t[b - 1] - t[a]) * rate) + 1, 1)
         segments.append(Segment(float(t[a]), float(t[a]) + size / rate))
         firsts.append(n)
@@ -184,7 +191,7 @@ def _resampled(t: np.ndarray, kept: np.ndarray, typical: float, origin: float, n
     if breaks.size:
         notes.append(Note(f"{counted(breaks.size, 'gap')} in time; nothing is measured across a gap", int(breaks.size), first_time_s=float(t[breaks[0]])))
     segments, firsts, grid, n = [], [], [], 0
-    for a, b in zip(edges[:-1], edges[1:], strict=True):
+    for a, b in itertools.pairwise(edges):
         size = int((t[b - 1] - t[a]) * rate) + 1
         segments.append(Segment(float(t[a]), float(t[a]) + size / rate))
         firsts.append(n)
