@@ -39,7 +39,7 @@ def test_the_short_form_may_say_settings_levers_and_disturbance():
         "disturbance": None,
     }
     case = case_from_document(document)
-    assert dict(case.choices) == {"drive_shape": "sigmoid", "delays_follow_flow": "no"}
+    assert dict(case.choices) == {"drive_shape": "sigmoid", "delays_follow_flow": "no", "gases": "co2"}
     assert case.levers[0].dose == 2.0 and case.disturbance is None
 
 

@@ -26,7 +26,7 @@ def test_a_specification_is_whole(item):
 def test_names_are_the_loops_own_fields_and_none_is_left_out(loop):
     names = [item.name for item in loop.specifications]
     assert len(set(names)) == len(names)
-    fields = {item.name for item in dataclasses.fields(loop)} - {item.name for item in loop.choices} - {"line_ventilation_l_min"}
+    fields = {item.name for item in dataclasses.fields(loop)} - {item.name for item in loop.choices} - {"line_ventilation_l_min", "line_po2_mmhg"}
     assert set(names) == fields
 
 

@@ -284,6 +284,7 @@ def gain_crossings(opened: OpenLoop) -> GainCrossings:
 
 def _close_gain(opened: OpenLoop, frequency: Array, response: np.ndarray) -> GainCrossings:
     size = response.real**2 + response.imag**2
+    frequency = np.broadcast_to(frequency, size.shape)
     above = size > 1.0
     row, who = np.nonzero(above[1:] != above[:-1])
     falls = above[row, who]

@@ -8,11 +8,12 @@
 
 g = exp(-0.05 (PaO2 - 100)) multiplies the peripheral gain (secondary sources only). The line passes through the person's own
 eupnoeic point (P_line, V_line); a change of the plant moves the rest along it. Pressures in mmHg, volumes in L, flows in L/min.
+
+With the choice gases = "co2_o2" PaO2 is a state of its own instead of a number: see `breathing_oxygen`.
 """
 
 from __future__ import annotations
 
-import math
 from dataclasses import dataclass, replace
 from typing import Any, ClassVar
 
@@ -20,7 +21,9 @@ import numpy as np
 
 from lagscape.case.parameters import Choice, ParameterSpecification, StartingCase
 from lagscape.errors import InvalidInputError
-from lagscape.loops import breathing_numbers
+from lagscape.loops import breathing_numbers, breathing_oxygen
+from lagscape.loops.breathing_drive import SigmoidDrive, ThresholdDrive
+from lagscape.loops.gases import WATER_VAPOUR_MMHG, hypoxic_multiplier
 from lagscape.loops.protocol import Array, Channel, DriveForm, Rest, Signal, batch_shape
 from lagscape.units import ALVEOLAR_CONSTANT, SECONDS_PER_MINUTE
 
@@ -29,101 +32,8 @@ __all__ = ["BreathingLoop", "SigmoidDrive", "ThresholdDrive", "hypoxic_multiplie
 _SIGMOID_APNOEA_SHARE = 0.1
 """A sigmoid never reaches zero; ventilation under a tenth of eupnoea counts as apnoea (common practice, no source)."""
 
-_NO_PRESSURE = 1e-30
-"""A share of P_line at or under which the sigmoid's pressure counts as none: the power law has no value below zero."""
-
-
-def hypoxic_multiplier(arterial_po2_mmhg: Any) -> Any:
-    """g = exp(-0.05 (PaO2 - 100)), no unit, 1 at 100 mmHg. Secondary sources only."""
-    return np.exp(-0.05 * (np.asarray(arterial_po2_mmhg, dtype=float) - 100.0))
-
-
-@dataclass(frozen=True)
-class ThresholdDrive:
-    """V_E = max(0, V_line + G_p (y - P_line) + S_c (c - P_line) + push)."""
-
-    line_ventilation: Any
-    line_pressure: Any
-    peripheral: Any
-    central: Any
-    has_kink: ClassVar[bool] = True
-
-    def switch(self, sensed: Array, control: Array, push: Any = 0.0) -> Array:
-        return (
-            self.line_ventilation
-            + self.peripheral * (sensed[0] - self.line_pressure)
-            + self.central * (control[0] - self.line_pressure)
-            + push
-        )
-
-    def value(self, sensed: Array, control: Array, push: Any = 0.0) -> Array:
-        return np.maximum(self.switch(sensed, control, push), 0.0)
-
-    def gradient(self, sensed: Array, control: Array, push: Any = 0.0) -> Array:
-        open_ = self.switch(sensed, control, push) > 0.0
-        zero = np.zeros_like(open_, dtype=float)
-        return np.stack([open_ * (self.peripheral + zero), zero, open_ * (self.central + zero)])
-
-    def scalar(self, sensed: tuple[float, ...], control: tuple[float, ...], push: float) -> float:
-        drive = (
-            self.line_ventilation
-            + self.peripheral * (sensed[0] - self.line_pressure)
-            + self.central * (control[0] - self.line_pressure)
-            + push
-        )
-        return drive if drive > 0.0 else 0.0
-
-
-@dataclass(frozen=True)
-class SigmoidDrive:
-    """V_E = V_max P^n / (theta^n + P^n), P the pressure that the line would read, with the line's point and slope.
-
-    n = S P_line / V_line / (1 - V_line / V_max).
-    """
-
-    line_ventilation: Any
-    line_pressure: Any
-    peripheral: Any
-    central: Any
-    largest_ventilation: Any
-    has_kink: ClassVar[bool] = False
-
-    @property
-    def _exponent(self) -> Any:
-        slope = self.peripheral + self.central
-        return slope * self.line_pressure / self.line_ventilation / (1.0 - self.line_ventilation / self.largest_ventilation)
-
-    def _effective(self, sensed: Array, control: Array, push: Any) -> Array:
-        slope = self.peripheral + self.central
-        weight = self.peripheral / slope
-        return weight * sensed[0] + (1.0 - weight) * control[0] + push / slope
-
-    def switch(self, sensed: Array, control: Array, push: Any = 0.0) -> Array:
-        return np.ones_like(self._effective(sensed, control, push))
-
-    def value(self, sensed: Array, control: Array, push: Any = 0.0) -> Array:
-        ratio = self._effective(sensed, control, push) / self.line_pressure
-        odds = (self.largest_ventilation / self.line_ventilation - 1.0) * np.exp(
-            np.minimum(-self._exponent * np.log(np.maximum(ratio, _NO_PRESSURE)), 690.0)
-        )
-        return np.where(ratio > _NO_PRESSURE, self.largest_ventilation / (1.0 + odds), 0.0)
-
-    def gradient(self, sensed: Array, control: Array, push: Any = 0.0) -> Array:
-        effective = np.maximum(self._effective(sensed, control, push), _NO_PRESSURE * self.line_pressure)
-        ventilation = self.value(sensed, control, push)
-        slope = self._exponent * ventilation * (1.0 - ventilation / self.largest_ventilation) / effective
-        weight = self.peripheral / (self.peripheral + self.central)
-        return np.stack([slope * weight, np.zeros_like(slope), slope * (1.0 - weight)])
-
-    def scalar(self, sensed: tuple[float, ...], control: tuple[float, ...], push: float) -> float:
-        slope = self.peripheral + self.central
-        weight = self.peripheral / slope
-        ratio = (weight * sensed[0] + (1.0 - weight) * control[0] + push / slope) / self.line_pressure
-        if ratio <= _NO_PRESSURE:
-            return 0.0
-        power = -self._exponent * math.log(ratio)
-        odds = (self.largest_ventilation / self.line_ventilation - 1.0) * math.exp(min(power, 690.0))
-        return float(self.largest_ventilation / (1.0 + odds))
+_LARGEST_PAO2 = 600.0
+"""mmHg: the largest PaO2 that its specification allows."""
 
 
 @dataclass(frozen=True)
@@ -145,10 +55,18 @@ class BreathingLoop:
     central_delay_s: Any = 10.0
     central_time_constant_s: Any = 60.0
     largest_ventilation_l_min: Any = 60.0
+    inspired_o2_fraction: Any = 0.2093
+    barometric_pressure_mmhg: Any = 760.0
+    respiratory_quotient: Any = 0.8
+    alveolar_arterial_difference_mmhg: Any = 10.0
+    sensor_delay_s: Any = 20.0
     drive_shape: str = "threshold"
     delays_follow_flow: str = "no"
+    gases: str = "co2"
     line_ventilation_l_min: Any = None
     """V_line of a controller that was fixed before the plant changed; None puts the line through this loop's own rest."""
+    line_po2_mmhg: Any = None
+    """PaO2 that the line was fixed at, with both gases; None for a line that is not fixed, and with CO2 only."""
 
     kind: ClassVar[str] = "breathing"
     title: ClassVar[str] = "Breathing loop"
@@ -165,9 +83,23 @@ class BreathingLoop:
         return 1.0 - self.dead_space_fraction
 
     @property
+    def has_oxygen(self) -> bool:
+        """Whether lung O2 is a state of its own."""
+        return self.gases == "co2_o2"
+
+    @property
+    def resting_po2_mmhg(self) -> Any:
+        """PaO2 at rest: the number typed, or with both gases by the alveolar gas equation."""
+        if not self.has_oxygen:
+            return self.arterial_po2_mmhg
+        if self.line_ventilation_l_min is None:
+            return breathing_oxygen.line_po2_mmhg(self)
+        return self.rest().state[2]
+
+    @property
     def effective_peripheral_gain(self) -> Any:
-        """S_p g(PaO2), L/min/mmHg."""
-        return self.peripheral_gain_l_min_mmhg * hypoxic_multiplier(self.arterial_po2_mmhg)
+        """S_p g(PaO2) at the resting PaO2, L/min/mmHg."""
+        return self.peripheral_gain_l_min_mmhg * hypoxic_multiplier(self.resting_po2_mmhg)
 
     @property
     def line_ventilation(self) -> Any:
@@ -187,9 +119,11 @@ class BreathingLoop:
         return self.peripheral_delay_s
 
     def with_sensitivity(self, sensitivity: Any) -> BreathingLoop:
-        factor = sensitivity / self.sensitivity
+        # With both gases a fixed line is turned about the loop's own rest: about any other point PaO2 would move with the gain.
+        pivot = self._lined_through_rest() if self.has_oxygen and self.line_ventilation_l_min is not None else self
+        factor = sensitivity / pivot.sensitivity
         return replace(
-            self,
+            pivot,
             peripheral_gain_l_min_mmhg=self.peripheral_gain_l_min_mmhg * factor,
             central_gain_l_min_mmhg=self.central_gain_l_min_mmhg * factor,
         )
@@ -209,9 +143,22 @@ class BreathingLoop:
                     changed = replace(changed, **{name: getattr(self, name) * ratio})
         return changed
 
+    def with_inspired_po2_rise(self, rise_mmhg: Any) -> BreathingLoop:
+        """The same loop breathing gas whose PO2 is higher by so many mmHg, PaCO2 apart: PaO2 gains as much, or FIO2 what it takes."""
+        if not self.has_oxygen:
+            return self.with_numbers(arterial_po2_mmhg=np.minimum(self.arterial_po2_mmhg + rise_mmhg, _LARGEST_PAO2))
+        richer = self.inspired_o2_fraction + rise_mmhg / (self.barometric_pressure_mmhg - WATER_VAPOUR_MMHG)
+        return self.with_numbers(inspired_o2_fraction=np.minimum(richer, 1.0))
+
     def freeze_line(self) -> BreathingLoop:
         """The same loop whose controller stays where it is when the plant is changed afterwards."""
-        return replace(self, line_ventilation_l_min=self.line_ventilation)
+        line_po2 = breathing_oxygen.line_po2_mmhg(self) if self.has_oxygen else self.line_po2_mmhg
+        return replace(self, line_ventilation_l_min=self.line_ventilation, line_po2_mmhg=line_po2)
+
+    def _lined_through_rest(self) -> BreathingLoop:
+        rest = self.rest()
+        pressure, oxygen = (value if np.ndim(value) else float(value) for value in (rest.state[0], rest.state[2]))
+        return replace(self, resting_paco2_mmhg=pressure, line_ventilation_l_min=rest.output, line_po2_mmhg=oxygen)
 
     def _drive(self) -> ThresholdDrive | SigmoidDrive:
         line = (self.line_ventilation, self.resting_paco2_mmhg, self.effective_peripheral_gain, self.central_gain_l_min_mmhg)
@@ -237,9 +184,12 @@ class BreathingLoop:
         Raises
         ------
         InvalidInputError
-            If the inspired PCO2 is not below the resting PaCO2, or the sigmoid's ceiling is below the resting ventilation.
+            If the inspired PCO2 is not below the resting PaCO2, the sigmoid's ceiling is below the resting ventilation, or, with
+            both gases, no PaO2 above 0 is left.
         """
         self._check()
+        if self.has_oxygen:
+            return breathing_oxygen.rest_with_oxygen(self)
         share, inspired = self.alveolar_share, self.inspired_pco2_mmhg
         load = ALVEOLAR_CONSTANT * self.co2_production_l_min / share
         if self.line_ventilation_l_min is None:
@@ -278,6 +228,10 @@ class BreathingLoop:
 
     def form(self) -> DriveForm:
         self._check()
+        channels = {"sigh": Channel(output=1.0, unit="L/min"), "arousal": Channel(drive=1.0, unit="L/min")}
+        silent_level = _SIGMOID_APNOEA_SHARE * self.line_ventilation if self.drive_shape == "sigmoid" else 0.0
+        if self.has_oxygen:
+            return breathing_oxygen.form_with_oxygen(self, channels, silent_level)
         batch = batch_shape(self)
         blood = ALVEOLAR_CONSTANT * self.co2_solubility_per_mmhg * self.cardiac_output_l_min / SECONDS_PER_MINUTE
         lung = blood / self.lung_volume_l
@@ -294,11 +248,6 @@ class BreathingLoop:
         control = np.zeros((1, 1, *batch)) - 1.0 / self.central_time_constant_s
         by_sensed = np.zeros((1, 2, *batch))
         by_sensed[0, 1] = 1.0 / self.central_time_constant_s
-        rest_output = self.line_ventilation
-        channels = {
-            "sigh": Channel(output=1.0, unit="L/min"),
-            "arousal": Channel(drive=1.0, unit="L/min"),
-        }
         if not batch:
             channels["inspired_pco2"] = Channel(plant_by_output=np.array([float(washout), 0.0]), unit="mmHg")
         return DriveForm(
@@ -315,16 +264,17 @@ class BreathingLoop:
             control_constant=np.zeros((1, *batch)),
             drive=self._drive(),
             channels=channels,
-            silent_level=_SIGMOID_APNOEA_SHARE * rest_output if self.drive_shape == "sigmoid" else 0.0,
+            silent_level=silent_level,
         )
 
-    def signals(self, states: Array, output: Array) -> tuple[Signal, ...]:
-        return (
+    def signals(self, states: Array, output: Array, times: Array | None = None) -> tuple[Signal, ...]:
+        curves = (
             Signal("ventilation", "Ventilation", "L/min", output),
             Signal("paco2", "PaCO2", "mmHg", states[:, 0]),
             Signal("pvco2", "Mixed venous PCO2", "mmHg", states[:, 1]),
-            Signal("central_pco2", "Central chemoreceptor PCO2", "mmHg", states[:, 2]),
+            Signal("central_pco2", "Central chemoreceptor PCO2", "mmHg", states[:, -1]),
         )
+        return (*curves, *breathing_oxygen.oxygen_signals(self, states[:, 2], times)) if self.has_oxygen else curves
 
     def co2_reserve_mmhg(self) -> Any:
         """Eupnoeic PaCO2 minus the apnoeic threshold, mmHg: V_E / (S_p g + S_c) on the line through the rest."""

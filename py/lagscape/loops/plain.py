@@ -129,7 +129,7 @@ class PlainLoop:
             },
         )
 
-    def signals(self, states: Array, output: Array) -> tuple[Signal, ...]:
+    def signals(self, states: Array, output: Array, times: Array | None = None) -> tuple[Signal, ...]:
         return (
             Signal("clearance", "Clearance, share of the largest", "", output),
             Signal("level", "Level", "", states[:, 0]),

@@ -196,5 +196,8 @@ class Loop(Protocol):
     def form(self) -> DriveForm:
         """The loop as matrices, for the engine."""
 
-    def signals(self, states: Array, output: Array) -> tuple[Signal, ...]:
-        """Named curves from states, shape (n_times, n_states), and the controlled signal, shape (n_times,)."""
+    def signals(self, states: Array, output: Array, times: Array | None = None) -> tuple[Signal, ...]:
+        """Named curves from states, shape (n_times, n_states), and the controlled signal, shape (n_times,).
+
+        `times`, shape (n_times,), s, ascending, lets a loop add curves that a sensor shows later.
+        """

@@ -174,7 +174,7 @@ class ReflexLoop:
             silent_level=-math.inf,
         )
 
-    def signals(self, states: Array, output: Array) -> tuple[Signal, ...]:
+    def signals(self, states: Array, output: Array, times: Array | None = None) -> tuple[Signal, ...]:
         return (
             Signal("torque", "Reflex torque", "N m", output),
             Signal("angle", "Joint angle", "deg", np.degrees(states[:, 0])),
