@@ -51,18 +51,14 @@ class BrowserFile(io.RawIOBase):
         if end <= self._at:
             return 0
         part = self._read_slice(self._file, self._at, end)
-        try:
-            part.assign_to(memoryview(buffer)[: end - self._at])
-        finally:
-            part.destroy()
+        part.assign_to(memoryview(buffer)[: end - self._at])
         count = end - self._at
         self._at = end
         return count
 
     def close(self) -> None:
         """Lets go of the browser's File."""
-        if not self.closed:
-            self._file.destroy()
+        self._file = None
         super().close()
 
 

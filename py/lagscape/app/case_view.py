@@ -87,7 +87,7 @@ class CaseView:
             f'<div class="row{" refused" if refusal else ""}">'
             f'<button class="name" data-act="open" data-key="{name}" aria-expanded="{str(open_).lower()}">{label}</button>'
             f'<input class="box" type="text" inputmode="decimal" autocomplete="off" aria-label="{label}, {escape(unit)}" data-act="number"'
-            f' data-key="{name}" value="{text}"{invalid}><span class="unit">{escape(unit)}</span>'
+            f' data-key="{name}" value="{text}"{invalid}><span class="unit">{_breakable(unit)}</span>'
             f'<input class="slide" type="range" min="0" max="{_SLIDER_STEPS}" step="1" data-act="slide" data-live data-key="{name}"'
             f' value="{position}" aria-label="{label} slider" aria-valuetext="{escape(figure(shown))} {escape(unit)}"'
             f' style="--low:{low / _SLIDER_STEPS:.4f};--high:{high / _SLIDER_STEPS:.4f};--start:{start / _SLIDER_STEPS:.4f}">'
@@ -180,6 +180,11 @@ class CaseView:
         except ValueError:
             raise InvalidInputError(f"{item.label} must be a number; got {text.strip()[:40]!r}. Type it again or press Escape.") from None
         return from_display(number, item.unit, self.bench.units)
+
+
+def _breakable(unit: str) -> str:
+    """A unit that may wrap after a solidus."""
+    return escape(unit).replace("/", "/<wbr>")
 
 
 def _is_logarithmic(item: ParameterSpecification) -> bool:

@@ -48,7 +48,9 @@ class HandoverView:
         rows = list(_ROWS)
         if self.bench.measurement is not None:
             rows.append(("cycles", "Save the cycles (CSV)", "Every measured cycle of the recording, excluded ones with their reason."))
-        items = "".join(f'<li><button class="main" data-act="{act}">{escape(label)}</button><span>{escape(what)}</span></li>' for act, label, what in rows)
+        items = "".join(
+            f'<li><button class="main" data-act="{act}">{escape(label)}</button><span>{escape(what)}</span></li>' for act, label, what in rows
+        )
         self.root.show(
             f'<ul class="handover">{items}</ul><p>No name, patient number or date of birth is in any of them; there is no field for one. '
             "Decision support for qualified staff, not a medical device. Local protocols and licensed practice decide.</p>"

@@ -51,7 +51,7 @@ class MapView:
         self.contour_texts = ColumnDataSource({"delay": [], "sensitivity": [], "text": []})
         self.dot, self.hollow, self.diamond = (ColumnDataSource(dict(one)) for _ in range(3))
         plot = self.plot
-        self.outside = plot.varea("delay", "critical", "top", source=self.edge, fill_alpha=0.10, hatch_pattern="/", hatch_scale=14)
+        self.outside = plot.varea("delay", "critical", "top", source=self.edge, fill_alpha=0.10, hatch_pattern="/", hatch_scale=16, hatch_weight=0.8)
         self.inside = plot.varea("delay", 0, "critical", source=self.edge, fill_alpha=0.06)
         self.contour_lines = plot.multi_line("delay", "sensitivity", source=self.contours, line_width=0.8, line_alpha=0.8)
         self.contour_words = plot.text(
@@ -81,6 +81,8 @@ class MapView:
         plot.on_event(MouseLeave, self._left)
         self.readout = Sheet()
         self.root = pn.Column(pn.pane.Bokeh(plot, sizing_mode="stretch_both", min_height=220), self.readout, sizing_mode="stretch_both")
+        self.ticks = CustomJSTickFormatter(args={"factor": 1.0}, code="return String(parseFloat((tick * factor).toPrecision(3)))")
+        plot.yaxis.formatter = self.ticks
         self._shape: Any = None
         self._map: BoundaryMap | None = None
         self._held = False
@@ -97,7 +99,7 @@ class MapView:
         dress(self.plot, palette)
         for glyph in (self.outside.glyph,):
             glyph.fill_color = glyph.hatch_color = palette.outside
-            glyph.hatch_alpha = 0.35
+            glyph.hatch_alpha = 0.3
         self.inside.glyph.fill_color = palette.inside
         self.edge_line.glyph.line_color = palette.ink
         self.contour_lines.glyph.line_color = palette.quiet
@@ -214,9 +216,8 @@ class MapView:
 
     def _tick_units(self, unit: str) -> None:
         factor, _ = to_display(1.0, unit, self.bench.units)
-        self.plot.yaxis.formatter = CustomJSTickFormatter(
-            args={"factor": factor}, code="return String(parseFloat((tick * factor).toPrecision(3)))"
-        )
+        if self.ticks.args["factor"] != factor:
+            self.ticks.args = {"factor": factor}
 
     def _clamped(self, event: Any) -> tuple[float, float] | None:
         if event.x is None or event.y is None:

@@ -55,14 +55,16 @@ class RecordingView:
         self.envelope = ColumnDataSource({"time": [], "value": []})
         self.cycles = ColumnDataSource({"start": [], "stop": [], "turn": [], "middle": [], "text": [], "alpha": []})
         self.masked = ColumnDataSource({"start": [], "stop": [], "text": []})
-        border = {"min_border_left": 60, "min_border_right": 14, "toolbar_location": None, "sizing_mode": "stretch_width"}
-        self.strip = figure(height=110, x_range=self._whole, y_range=Range1d(0.0, 1.0), tools=[], min_border_bottom=30, **border)
+        border: dict[str, Any] = {"min_border_left": 60, "min_border_right": 14, "toolbar_location": None, "sizing_mode": "stretch_width"}
+        self.strip = figure(height=110, x_range=self._whole, tools=[], min_border_bottom=30, y_range=Range1d(0.0, 1.0), **border)
         tool = RangeTool(x_range=self._shown)
         tool.overlay.fill_alpha = 0.18
         self.tool = tool
         self.strip.add_tools(tool)
         pan, wheel = PanTool(dimensions="width"), WheelZoomTool(dimensions="width")
-        self.window = figure(height=380, x_range=self._shown, y_range=Range1d(0.0, 1.0), tools=[pan, wheel, ResetTool()], min_border_bottom=44, **border)
+        self.window = figure(
+            height=380, x_range=self._shown, y_range=Range1d(0.0, 1.0), tools=[pan, wheel, ResetTool()], min_border_bottom=44, **border
+        )
         self.window.toolbar.active_scroll = wheel
         self.lanes = Range1d(0.0, 1.0)
         self.window.extra_y_ranges = {"lane": self.lanes}
@@ -83,6 +85,7 @@ class RecordingView:
             hatch_alpha=0.35, line_alpha=0.0,
         )  # fmt: skip
         for item in (self.strip, self.window):
+            item.xaxis.ticker = FixedTicker(ticks=[])
             item.yaxis.ticker.desired_num_ticks = 3
         self.strip.yaxis.visible = False
         self.window.xaxis.axis_label = "Time in the recording (min:s)"
@@ -329,7 +332,7 @@ def _time_ticks(plot: Any, start: float, stop: float) -> None:
     span = max(stop - start, 1.0)
     step = next((s for s in (5, 10, 15, 30, 60, 120, 300, 600, 900, 1800, 3600, 7200) if span / s <= 10), 14400)
     ticks = [step * k for k in range(int(np.ceil(start / step)), int(np.floor(stop / step)) + 1)]
-    plot.xaxis.ticker = FixedTicker(ticks=ticks)
+    plot.xaxis.ticker.ticks = ticks
     plot.xaxis.major_label_overrides = {tick: clock(tick) for tick in ticks}
 
 

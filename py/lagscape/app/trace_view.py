@@ -78,7 +78,7 @@ class TraceView:
         self.silence_bars = upper.plot.segment("start", 0, "end", 0, source=self.silences, line_width=8)
         self.silence_texts = upper.plot.text(
             "middle", 0, "text", source=self.silences, text_align="center", text_baseline="bottom", y_offset=-6, text_font=value(FONT),
-            text_font_size="12px",
+            text_font_size="12px", background_fill_alpha=0.85,
         )  # fmt: skip
         self.bracket = ColumnDataSource({"x": [], "y": []})
         self.bracket_line = upper.plot.line("x", "y", source=self.bracket, line_width=1.2)
@@ -108,6 +108,7 @@ class TraceView:
             strip.mark.line_color = palette.quiet
         self.silence_bars.glyph.line_color = palette.outside
         self.silence_texts.glyph.text_color = palette.outside
+        self.silence_texts.glyph.background_fill_color = palette.paper
         self.bracket_line.glyph.line_color = palette.quiet
         self.bracket_label.text_color = palette.ink
         self.mark_label.text_color = palette.quiet
