@@ -190,7 +190,9 @@ def _sentence(holds: float, standing: Standing, doubts: tuple[Doubt, ...]) -> st
     else:
         often = f"In {hundred:.0f} of 100 draws"
     most = doubts[0]
-    because = f" Most of the doubt comes from: {most.label.lower() if most.label[1:2].islower() else most.label}." if most.share > 0.5 else (
-        f" The largest part of the doubt comes from: {most.label.lower() if most.label[1:2].islower() else most.label}." if most.share else ""
-    )
-    return f"{often} this loop {standing}.{because}"
+    if not most.share:
+        return f"{often} this loop {standing}."
+    part = "Most" if most.share > 0.5 else "The largest part"
+    # An abbreviation such as CO2 keeps its capitals.
+    label = most.label[:1].lower() + most.label[1:] if most.label[1:2].islower() else most.label
+    return f"{often} this loop {standing}. {part} of the doubt comes from: {label}."

@@ -25,10 +25,11 @@ _BREATHING = (
         "The controller's line: PCO2 falls and ventilation rises, so plant gain falls. The slope stays.",
         "The apnoeic threshold falls by 15 % at 1000 mg/day (meta-analysis of Schmickl 2021, Physiol Rep 9:e15071), by half of the largest "
         "effect at 250 mg/day (assumed, no source). The slope is left alone: the same meta-analysis found no substantial change of it.",
-        "Loop gain 3.4 to 2.0 (-41 %), apnoea-hypopnoea index in NREM sleep 50 to 24 an hour. In heart failure central apnoeas 49 to 23 an hour.",
+        "Loop gain 3.4 to 2.0 (-41 %), apnoea-hypopnoea index in NREM sleep 50 to 24 an hour. In heart failure central apnoeas 49 to 23 an "
+        "hour.",
         "Edwards 2012, J Physiol 590:1199; Javaheri 2006, Am J Respir Crit Care Med 173:234",
-        "Sulphonamide allergy, low potassium, acidosis, kidney or liver failure. Breathing must be able to meet the acidosis: care in severe "
-        "airway obstruction. Blood gases and electrolytes first and after (common practice, no source).",
+        "Sulphonamide allergy, low potassium, acidosis, kidney or liver failure. Breathing must be able to meet the acidosis: care in "
+        "severe airway obstruction. Blood gases and electrolytes first and after (common practice, no source).",
         "Drug", rules.acetazolamide,
     ),
     Lever(
@@ -42,10 +43,10 @@ _BREATHING = (
     Lever(
         "oxygen_l_min", "Oxygen", "L/min", 0.0, 6.0, 2.0, 0.5,
         "Arterial PO2, and through it the peripheral CO2 gain.",
-        "Each L/min by nasal cannula adds 0.04 to the inspired oxygen fraction (common practice), 28.5 mmHg of PaO2 at sea level in a healthy "
-        "lung; the peripheral gain follows exp(-0.05 (PaO2 - 100)). Resting PaCO2 stays.",
-        "Loop gain 0.69 to 0.34 where it was high, unchanged where it was low. In heart failure Cheyne-Stokes respiration 50.7 to 24.2 % of "
-        "sleep.",
+        "Each L/min by nasal cannula adds 0.04 to the inspired oxygen fraction (common practice): 28.5 mmHg of PaO2 at sea level in a "
+        "healthy lung. The peripheral gain follows exp(-0.05 (PaO2 - 100)). With CO2 only resting PaCO2 stays; with CO2 and O2 it rises.",
+        "Loop gain 0.69 to 0.34 where it was high, unchanged where it was low. In heart failure Cheyne-Stokes respiration 50.7 to 24.2 % "
+        "of sleep.",
         "Wellman 2008, Respir Physiol Neurobiol 162:144; Hanly 1989, Ann Intern Med 111:777",
         "May raise PaCO2 in chronic hypercapnia. High PaO2 constricts vessels; aim at a saturation, not at a flow (common practice, no "
         "source). Fire.",
@@ -53,23 +54,23 @@ _BREATHING = (
     ),
     Lever(
         "descent_m", "Descent", "m", 0.0, 5000.0, 1000.0, 100.0,
-        "Arterial PO2, and through it the peripheral CO2 gain.",
-        "The altitude is read from PaO2 as if the lung were healthy (alveolar gas equation, pressure after West 1996), and PaO2 rises by the "
-        "inspired PO2 gained. Resting PaCO2 and the acclimatised controller stay, as in the first night.",
+        "Barometric pressure or arterial PO2, and through them the peripheral CO2 gain.",
+        "Pressure by altitude after West 1996. With CO2 only PaO2 rises by the inspired PO2 gained, and where the barometric pressure is "
+        "that of sea level the altitude is read from PaO2 as if the lung were healthy. The controller stays, as in the first night.",
         "From 490 to 4559 m saturation fell from 96 to 67 % and ventilation rose from 4.4 to 6.3 L/min; descent undoes it.",
         "Nussbaumer-Ochsner 2012, Sleep 35:419",
-        "Only for hypoxaemia by altitude: a low PaO2 from lung disease does not rise so. Do not let descent wait for this sum where altitude "
-        "illness is suspected.",
+        "Only for hypoxaemia by altitude: a low PaO2 from lung disease does not rise so. Do not let descent wait for this sum where "
+        "altitude illness is suspected.",
         "Gas", rules.descent,
     ),
     Lever(
         "inspired_co2_percent", "Inspired CO2", "%", 0.0, 4.0, 1.0, 0.25,
         "Inspired PCO2; resting PaCO2 and ventilation rise with it.",
-        "Each percent adds 7.13 mmHg to inspired PCO2 at sea level; the rest moves along the controller's line.",
+        "Each percent adds 7.13 mmHg to inspired PCO2 at sea level, less high up; the rest moves along the controller's line.",
         "Idiopathic central apnoea: central events 43.7 to 5.8 an hour with PCO2 1 to 3 mmHg higher.",
         "Xie 1997, J Appl Physiol 82:918",
-        "Raises ventilation and sympathetic drive; wakes sleepers. Needs supervision and a gas supply that cannot fail upwards; not for use "
-        "at home (common practice, no source).",
+        "Raises ventilation and sympathetic drive; wakes sleepers. Needs supervision and a gas supply that cannot fail upwards; not for "
+        "use at home (common practice, no source).",
         "Gas", rules.inspired_co2,
     ),
     Lever(
@@ -108,19 +109,20 @@ _BREATHING = (
         "Delay is blood volume over flow, so both delays are divided by 1 plus the dose, whether or not the case ties them.",
         "Resynchronisation lessened Cheyne-Stokes respiration, but circulation time did not change.",
         "Gabor 2005, Eur Respir J 26:95",
-        "A way to read the loop: no treatment is shown to work by this path, and drugs that raise output have harmed in chronic heart failure "
-        "(common practice, no source).",
+        "A way to read the loop: no treatment is shown to work by this path, and drugs that raise output have harmed in chronic heart "
+        "failure (common practice, no source).",
         "Circulation", rules.cardiac_output_rise,
     ),
     Lever(
         "added_dead_space_ml", "Added dead space", "mL", 0.0, 800.0, 500.0, 50.0,
         "Dead-space fraction; resting PaCO2 and ventilation rise with it.",
-        f"Added mL are ventilated {rules.BREATHS_PER_MIN:.0f} times a minute (common practice, no source) beside the own dead space, which keeps "
-        "its mL; the new dead-space fraction is the one at the new rest. Within a cycle the loop keeps that fraction, which quiets more than "
-        "if breaths changed by volume alone.",
+        f"Added mL are ventilated {rules.BREATHS_PER_MIN:.0f} times a minute (common practice, no source) beside the own dead space, which "
+        "keeps its mL; the new dead-space fraction is the one at the new rest. Within a cycle the loop keeps that fraction, which quiets "
+        "more than if breaths changed by volume alone.",
         "400 to 600 mL: apnoeas 29 to 1 an hour, end-tidal PCO2 38.9 to 40.7 mmHg. Idiopathic central apnoea: 43.7 to 5.8 events an hour.",
         "Khayat 2003, Chest 123:1551; Xie 1997, J Appl Physiol 82:918",
-        "More work of breathing and sympathetic drive; not where PaCO2 is already high or the lungs are failing (common practice, no source).",
+        "More work of breathing and sympathetic drive; not where PaCO2 is already high or the lungs are failing (common practice, no "
+        "source).",
         "Gas", rules.added_dead_space,
     ),
 )  # fmt: skip
@@ -154,8 +156,8 @@ _REFLEX = (
         "Reflex gain.",
         "The gain is multiplied by 1 less the dose. No drug is meant: it says how much less gain would do, by a focal or a systemic way.",
         _UNPUBLISHED, _OPEN,
-        "What lowers reflex gain weakens: focal injections the muscle, systemic drugs the person, with sedation and falls (common practice, no "
-        "source).",
+        "What lowers reflex gain weakens: focal injections the muscle, systemic drugs the person, with sedation and falls (common "
+        "practice, no source).",
         "Reflex", _lessened("reflex_gain_per_rad"),
     ),
     Lever(

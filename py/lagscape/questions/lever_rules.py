@@ -9,14 +9,15 @@ from typing import Any
 
 import numpy as np
 
+from lagscape.loops.gases import ROOM_OXYGEN, SEA_LEVEL_MMHG, WATER_VAPOUR_MMHG, altitude_m, barometric_pressure_mmhg
 from lagscape.loops.protocol import Array
 
 __all__ = [
     "BREATHS_PER_MIN",
     "acetazolamide",
     "added_dead_space",
-    "chemoreflex_gain_fall",
     "cardiac_output_rise",
+    "chemoreflex_gain_fall",
     "cpap",
     "descent",
     "inspired_co2",
@@ -25,13 +26,13 @@ __all__ = [
     "oxygen",
 ]
 
-_WATER_VAPOUR_MMHG = 47.0
-_SEA_LEVEL_MMHG = 760.0
-_ROOM_OXYGEN = 0.2093
 _RESPIRATORY_QUOTIENT = 0.8
-_ALVEOLAR_ARTERIAL_MMHG = 5.0
-"""Alveolar-arterial PO2 difference where none is known: a healthy lung (common practice, no source)."""
+_HEALTHY_DIFFERENCE_MMHG = 5.0
+"""Alveolar-arterial PO2 difference of a healthy lung, young and supine (common practice, no source)."""
 _LARGEST_PAO2_MMHG = 600.0
+_LARGEST_OXYGEN = 1.0
+_NOT_SEA_LEVEL_MMHG = 730.0
+"""A barometric pressure under the typical band was typed for its altitude."""
 
 OXYGEN_PER_L_MIN = 0.04
 """Rise of the inspired oxygen fraction per L/min by nasal cannula: common practice; 0.26 to 0.54 measured at 1 to 6 L/min
@@ -51,12 +52,16 @@ LATERAL_LUNG_VOLUME = 87.3 / 81.0
 BREATHS_PER_MIN = 15.0
 """Turns an added dead space in mL into a ventilation: common practice, no source. The loop itself has no breaths."""
 _LARGEST_DEAD_SPACE = 0.95
+_MOST_STEPS = 30
 
 
 def oxygen(loop: Any, dose: Any) -> Any:
-    """Nasal oxygen in L/min raises PaO2 by 0.04 (PB - 47) mmHg per L/min, at sea level where the loop has no altitude of its own."""
-    rise = OXYGEN_PER_L_MIN * dose * (_SEA_LEVEL_MMHG - _WATER_VAPOUR_MMHG)
-    return loop.with_numbers(arterial_po2_mmhg=np.minimum(loop.arterial_po2_mmhg + rise, _LARGEST_PAO2_MMHG))
+    """Nasal oxygen in L/min: the inspired fraction rises by 0.04 each; with CO2 only, PaO2 by what a healthy lung makes of that."""
+    rise = OXYGEN_PER_L_MIN * dose
+    if loop.has_oxygen:
+        return loop.with_numbers(inspired_o2_fraction=np.minimum(loop.inspired_o2_fraction + rise, _LARGEST_OXYGEN))
+    gained = rise * (loop.barometric_pressure_mmhg - WATER_VAPOUR_MMHG)
+    return loop.with_numbers(arterial_po2_mmhg=np.minimum(loop.arterial_po2_mmhg + gained, _LARGEST_PAO2_MMHG))
 
 
 def acetazolamide(loop: Any, dose: Any) -> Any:
@@ -68,10 +73,9 @@ def acetazolamide(loop: Any, dose: Any) -> Any:
 
 
 def inspired_co2(loop: Any, dose: Any) -> Any:
-    """Percent CO2 in the inspired gas, at sea level: 7.13 mmHg each."""
-    return loop.with_numbers(
-        inspired_pco2_mmhg=loop.inspired_pco2_mmhg + dose / 100.0 * (_SEA_LEVEL_MMHG - _WATER_VAPOUR_MMHG)
-    )
+    """Percent CO2 in the inspired gas: 7.13 mmHg each at sea level."""
+    added = dose / 100.0 * (loop.barometric_pressure_mmhg - WATER_VAPOUR_MMHG)
+    return loop.with_numbers(inspired_pco2_mmhg=loop.inspired_pco2_mmhg + added)
 
 
 def cpap(loop: Any, dose: Any) -> Any:
@@ -108,40 +112,54 @@ def metabolic_rate_rise(loop: Any, dose: Any) -> Any:
     return loop.with_numbers(co2_production_l_min=loop.co2_production_l_min * (1.0 + dose / 100.0))
 
 
-def barometric_pressure(altitude_m: Any) -> Array:
-    """mmHg at an altitude in m: exp(6.63268 - 0.1112 h - 0.00149 h^2), h in km (West 1996; from memory)."""
-    h = np.asarray(altitude_m, dtype=float) / 1000.0
-    return np.exp(6.63268 - 0.1112 * h - 0.00149 * h * h)
-
-
-def altitude_of_pao2(arterial_po2_mmhg: Any, arterial_pco2_mmhg: Any) -> Array:
-    """Altitude in m at which a healthy lung would have this PaO2 in room air, not below 0 (alveolar gas equation)."""
-    inspired = np.asarray(arterial_po2_mmhg, dtype=float) + _ALVEOLAR_ARTERIAL_MMHG + arterial_pco2_mmhg / _RESPIRATORY_QUOTIENT
-    pressure = inspired / _ROOM_OXYGEN + _WATER_VAPOUR_MMHG
-    under = np.maximum(6.63268 - np.log(pressure), 0.0)
-    return 1000.0 * (np.sqrt(0.1112**2 + 4.0 * 0.00149 * under) - 0.1112) / (2.0 * 0.00149)
+def altitude_here(loop: Any) -> Array:
+    """Altitude in m of the loop's barometric pressure; with CO2 only and a pressure of sea level, the one at which a healthy lung would
+    have this PaO2 in room air (alveolar gas equation)."""
+    typed = altitude_m(loop.barometric_pressure_mmhg)
+    if loop.has_oxygen:
+        return typed
+    inspired = loop.arterial_po2_mmhg + _HEALTHY_DIFFERENCE_MMHG + loop.resting_paco2_mmhg / _RESPIRATORY_QUOTIENT
+    meant = altitude_m(inspired / ROOM_OXYGEN + WATER_VAPOUR_MMHG)
+    return np.where(np.asarray(loop.barometric_pressure_mmhg) < _NOT_SEA_LEVEL_MMHG, typed, np.minimum(meant, 9000.0))
 
 
 def descent(loop: Any, dose: Any) -> Any:
-    """m: PaO2 rises by the inspired PO2 gained, at an unchanged PaCO2; never below sea level."""
-    here = altitude_of_pao2(loop.arterial_po2_mmhg, loop.resting_paco2_mmhg)
-    gained = barometric_pressure(np.maximum(here - dose, 0.0)) - barometric_pressure(here)
-    return loop.with_numbers(arterial_po2_mmhg=loop.arterial_po2_mmhg + _ROOM_OXYGEN * gained)
+    """m: barometric pressure rises, never above sea level; with CO2 only, PaO2 rises by the inspired PO2 gained."""
+    here = altitude_here(loop)
+    gained = barometric_pressure_mmhg(np.maximum(here - dose, 0.0)) - barometric_pressure_mmhg(here)
+    if loop.has_oxygen:
+        return loop.with_numbers(barometric_pressure_mmhg=np.minimum(loop.barometric_pressure_mmhg + gained, SEA_LEVEL_MMHG + 40.0))
+    return loop.with_numbers(arterial_po2_mmhg=loop.arterial_po2_mmhg + ROOM_OXYGEN * gained)
 
 
 def added_dead_space(loop: Any, dose: Any) -> Any:
     """mL: dead space is ventilated in every breath, so the dead-space ventilation grows by BREATHS_PER_MIN x dose.
 
-    The own dead space keeps its mL while breaths grow. The new dead-space fraction d at the new rest solves
-    d V(d) = d0 V(d0) + f D, whose left side rises with d; the root is found by halving.
+    The own dead space keeps its mL while breaths grow, so that d V(d) = d0 V(d0) + f D =: W at the new rest. Alveolar ventilation
+    A = (1 - d) V hardly depends on d, so d = W / (W + A(d)) is iterated, with secant steps, until it stands still.
     """
-    own = loop.dead_space_fraction
-    wasted = own * loop.rest().output + BREATHS_PER_MIN * np.asarray(dose, dtype=float) / 1000.0
-    low = np.zeros(np.shape(wasted)) + own
-    high = np.maximum(low, _LARGEST_DEAD_SPACE)
-    for _ in range(44):
-        middle = 0.5 * (low + high)
-        too_little = middle * loop.with_numbers(dead_space_fraction=middle).rest().output < wasted
-        low, high = np.where(too_little, middle, low), np.where(too_little, high, middle)
-    fraction = np.where(np.asarray(dose) > 0.0, 0.5 * (low + high), own)
-    return loop.with_numbers(dead_space_fraction=fraction if fraction.ndim else float(fraction))
+    own = np.asarray(loop.dead_space_fraction, dtype=float)
+    at_rest = loop.rest().output
+    wasted = own * at_rest + BREATHS_PER_MIN * np.asarray(dose, dtype=float) / 1000.0
+
+    def next_fraction(fraction: Array) -> Array:
+        alveolar = (1.0 - fraction) * loop.with_numbers(dead_space_fraction=_plain(fraction)).rest().output
+        return np.minimum(wasted / (wasted + alveolar), _LARGEST_DEAD_SPACE)
+
+    fraction = np.minimum(wasted / (wasted + (1.0 - own) * at_rest), _LARGEST_DEAD_SPACE)
+    last, last_step = own + np.zeros(np.shape(wasted)), fraction - own
+    for _ in range(_MOST_STEPS):
+        step = next_fraction(fraction) - fraction
+        if np.all(np.abs(step) <= 1e-12):
+            break
+        # The secant through the last two steps; a plain step where they do not tell enough.
+        turn = step - last_step
+        slope = np.where(np.abs(turn) > 1e-300, -(fraction - last) / np.where(np.abs(turn) > 1e-300, turn, 1.0), 1.0)
+        last, last_step = fraction, step
+        fraction = np.clip(fraction + step * np.where((slope > 0.2) & (slope < 5.0), slope, 1.0), own, _LARGEST_DEAD_SPACE)
+    fraction = np.where(np.asarray(dose) > 0.0, fraction, own)
+    return loop.with_numbers(dead_space_fraction=_plain(fraction))
+
+
+def _plain(value: Array) -> Any:
+    return value if np.ndim(value) else float(value)

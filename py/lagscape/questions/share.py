@@ -27,7 +27,7 @@ from lagscape.quantities import figure
 from lagscape.questions.many import judge_many
 from lagscape.questions.standing import Judgement, Standing, judge_loop
 
-__all__ = ["PARTS", "Part", "PartShare", "Share", "parts_of", "share_of_excess", "shapley_values", "typical_case"]
+__all__ = ["PARTS", "Part", "PartShare", "Share", "parts_of", "shapley_values", "share_of_excess", "typical_case"]
 
 _NO_EXCESS = math.log(1.05)
 """A loop gain within 5 % of the typical one has no excess worth sharing: far inside the spread of any of its numbers."""
@@ -72,7 +72,12 @@ PARTS: Mapping[str, tuple[Part, ...]] = MappingProxyType(
 """Loop kind to its parts. A number goes to the part that names it, else to the part of its group."""
 
 _TYPICAL: Mapping[str, str] = MappingProxyType({"breathing": "healthy-asleep", "reflex": "ankle-calm", "plain": "plain-gentle"})
-"""Loop kind to the starting case that stands for a typical person."""
+"""Loop kind to the starting case that stands for a typical person: for breathing one asleep, as whoever is asked about is."""
+
+_TYPICAL_OF_STATE: Mapping[str, str] = MappingProxyType(
+    {name: name for name in ("healthy-awake", "healthy-rem", "exercise")} | {"altitude-4559-day": "healthy-awake"}
+)
+"""Starting cases in another state than NREM sleep, to the healthy starting case in that state."""
 
 
 @dataclass(frozen=True)
@@ -107,8 +112,11 @@ class Share:
 
 
 def typical_case(case: Case) -> Case:
-    """The typical loop that a case is compared with: the healthy starting case, or the specification's typical numbers where none is."""
-    name = _TYPICAL.get(case.kind)
+    """The typical loop that a case is compared with: the healthy starting case in the same state, asleep where the state is not known.
+
+    Where a loop has no such starting case, the specification's typical numbers.
+    """
+    name = _TYPICAL_OF_STATE.get(case.started_from or "", _TYPICAL.get(case.kind))
     if name is not None and any(item.name == name for item in LOOPS[case.kind].starting_cases):
         return Case.from_starting_case(name)
     return Case.typical(case.kind)
@@ -233,7 +241,9 @@ def _sentence(found: list[PartShare], ratio: float, against: str, shared: bool) 
     top, second = ordered[0], ordered[1]
     first = f"Loop gain is {many} the typical one ({against})."
     share = top.share or 0.0
-    if share > 1.0:
+    if 0.995 <= share < 1.005:
+        said = f"The whole {what} is {top.part.label}"
+    elif share > 1.0:
         said = f"More than the whole {what} ({_percent(share)}) is {top.part.label}"
     elif share > 0.5:
         said = f"Most of the {what} ({_percent(share)}) is {top.part.label}"
