@@ -277,7 +277,7 @@ class _Blocks:
 
     def advance(self) -> None:
         """One block."""
-        form, at = self.form, self.at
+        at = self.at
         steps = min(self.block, self.count - at)
         grid, middle = [], []
         for item in self.delayed:

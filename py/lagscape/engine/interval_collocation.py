@@ -1,4 +1,4 @@
-"""Interval collocation: the drag path. The run is cut into steps of the shortest delay, so that on each step what is sensed is known.
+"""Interval collocation: the drag path. The run is cut into steps of at most the shortest delay, so that on each step what is sensed is known.
 
 On a step the sensed signals come from former steps by constant matrices, the controller's states are a constant linear operator of
 them, the controlled signal follows, and the plant is then linear with known coefficients (`plant_steps`). Every step has the same
@@ -25,6 +25,7 @@ __all__ = ["FixedMesh", "holds_every_break", "interval_collocation", "mesh_for"]
 
 _OVERSAMPLES = 32
 _MOST_EXTRA_PIECES = 8
+_MOST_PIECES_A_STEP = 12
 _SAME_PLACE = 1e-6
 """Piece ends closer than this share of a step are one."""
 
@@ -36,7 +37,7 @@ class FixedMesh:
     start: float
     """s: where the first step begins; before it the loop rests."""
     step: float
-    """s: the shortest delay."""
+    """s: at most the shortest delay."""
     edges: Array
     """Shape (m + 1,), s from the start of a step; the last is `step`."""
     degree: int
@@ -46,20 +47,22 @@ class FixedMesh:
 def mesh_for(run: Run, rate: float, pieces_per_rate: float, degree: int, start: float) -> FixedMesh:
     """Equal pieces of about 1 / (rate x pieces_per_rate) s, and the breaks of the run folded into a step as further piece ends.
 
-    With noise the step is a whole number of holds or a whole fraction of one, so that every jump falls on a piece end.
+    The step is the shortest delay, or a whole fraction of it where that would be more than a dozen pieces. With noise the step is a
+    whole number of holds or a whole fraction of one, so that every jump falls on a piece end.
     """
-    step = run.form.delays[0]
+    step = min(run.form.delays[0], max(run.duration - start, 1e-3 * run.duration))
+    step /= math.ceil(step * rate * pieces_per_rate / _MOST_PIECES_A_STEP)
     breaks = np.concatenate([[start], run.breaks[run.breaks > start]])
     holds = [item.span for item in run.disturbances if item.kind == "noise"]
     marks = np.array([0.0, 1.0])
     if holds:
-        whole = math.floor(step / holds[0] + 1e-9)
+        whole = min(math.floor(step / holds[0] + 1e-9), _MOST_PIECES_A_STEP)
         step = holds[0] * whole if whole else holds[0] / math.ceil(holds[0] / step - 1e-9)
         marks = np.arange(max(whole, 1) + 1) / max(whole, 1)
         shift = np.mod(min(item.start for item in run.disturbances if item.kind == "noise") - start, step)
         marks = np.unique(np.concatenate([marks, np.mod(marks + shift / step, 1.0)]))
     # First what jumps, then the images under the other delays, which are smoother.
-    images = [breaks[:_MOST_EXTRA_PIECES] + delay for delay in run.form.delays if delay % step > 0.0]
+    images = [breaks[:_MOST_EXTRA_PIECES] + delay for delay in run.form.delays if not _whole(delay / step)]
     extra = np.concatenate([breaks, *images])
     for place in np.mod(extra - start, step)[: 4 * _MOST_EXTRA_PIECES if holds else 2 * _MOST_EXTRA_PIECES] / step:
         if np.abs(marks - place).min() > _SAME_PLACE:
@@ -69,6 +72,10 @@ def mesh_for(run: Run, rate: float, pieces_per_rate: float, degree: int, start: 
         count = max(1, math.ceil((b - a) * step * rate * pieces_per_rate - 1e-9))
         edges += [step * (a + (b - a) * i / count) for i in range(1, count + 1)]
     return FixedMesh(start, step, np.array(edges), degree)
+
+
+def _whole(number: float) -> bool:
+    return abs(number - round(number)) < _SAME_PLACE
 
 
 def holds_every_break(run: Run, mesh: FixedMesh) -> bool:
@@ -234,7 +241,7 @@ def interval_collocation(run: Run, times: Array, mesh: FixedMesh, stiff: bool = 
             if not math.isfinite(x[0]):
                 done = k
                 break
-    if not plant.trusted(v_all[:done]):
+    if not plant.trusted(v_all[: done + 1]):
         return interval_collocation(run, times, mesh, stiff=True)
     v_all, x_all, arguments = v_all[:done], x_all[:done], arguments[:done]
     states = plant.states(x_all, v_all, signals.forcing(v_all, slice(done)))
@@ -270,10 +277,13 @@ def _trace(run: Run, times: Array, mesh: FixedMesh, table: Array, status: str) -
 
 
 def _error_estimate(run: Run, table: Array) -> float:
-    """The unresolved part of the plant's states: their two highest Legendre coefficients against their size."""
+    """The unresolved part of the plant's states: their two highest Legendre coefficients against their size so far.
+
+    It is local: a loop that grows or drifts in phase multiplies it.
+    """
     if not table.size:
         return math.inf
     states = table[..., : run.form.n_plant]
-    tail = np.abs(np.einsum("kmps,pc->kmcs", states, tail_weights(table.shape[2] - 1))).max(axis=(0, 1, 2))
-    size = np.maximum(np.abs(states).max(axis=(0, 1, 2)), 1e-300)
+    tail = np.abs(np.einsum("kmps,pc->kmcs", states, tail_weights(table.shape[2] - 1))).max(axis=(1, 2))
+    size = np.maximum(np.maximum.accumulate(np.abs(states).max(axis=(1, 2))), 1e-300)
     return float((tail / size).max())

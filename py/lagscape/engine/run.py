@@ -21,12 +21,14 @@ __all__ = ["Run"]
 
 @dataclass(frozen=True)
 class Run:
-    """See the module. `initial` has shape (n_plant + n_control,)."""
+    """See the module. `initial` and `rest`, the state without the offset, have shape (n_plant + n_control,)."""
 
     form: DriveForm
     initial: Array
     duration: float
     disturbances: tuple[Disturbance, ...] = ()
+    rest: Array | None = None
+    """None where it is `initial`."""
 
     @cached_property
     def floor(self) -> float:

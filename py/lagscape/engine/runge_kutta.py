@@ -51,8 +51,11 @@ def runge_kutta(run: Run, times: Array, step: float, *, error_estimate: float | 
     finite = int(np.argmin(np.isfinite(states).all(axis=1))) if not np.isfinite(states).all() else len(states)
     status = "completed" if finite == len(states) else "diverged"
     kept = times if finite == len(states) else times[times <= (finite - 1) * step]
-    values = _hermite(states, starts, ends, step, kept)
-    sensed = _sensed(run, states, starts, ends, step, kept)
+    with np.errstate(over="ignore", invalid="ignore"):
+        values = _hermite(states, starts, ends, step, kept)
+        sensed = _sensed(run, states, starts, ends, step, kept)
+    inside = np.isfinite(values).all(axis=1) & np.isfinite(sensed).all(axis=0)
+    kept, values, sensed = kept[inside], values[inside], sensed[:, inside]
     output = run.controlled(sensed, values[:, run.form.n_plant :].T, kept)
     level = run.silence_level(sensed, values[:, run.form.n_plant :].T, kept, output)
     if error_estimate is None:

@@ -37,12 +37,14 @@ _ROUGH = ExactSettings(degree=8, highest_order=1, tolerance=1e-4)
 """For a drag with more breaks than a fixed mesh can hold."""
 
 _MOST_REFINEMENTS = 3
-_MOST_STEPS_RELEASE = 2500
+_MOST_PIECES = 3000
+_MOST_STEPS_DRAG = 1500
+_MOST_STEPS_RELEASE = 5000
 _FEW_STEPS = 40
 _STEP_DRAG = 0.1
 _STEP_RELEASE = 0.02
-_SHORT_BILINEAR = 1.2
-_SHORT_SIMPLE = 0.15
+_SHORT_DELAY = 1.2
+"""Below this product of delay and rate, plain steps are cheaper than collocation on one piece a delay (measured, breathing)."""
 
 
 def simulate(
@@ -107,10 +109,11 @@ def _checked_run(loop_or_form: Any, duration: Any, rest: Any, disturbances: Any,
             raise InvalidInputError(f"every delay must be finite and positive (s); got {float(delay)!r}.")
     several = (disturbances,) if isinstance(disturbances, Disturbance) else tuple(disturbances)
     check_channels(several, form.channels)
-    initial = np.asarray(rest.state, dtype=float) + _offset(form, offset)
+    state = np.asarray(rest.state, dtype=float)
+    initial = state + _offset(form, offset)
     if not np.all(np.isfinite(initial)):
         raise InvalidInputError(f"rest and offset must be finite; got {initial.tolist()}.")
-    return Run(form, initial, number, several)
+    return Run(form, initial, number, several, state)
 
 
 def _offset(form: DriveForm, offset: Any) -> Array:
@@ -151,8 +154,13 @@ def _dispatch(run: Run, times: Array, purpose: str) -> Trace:
             trace = exact_path(run, times, rate, start)
             return trace if trace.error_estimate <= RELEASE_ERROR else _flagged(trace)
         return _by_steps(run, times, _STEP_RELEASE / rate, RELEASE_ERROR)
-    if run.form.delays[0] * rate < _shortest_delay_in_rates(run) and steps > _FEW_STEPS:
-        return _by_steps(run, times, _STEP_DRAG / rate, DRAG_ERROR)
+    bilinear = run.form.n_plant > 1 and bool(np.any(run.form.plant_by_output))
+    short = run.form.delays[0] * rate < _SHORT_DELAY if bilinear else steps > _MOST_STEPS_DRAG
+    if short and steps > _FEW_STEPS:
+        trace = _by_steps(run, times, _STEP_DRAG / rate, DRAG_ERROR)
+        # Explicit steps leave the finite numbers where the loop is stiff; collocation does not.
+        if trace.status != "diverged" or steps > _MOST_STEPS_RELEASE:
+            return trace
     degree, pieces = (8, 1.25) if run.form.drive.has_kink else (12, 1.0)
     trace = _on_a_fixed_mesh(run, times, rate, start, degree, pieces, DRAG_ERROR)
     return trace if trace is not None else exact_path(run, times, rate, start, _ROUGH)
@@ -167,8 +175,9 @@ def _on_a_fixed_mesh(
         if not holds_every_break(run, mesh):
             return None
         trace = interval_collocation(run, times, mesh)
-        if trace.status != "completed" or trace.error_estimate <= promised:
-            return trace
+        total = len(mesh.edges) * run.duration / mesh.step
+        if trace.status != "completed" or trace.error_estimate <= promised or total > _MOST_PIECES:
+            return trace if trace.error_estimate <= promised else _flagged(trace)
         pieces *= 2.0
     return _flagged(trace)
 
@@ -183,19 +192,18 @@ def _flagged(trace: Trace) -> Trace:
 
 
 def fastest_rate(run: Run) -> float:
-    """The largest absolute eigenvalue of the plant at the rest's output and of the controller, 1/s; at least one over the run."""
+    """The largest absolute eigenvalue of the plant, at the start's and the rest's output, and of the controller, 1/s.
+
+    At least one over the run; at most `_MOST_PIECES` over the run, because collocation is stable without resolving what is faster.
+    """
     form, n = run.form, run.form.n_plant
-    sensed = form.sensed_rows @ run.initial[:n]
-    output = float(form.drive.value(sensed, run.initial[n:], 0.0))
-    rates = [np.abs(np.linalg.eigvals(form.plant + output * form.plant_by_output)).max()]
+    rates = []
+    for state in (run.initial, run.initial if run.rest is None else run.rest):
+        output = float(form.drive.value(form.sensed_rows @ state[:n], state[n:], 0.0))
+        rates.append(np.abs(np.linalg.eigvals(form.plant + output * form.plant_by_output)).max())
     if form.n_control:
         rates.append(np.abs(np.linalg.eigvals(form.control)).max())
-    return float(max(*rates, 1.0 / run.duration))
-
-
-def _shortest_delay_in_rates(run: Run) -> float:
-    """Below this product of delay and rate, plain steps are cheaper than collocation on one piece a delay (measured)."""
-    return _SHORT_BILINEAR if run.form.n_plant > 1 and np.any(run.form.plant_by_output) else _SHORT_SIMPLE
+    return float(min(max(*rates, 1.0 / run.duration), _MOST_PIECES / run.duration))
 
 
 def _first_move(run: Run) -> float:
