@@ -16,8 +16,9 @@ _BY_NAME = (
     ("SpO2", r"spo2|sao2|\bso2\b|sat(uration)?\b|oxim|pulse ?ox"),
     ("acceleration", r"accel|\bacc\b|\bacc[ -]?[xyz]\b|tremor|\bgyro"),
     ("ventilation", r"ventilation|\bve\b|\bv e\b|minute ?vol|\bmv\b|\bvdot"),
-    ("effort", r"effort|thor|chest|abdo|\babd\b|belt|\brip\b|rib ?cage|\bresp\b|respiration|\bvolume\b|\btho\b|torax|bauch|brust"),
-    ("airflow", r"flow|nasal|cannula|pneumo|therm|naso|\bpflow|\bnp\b|mask ?pres|atem"),
+    ("effort", r"effort|thor|chest|abdo|\babd\b|belt|\brip\b|rib ?cage|\btho\b|torax|bauch|brust"),
+    ("airflow", r"flow|nasal|cannula|pneumo|therm|naso|\bnp\b|mask ?pres|atem"),
+    ("effort", r"\bresp\b|respiration|\bvolume\b"),
 )
 
 _BY_UNIT = (

@@ -1,7 +1,12 @@
 """Open a recording, whatever its form."""
 
+import os
+from pathlib import Path
+
 from lagscape.recordings.csv_reader import read_csv
 from lagscape.recordings.csv_text import Source
+from lagscape.recordings.edf import read_edf
+from lagscape.recordings.edf_header import looks_like_edf
 from lagscape.recordings.recording import Progress, Recording
 
 __all__ = ["read_recording"]
@@ -16,16 +21,17 @@ def read_recording(
     time_unit: str | None = None,
     progress: Progress | None = None,
 ) -> Recording:
-    """Read a recording from a text table (CSV).
+    """Open a recording: EDF, EDF+ or a text table (CSV), told apart by what the file holds, not by its name.
 
     Parameters
     ----------
     source : path, bytes or binary file
-        Text tables are read in blocks of 4 MB.
+        Text tables are read in blocks of 4 MB and kept in single precision. Of an EDF file only the header and the marks are
+        read; a stream must stay open as long as the recording is used, and be able to be positioned.
     name : str, optional
         What to call the recording; the file's name by default.
     sampling_frequency_hz : float, optional
-        Samples a second. Needed for a table without a time column; where there is one, the rate given wins.
+        Samples a second, for text tables. Needed for a table without a time column; where there is one, the rate given wins.
     time_column : str, optional
         Name of the column that holds the time.
     time_unit : str, optional
@@ -45,6 +51,8 @@ def read_recording(
     ReadCancelled
         If the progress callback returned False.
     """
+    if looks_like_edf(_head(source)):
+        return read_edf(source, name=name, progress=progress)
     return read_csv(
         source,
         name=name,
@@ -53,3 +61,19 @@ def read_recording(
         time_unit=time_unit,
         progress=progress,
     )
+
+
+def _head(source: Source) -> bytes:
+    """The first 256 bytes, without moving a stream; empty where they cannot be had (the readers say why)."""
+    try:
+        if isinstance(source, bytes | bytearray | memoryview):
+            return bytes(source[:256])
+        if isinstance(source, str | os.PathLike):
+            with Path(source).open("rb") as stream:
+                return stream.read(256)
+        here = source.tell()
+        head = source.read(256)
+        source.seek(here)
+    except (AttributeError, OSError, ValueError):
+        return b""
+    return head if isinstance(head, bytes) else b""

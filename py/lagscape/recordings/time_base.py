@@ -189,7 +189,8 @@ def _resampled(t: np.ndarray, kept: np.ndarray, typical: float, origin: float, n
     _refuse_bloat(float((t[edges[1:] - 1] - t[edges[:-1]]).sum()) * rate, t.size)
     notes.append(Note(f"the samples are unevenly spaced in time; they were laid on an even grid of {rate:.3g} Hz along straight lines"))
     if breaks.size:
-        notes.append(Note(f"{counted(breaks.size, 'gap')} in time; nothing is measured across a gap", int(breaks.size), first_time_s=float(t[breaks[0]])))
+        text = f"{counted(breaks.size, 'gap')} in time; nothing is measured across a gap"
+        notes.append(Note(text, int(breaks.size), first_time_s=float(t[breaks[0]])))
     segments, firsts, grid, n = [], [], [], 0
     for a, b in itertools.pairwise(edges):
         size = int((t[b - 1] - t[a]) * rate) + 1
