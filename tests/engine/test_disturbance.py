@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 import math
 
 import numpy as np
@@ -57,9 +58,7 @@ def test_the_integral_is_that_of_the_value(start: float, span: float, amplitude:
     }[kind]()
     end = 40.0
     edges = [0.0, *item.breaks(end).tolist(), end]
-    total = sum(
-        quad(lambda t: float(item.value(t)), a, b - 1e-12 * end, limit=400)[0] for a, b in zip(edges, edges[1:], strict=False) if b > a
-    )
+    total = sum(quad(lambda t: float(item.value(t)), a, b - 1e-12 * end, limit=400)[0] for a, b in itertools.pairwise(edges) if b > a)
     assert abs(total - float(item.integral(end))) < 1e-7 * (1.0 + abs(amplitude)) * end
 
 

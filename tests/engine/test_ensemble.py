@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 import math
 
 import numpy as np
@@ -43,7 +44,7 @@ def test_the_order_is_four_where_nothing_is_cut_off() -> None:
         trace = ensemble(loop.form(), loop.rest(), duration=120.0, step=size, offset=2.0)
         exact = exact_path(run, trace.times, 0.3)
         errors.append(float(np.abs(trace.states[:, 0, 0] - exact.states[:, 0]).max()))
-    orders = [math.log2(a / b) for a, b in zip(errors, errors[1:], strict=False)]
+    orders = [math.log2(a / b) for a, b in itertools.pairwise(errors)]
     assert all(3.4 < order < 7.0 for order in orders), errors
 
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 import math
 from collections.abc import Callable
 from typing import Any
@@ -65,7 +66,7 @@ def test_a_general_integrator_by_the_method_of_steps_agrees() -> None:
 
 
 def _orders(errors: list[float]) -> list[float]:
-    return [math.log2(a / b) for a, b in zip(errors, errors[1:], strict=False)]
+    return [math.log2(a / b) for a, b in itertools.pairwise(errors)]
 
 
 @pytest.mark.parametrize(("loop", "duration", "offset", "parts"), [(damped(), 120.0, 2.0, 12), (limb(), 1.0, np.array([0.05, 0, 0, 0]), 12)])
@@ -74,9 +75,7 @@ def test_plain_steps_are_of_order_four_where_nothing_is_cut_off(loop: Any, durat
     run = run_of(loop, duration, offset)
     times = np.linspace(0.0, duration, 101)
     reference = exact_path(run, times, 30.0 / run.form.delays[0], settings=ExactSettings(degree=16, tolerance=1e-13, highest_order=4))
-    errors = [
-        difference(runge_kutta(run, times, run.form.delays[0] / (parts * 2**i), error_estimate=0.0), reference) for i in range(3)
-    ]
+    errors = [difference(runge_kutta(run, times, run.form.delays[0] / (parts * 2**i), error_estimate=0.0), reference) for i in range(3)]
     assert all(3.6 < order < 5.0 for order in _orders(errors)), errors
 
 

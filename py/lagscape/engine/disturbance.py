@@ -19,7 +19,6 @@ from lagscape.loops.protocol import Array
 __all__ = ["Disturbance", "breaks_of", "check_channels", "integral_on", "noise", "periodic", "pulse", "step", "value_on"]
 
 
-
 _MOST_HOLDS = 1_000_000
 
 
@@ -41,9 +40,7 @@ class Disturbance:
     def _held(self, count: int) -> Array:
         """The first `count` held values of noise; the same whatever the count, because they are drawn in order."""
         if count > _MOST_HOLDS:
-            raise InvalidInputError(
-                f"noise may hold at most {_MOST_HOLDS} values; got {count}. Take a longer hold or a shorter run."
-            )
+            raise InvalidInputError(f"noise may hold at most {_MOST_HOLDS} values; got {count}. Take a longer hold or a shorter run.")
         return self.amplitude * np.random.default_rng(self.seed).standard_normal(count)
 
     def value(self, times: Any) -> Array:
@@ -128,9 +125,7 @@ def noise(channel: str, start: float, hold: float, amplitude: float, seed: int) 
     """
     if int(seed) < 0:
         raise InvalidInputError(f"seed must be a whole number of 0 or more; got {seed!r}.")
-    return Disturbance(
-        "noise", channel, _start(start), _check("amplitude", amplitude), _check("hold (s)", hold, True), int(seed)
-    )
+    return Disturbance("noise", channel, _start(start), _check("amplitude", amplitude), _check("hold (s)", hold, True), int(seed))
 
 
 def check_channels(disturbances: Iterable[Disturbance], channels: Mapping[str, Any]) -> None:

@@ -259,8 +259,7 @@ class _Blocks:
         for array, row in zip(self.values, rows, strict=True):
             array[: self.pad + 1] = np.tensordot(row, self.x, axes=(0, 0))
         self.delayed = [
-            _Delayed(int(number), delay, step, self.pad, batch)
-            for number, delay in zip(row_of.reshape(-1), form.sensed_delays, strict=True)
+            _Delayed(int(number), delay, step, self.pad, batch) for number, delay in zip(row_of.reshape(-1), form.sensed_delays, strict=True)
         ]
         self.block = max(1, math.floor(min(float(np.min(delay)) for delay in form.sensed_delays) / step + 1e-9))
         # Disturbances are common to all members, so they are worked out for one.
@@ -303,10 +302,12 @@ class _Blocks:
         form = self.form
         if not form.n_control:
             return np.empty((0, steps + 1, *self.batch)), np.empty((0, steps, *self.batch))
+
         def driven(y: Array) -> _Map:
             column = _times_map(self.by_sensed, [[item] for item in y])
             constant = [[item if np.any(item) else None] for item in form.control_constant]
             return _sum_maps((1.0, column), (1.0, constant))
+
         u, u_middle = driven(sensed), driven(middle)
         before = [[None if item[0] is None else item[0][:-1]] for item in u]
         after = [[None if item[0] is None else item[0][1:]] for item in u]
@@ -337,9 +338,7 @@ class _Blocks:
     def _plant_at(self, v: Array, at: int, steps: int, stage: int) -> tuple[_Map, _Map]:
         """W = A + v N and w = v b + e + disturbances at one stage, as maps."""
         form, size = self.form, self.form.n_plant
-        system = [
-            [_total([self.plant[i][j], _product(v, self.by_output[i][j])]) for j in range(size)] for i in range(size)
-        ]
+        system = [[_total([self.plant[i][j], _product(v, self.by_output[i][j])]) for j in range(size)] for i in range(size)]
         forcing: _Map = []
         for i in range(size):
             by_output = form.input_vector[i] if np.any(form.input_vector[i]) else None
@@ -408,7 +407,7 @@ def _cycles(times: Array, signal: Array, level: Array) -> EnsembleCycles:
     return EnsembleCycles(found.reshape(batch), kept(0.5 * swing), kept(step * length), kept(share), kept(swing / early))
 
 
-def _swing(signal: Array, since: Array, until: Array) -> tuple[Array, Array]:
+def _swing(signal: Array, since: Any, until: Any) -> tuple[Array, Array]:
     """Peak to peak and the level half way, of each member, over places from `since` to `until` (in steps)."""
     place = np.arange(len(signal))[:, None]
     inside = (place >= since) & (place <= until)

@@ -13,6 +13,7 @@ import itertools
 import math
 from dataclasses import dataclass
 from functools import lru_cache
+from typing import Any
 
 import numpy as np
 
@@ -242,7 +243,7 @@ class _Path:
         system = form.plant + v[..., None, None] * form.plant_by_output if np.any(form.plant_by_output) else form.plant
         return _linear_pieces(system, forcing, np.diff(edges), self.x, self.n)
 
-    def _unresolved(self, edges: Array, states: Array, arguments: Array) -> Array:
+    def _unresolved(self, edges: Array, states: Array, arguments: Array) -> Any:
         """Pieces to halve: those whose two highest coefficients are too large, unless they are already very short."""
         form = self.run.form
         control = arguments[form.n_sensed :].transpose(1, 0, 2)
@@ -288,7 +289,7 @@ def _slope_matrix(count: int) -> Array:
 
 def _refine(coefficients: Array, low: Array, high: Array) -> Array:
     """Roots of Chebyshev series on [0, 1], each bracketed: Newton steps, halving where a step leaves the bracket."""
-    orders = np.arange(coefficients.shape[1])
+    orders = np.arange(float(coefficients.shape[1]))
     both = np.stack([coefficients, coefficients])
     both[1] = coefficients @ _slope_matrix(coefficients.shape[1])
     rising = _series(both, high, orders)[0] > 0.0

@@ -175,8 +175,7 @@ class _Signals:
             at_drive = _step_times(mesh, count, drive_places)
             at_nodes = _step_times(mesh, count, nodes(mesh.degree))
             self.drive, self.output = (
-                signal if isinstance(signal, np.ndarray) else None
-                for signal in (run.push(at_drive), run.output_push(at_drive))
+                signal if isinstance(signal, np.ndarray) else None for signal in (run.push(at_drive), run.output_push(at_drive))
             )
             self._plant, self._by_output = (
                 np.moveaxis(signal, 0, 1) if isinstance(signal, np.ndarray) else None

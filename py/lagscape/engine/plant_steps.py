@@ -121,7 +121,7 @@ class ScalarStep:
 class _Group:
     """A few pieces solved together."""
 
-    def __init__(self, form: DriveForm, rows: Array, lengths: Array, n: int, picked: Array) -> None:
+    def __init__(self, form: DriveForm, rows: Array, lengths: Array, n: int, picked: Any) -> None:
         size, m = form.n_plant, len(lengths)
         nodes, points = m * n, m * (n + 1)
         y0, yw = chained_operator(form.plant, lengths, n)

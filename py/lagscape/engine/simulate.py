@@ -41,7 +41,7 @@ _MOST_PIECES = 3000
 _MOST_STEPS_DRAG = 1500
 _MOST_STEPS_RELEASE = 5000
 _FEW_STEPS = 40
-_STEP_DRAG = 0.1
+_STEP_DRAG = 0.08
 _STEP_RELEASE = 0.02
 _SHORT_DELAY = 1.2
 """Below this product of delay and rate, plain steps are cheaper than collocation on one piece a delay (measured, breathing)."""
@@ -166,9 +166,7 @@ def _dispatch(run: Run, times: Array, purpose: str) -> Trace:
     return trace if trace is not None else exact_path(run, times, rate, start, _ROUGH)
 
 
-def _on_a_fixed_mesh(
-    run: Run, times: Array, rate: float, start: float, degree: int, pieces: float, promised: float
-) -> Trace | None:
+def _on_a_fixed_mesh(run: Run, times: Array, rate: float, start: float, degree: int, pieces: float, promised: float) -> Trace | None:
     """Interval collocation, with more pieces where the estimate asks for it; None where the mesh cannot hold every break."""
     for _ in range(_MOST_REFINEMENTS):
         mesh = mesh_for(run, rate, pieces, degree, start)

@@ -12,7 +12,6 @@ from lagscape.loops.protocol import Array
 __all__ = ["Trace", "find_silences", "output_grid"]
 
 
-
 DEFAULT_POINTS = 1201
 
 
