@@ -116,7 +116,10 @@ def _pack_library(compiler: Compiler, runtime: Path, wheels: Mapping[str, Path])
     with zipfile.ZipFile(runtime / "python_stdlib.zip") as archive:
         standard = {name: archive.read(name) for name in archive.namelist() if not name.endswith("/")}
     files["python_stdlib.zip"] = pack(compiler.compile(standard, STANDARD_LIBRARY))
-    files["numpy.zip"] = pack(compiler.compile(wheel_files(runtime / packages["numpy"], keep_native=True)))
+    numpy = wheel_files(runtime / packages["numpy"], keep_native=True)
+    # scipy asks numpy for every public name, so the Fortran wrapper maker must be importable; nothing in a browser can run it.
+    numpy["numpy/f2py/__init__.py"] = b""
+    files["numpy.zip"] = pack(compiler.compile(numpy))
     files["libraries.zip"] = pack(compiler.compile(merged(wheel_files(path, keep_native=False) for path in wheels.values())))
     with zipfile.ZipFile(wheels["bokeh"]) as archive:
         for name in BOKEH_SCRIPTS:

@@ -32,7 +32,8 @@ LEFT_OUT = (
     "numpy/f2py/*", "numpy/distutils/*", "numpy/_pyinstaller/*", "numpy/conftest.py",
     "bokeh/server/static/*", "bokeh/sampledata/*", "bokeh/command/*",
     "panel/dist/bundled/*", "panel/dist/assets/*", "panel/dist/dts/*", "panel/dist/lib/*", "panel/dist/*.js", "panel/dist/panel.json",
-    "panel/examples/*", "panel/node_modules/*", "panel/package-lock.json", "panel/dist/images/*", "*.data/*", "panel/models/*.ts", "panel/template/*.html", "panel/command/*",
+    "panel/examples/*", "panel/node_modules/*", "panel/package-lock.json", "panel/dist/images/*", "*.data/*", "panel/models/*.ts",
+    "panel/template/*.html", "panel/command/*",
     "*.so.*", "*/_yaml.cpython-*", "*/_speedups.*",
     "*.dist-info/RECORD", "*.dist-info/WHEEL", "*.dist-info/*.txt", "*.dist-info/licenses/*", "*.dist-info/LICENSE*",
 )

@@ -5,7 +5,6 @@ from __future__ import annotations
 import importlib
 import sys
 from collections.abc import Awaitable, Callable
-from types import ModuleType
 
 __all__ = ["ensure_scipy", "use_loader"]
 
@@ -36,7 +35,4 @@ async def ensure_scipy() -> None:
                 "The part that reads recordings and fits could not be fetched; check the connection to the server and try again."
             ) from error
         importlib.invalidate_caches()
-        # scipy asks for every public name of numpy; its Fortran wrapper maker, which nothing here runs, is not in the bundle.
-        wrapper_maker = sys.modules.setdefault("numpy.f2py", ModuleType("numpy.f2py"))
-        setattr(sys.modules["numpy"], "f2py", wrapper_maker)  # noqa: B010
     importlib.import_module("scipy")
