@@ -69,7 +69,10 @@ class Style:
 
 
 def tick_values(axis: Axis, most: int = 6) -> list[float]:
-    """Round values inside an axis, at most `most` (two more on a logarithmic one): steps of 1, 2 or 5 times a power of ten."""
+    """Round values inside an axis, two or more: steps of 1, 2 or 5 times a power of ten.
+
+    At most `most` and one, or two more on a logarithmic axis, or five where `most` is so small that it would leave a single one.
+    """
     if axis.logarithmic and axis.high / axis.low > 8.0:
         powers = range(math.floor(math.log10(axis.low)), math.ceil(math.log10(axis.high)) + 1)
         for parts in ((1, 2, 5), (1, 3), (1,)):
@@ -79,7 +82,14 @@ def tick_values(axis: Axis, most: int = 6) -> list[float]:
                 return inside
     rough = (axis.high - axis.low) / most
     power = 10.0 ** math.floor(math.log10(rough))
-    step = next(part * power for part in (1.0, 2.0, 5.0, 10.0) if part * power >= rough * (1.0 - 1e-12))
+    steps = [part * power for part in (0.2, 0.5, 1.0, 2.0, 5.0, 10.0)]
+    at = next(index for index, step in enumerate(steps) if step >= rough * (1.0 - 1e-12))
+    ticks = _multiples(axis, steps[at])
+    # A step wider than half the axis may leave it with one tick, from which nobody can read a scale.
+    return ticks if len(ticks) > 1 else _multiples(axis, steps[at - 1])
+
+
+def _multiples(axis: Axis, step: float) -> list[float]:
     first = math.ceil(axis.low / step - 1e-9)
     last = math.floor(axis.high / step + 1e-9)
     return [index * step for index in range(first, last + 1)]
