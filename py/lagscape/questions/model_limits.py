@@ -37,8 +37,9 @@ MODEL_LIMITS: tuple[ModelLimit, ...] = (
         "lung_volume_slope",
         "Slope of ln loop gain on ln(1 / lung volume), heart failure with periodic breathing", "",
         0.9, "0.9 +- 0.1 among patients", 0.209, "Sands 2011, AJRCCM 184:1067",
-        "In this loop blood takes up CO2 as PaCO2 rises, three and a half times as fast as ventilation washes it out, so the lung's gas store "
-        "matters less at cycles of a minute. CPAP and posture act through lung volume and are weaker here than in patients.",
+        "In this loop blood takes up CO2 as PaCO2 rises, three and a half times as fast as ventilation washes it out, so the lung's gas "
+        "store matters less at cycles of a minute: without that uptake the slope would be 0.62. CPAP and posture act through lung volume "
+        "and are weaker here than in patients.",
     ),
     ModelLimit(
         "lateral_posture_loop_gain",
@@ -50,8 +51,8 @@ MODEL_LIMITS: tuple[ModelLimit, ...] = (
         "acetazolamide_loop_gain",
         "Loop gain at 1000 mg/day over before, heart failure with periodic breathing", "",
         0.588, "0.588 (3.4, quartiles 2.4 to 5.4, to 2.0, quartiles 1.4 to 3.5)", 0.847, "Edwards 2012, J Physiol 590:1199",
-        "The line's shift lowers the steady plant gain by 24 %, as published, but at the cycle's frequency only by the fall of PaCO2. The median "
-        "fall is larger than any published change of plant gain explains; the model's stays inside the published quartiles.",
+        "The line's shift lowers the steady plant gain by 24 %, as published, but at the cycle's frequency only by the fall of PaCO2. The "
+        "median fall is larger than any published change of plant gain explains; the model's stays inside the published quartiles.",
     ),
     ModelLimit(
         "acetazolamide_co2_reserve",
