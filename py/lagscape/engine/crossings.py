@@ -27,6 +27,7 @@ _LARGEST_PHASE_STEP = 0.9
 """rad between neighbouring frequencies; beyond pi a turn could be missed, so this is a third of that."""
 _STEPS_PER_HALF_TURN = 6
 _MOST_FREQUENCIES = 20_000
+_TENTHS = np.arange(1, 10) / 10.0
 _POLE_OFFSETS = np.array([-6.0, -2.5, -1.0, -0.4, 0.0, 0.4, 1.0, 2.5, 6.0])
 
 
@@ -105,7 +106,7 @@ def _sample(opened: OpenLoop, start: float, end: float, longest: float) -> tuple
     parts = [np.linspace(start, end, min(count, _MOST_FREQUENCIES) + 1)[1:]]
     if start == 0.0:
         sizes = np.abs(opened.poles)
-        slow = min([1.0 / longest, *(size for size in sizes.tolist() if size > 0.0)])
+        slow = min([1.0 / longest, *(size for size in sizes.tolist() if size * longest > 1e-9)])
         parts.append(np.geomspace(1e-3 * min(slow, end), end, 48))
     for pole in opened.poles.tolist():
         if pole.imag > 0.0:
@@ -122,7 +123,22 @@ def _sample(opened: OpenLoop, start: float, end: float, longest: float) -> tuple
         middle = 0.5 * (frequency[coarse] + frequency[coarse + 1])
         frequency = np.insert(frequency, coarse + 1, middle)
         response = np.insert(response, coarse + 1, opened.response(middle))
+    for _ in range(3):
+        about = _near_turns(np.abs(response))
+        if not about.size:
+            break
+        finer = frequency[about - 1, None] + (frequency[about + 1] - frequency[about - 1])[:, None] * _TENTHS
+        frequency, first = np.unique(np.concatenate([frequency, finer.ravel()]), return_index=True)
+        response = np.concatenate([response, opened.response(finer.ravel())])[first]
     return frequency, response, complete
+
+
+def _near_turns(size: Array) -> Array:
+    """Where |L| turns just before it reaches 1: between these samples it may pass 1 and come back."""
+    middle, left, right = size[1:-1], size[:-2], size[2:]
+    peak = (middle >= left) & (middle > right) & (middle < 1.0) & (middle > 0.8)
+    dip = (middle <= left) & (middle < right) & (middle > 1.0) & (middle < 1.25)
+    return np.flatnonzero(peak | dip) + 1
 
 
 def _phase_crossings(opened: OpenLoop, frequency: Array, response: np.ndarray) -> tuple[PhaseCrossing, ...]:
@@ -191,6 +207,6 @@ def _unstable_roots(opened: OpenLoop, phase: tuple[PhaseCrossing, ...], first: c
     unstable = int(np.sum(poles.real > 1e-13 * np.max(np.abs(poles), initial=0.0)))
     unstable += 2 * sum(crossing.direction for crossing in phase if crossing.gain > 1.0)
     at_zero = opened.coefficients[-1]
-    if at_zero[0] != 0.0 and float(np.sum(at_zero[1:])) / at_zero[0] < -1.0:
+    if at_zero[0] != 0.0 and float(np.sum(at_zero[1:])) * math.copysign(1.0, at_zero[0]) < -abs(at_zero[0]):
         unstable += 1 if first.imag > 0.0 else -1
     return unstable

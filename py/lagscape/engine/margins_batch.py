@@ -23,7 +23,7 @@ _CHUNK = 2048
 """Members worked on at once, so that the work arrays stay in the cache."""
 _LEAST_FREQUENCIES, _MOST_FREQUENCIES = 20, 400
 _STEPS_PER_HALF_TURN = 3.0
-_ABOUT_RESONANCE = np.array([-3.0, -1.0, -0.4, 0.0, 0.4, 1.0, 3.0])[:, None]
+_ABOUT_RESONANCE = np.array([-3.0, -1.2, -0.6, -0.25, 0.0, 0.25, 0.6, 1.2, 3.0])[:, None]
 _KINDS = (bool, int, float, bool, float, bool, float, float, bool, float, float)
 """Of the columns of `MarginsBatch`, in order."""
 _TURN = 2.0 * math.pi
@@ -164,9 +164,17 @@ def _frequencies(opened: OpenLoop, end: Array, density: float) -> Array:
 
 
 def _coarse(response: np.ndarray) -> Array:
-    """Members whose phase turns so far between neighbouring frequencies that a crossing could be missed."""
+    """Members whose phase turns so far between neighbouring frequencies, or whose gain turns so near 1, that a crossing could be missed."""
     turned = response[1:] * np.conj(response[:-1])
-    return np.flatnonzero(np.any((turned.real < 0.0) & (np.abs(turned.imag) < -2.0 * turned.real), axis=0))
+    doubtful = np.any((turned.real < 0.0) & (np.abs(turned.imag) < -2.0 * turned.real), axis=0)
+    size = np.log(response.real**2 + response.imag**2 + 1e-300)
+    middle, left, right = size[1:-1], size[:-2], size[2:]
+    # How far a parabola through three samples passes beyond the middle one; even steps are near enough for a guard.
+    bend = left + right - 2.0 * middle
+    beyond = np.abs((right - left) ** 2 / (8.0 * np.where(bend != 0.0, bend, 1.0))) + 0.02
+    peak = (bend < 0.0) & (middle >= left) & (middle > right) & (middle < 0.0) & (middle + beyond > 0.0)
+    dip = (bend > 0.0) & (middle <= left) & (middle < right) & (middle > 0.0) & (middle - beyond < 0.0)
+    return np.flatnonzero(doubtful | np.any(peak | dip, axis=0))
 
 
 def _patched(opened: OpenLoop, end: Array, growth: bool, density: float, coarse: Array) -> tuple[list[Array], int]:
@@ -371,7 +379,7 @@ def _carefully(opened: OpenLoop, stable: bool, seed: complex) -> complex | None:
 
     single = OpenLoop(opened.coefficients, tuple(float(delay) for delay in opened.delays))
     found = []
-    for share in (1.0, 0.5, 1.6, 0.25, 2.5):
+    for share in (1.0, 0.5, 1.6, 0.25, 2.5, 4.0, 6.0, 9.0):
         for tilt in (0.0, -0.3, -0.8, 0.3, -2.0):
             root, residual = polish_root(single, seed * share + tilt * abs(seed))
             if residual < 1e-12 and abs(root.imag) > 1e-8 * abs(root):

@@ -139,20 +139,23 @@ class OpenLoop:
         return np.asarray(self.coefficients.T).tolist()
 
     def characteristic_at(self, s: complex) -> tuple[complex, complex, float]:
-        """F = D + sum_j N_j e^(-s tau_j), dF/ds and the sum of the terms' sizes, for one loop at one point."""
+        """F = D + sum_j N_j e^(-s tau_j), dF/ds and the sum of the sizes of all its monomials, for one loop at one point."""
         value, slope, size = 0j, 0j, 0.0
+        reach = abs(s)
         for column, delay in zip(self._columns, (0.0, *self.delays), strict=True):
-            term, term_slope = 0j, 0j
+            term, term_slope, weight = 0j, 0j, 0.0
             for coefficient in column:
                 term_slope = term_slope * s + term
                 term = term * s + coefficient
+                weight = weight * reach + abs(coefficient)
             if delay:
                 turn = cmath.exp(-s * delay)
                 term_slope = (term_slope - delay * term) * turn
                 term *= turn
+                weight *= abs(turn)
             value += term
             slope += term_slope
-            size += abs(term)
+            size += weight
         return value, slope, size
 
     def at(self, s: complex) -> tuple[complex, complex]:
@@ -205,7 +208,8 @@ def open_loop(form: DriveForm, rest: Rest) -> OpenLoop:
     n_plant, n_sensed = form.n_plant, form.n_sensed
     x0, c0 = rest.state[:n_plant], rest.state[n_plant:]
     sensed = form.sensed_rows @ x0 if x0.ndim == 1 else np.tensordot(form.sensed_rows, x0, axes=(1, 0))
-    gradient = _elements(form.drive.gradient(sensed, c0))
+    slopes = np.asarray(form.drive.gradient(sensed, c0), dtype=float)
+    law_shape, gradient = slopes.shape[1:], _elements(slopes)
     v0 = rest.output
     by_output = [_elements(row) for row in form.plant_by_output]
     plant = [
@@ -243,8 +247,8 @@ def open_loop(form: DriveForm, rest: Rest) -> OpenLoop:
     degree = len(denominator) - 1
     quadratics = tuple((part[1], part[2]) for part in (plant_determinant, control_determinant) if len(part) == 3)
     table = [denominator] + [[0.0] * (degree + 1 - len(total)) + total for _, total in grouped]
-    entries = [value for column in table for value in column] + [delay for delay, _ in grouped]
-    batch = np.broadcast_shapes(*(np.shape(value) for value in entries if not isinstance(value, float)))
+    shapes = (form.plant.shape[2:], rest.state.shape[1:], law_shape, *(np.shape(delay) for delay, _ in grouped))
+    batch = np.broadcast_shapes(*shapes) if any(shapes) else ()
     if not batch:
         return OpenLoop(np.array(table, dtype=float).T.copy(), tuple(float(delay) for delay, _ in grouped), quadratics)
     coefficients = np.zeros((degree + 1, len(table), *batch))

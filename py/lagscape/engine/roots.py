@@ -98,7 +98,7 @@ def rightmost_roots(
     found: dict[complex, float] = {}
     agrees = False
     for nodes in (_NODES, *_FINER):
-        seeds += generator_eigenvalues(form, rest, nodes)[: count + 4]
+        seeds += generator_eigenvalues(form, rest, nodes)[: max(count, known.unstable_roots // 2) + 4]
         for seed in seeds:
             _keep(found, opened, seed)
         agrees = sum(1 if root.imag == 0.0 else 2 for root in found if root.real > 0.0) == known.unstable_roots
@@ -108,8 +108,9 @@ def rightmost_roots(
         seeds = []
     ordered = sorted(found, key=lambda root: -root.real)
     oscillatory = next((root for root in ordered if root.imag > 0.0), None)
-    if known.stable and towards:
-        own, residual = polish_root(opened, towards[0])
+    deciding = crossing_root(opened, known.phase_crossover_frequency) if known.phase_crossover_frequency else None
+    if known.stable and deciding is not None:
+        own, residual = polish_root(opened, deciding)
         if residual < _RESIDUAL and own.imag > _REAL * abs(own):
             oscillatory = own
     slow = next((root.real for root in ordered if root.imag == 0.0), None)
@@ -163,7 +164,7 @@ def _on_boundary(found: dict[complex, float]) -> bool:
 
 def _crossing_seeds(opened: OpenLoop, known: Margins) -> list[complex]:
     """From i w at each strong phase crossover, the deciding one first, to the root that it becomes as the gain passes 1."""
-    frequencies = [item.frequency for item in sorted(known.phase_crossovers, key=lambda item: -item.gain)[:6]]
+    frequencies = [item.frequency for item in sorted(known.phase_crossovers, key=lambda item: -item.gain)[: 6 + known.unstable_roots // 2]]
     if known.phase_crossover_frequency is not None:
         frequencies = [known.phase_crossover_frequency, *(w for w in frequencies if w != known.phase_crossover_frequency)]
     found = (crossing_root(opened, w) for w in frequencies)
