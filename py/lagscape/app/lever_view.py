@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from html import escape
 
 from lagscape.app.components.sheet import Request, Sheet
@@ -11,8 +12,10 @@ from lagscape.case.parts import LeverSetting
 from lagscape.errors import InvalidInputError
 from lagscape.quantities import figure
 from lagscape.questions.cautions import cautions
+from lagscape.questions.enough import SAFE_GAIN_MARGIN, DoseAnswer, checked_margin, smallest_doses
 from lagscape.questions.lever import Lever
 from lagscape.questions.levers import LEVERS, LeverEffect
+from lagscape.questions.pair import smallest_pair
 from lagscape.questions.wording import seconds_words
 
 __all__ = ["LeverView", "effect_words"]
@@ -26,6 +29,10 @@ class LeverView:
     def __init__(self, bench: Workbench) -> None:
         self.bench = bench
         self.opened: str | None = None
+        self.wanted = SAFE_GAIN_MARGIN
+        self.answers: Mapping[str, DoseAnswer] = {}
+        self.pair = ""
+        self._answered_for: Case | None = None
         self.root = Sheet(self._handle)
         for topic in ("settled", "units"):
             bench.listen(topic, self.draw)
@@ -44,8 +51,21 @@ class LeverView:
         rows = "".join(self._row(lever, doses.get(name), alone.get(name)) for name, lever in known.items())
         said = "".join(f'<p class="caution">{escape(item.sentence)} <span class="quiet">{escape(item.source)}</span></p>' for item in cautions(case))
         all_on = f'<p class="after-levers"><b>All together:</b> {escape(effect_words(together))}</p>' if together is not None else ""
+        if self._answered_for is not case:
+            self.answers, self.pair = {}, ""
         clear = '<div class="tools"><button data-act="clear">Take all levers off</button></div>' if doses else ""
-        self.root.show(f"<h3>What would quiet it</h3>{rows}{all_on}{clear}{said}")
+        self.root.show(f"<h3>What would quiet it</h3>{rows}{all_on}{clear}{self._ask()}{said}")
+
+    def _ask(self) -> str:
+        """The question for the dose that is enough, and the pair's answer."""
+        refusal = self.bench.refusals.get("enough")
+        wrong = f'<p class="refusal" role="alert">{escape(refusal)}</p>' if refusal else ""
+        pair = f'<p class="after-levers">{escape(self.pair)}</p>' if self.pair else ""
+        return (
+            '<div class="tools"><button class="main" data-act="enough">Find the dose that is enough</button>'
+            f'<label class="quiet">for a gain margin of <input class="box short" type="text" inputmode="decimal" data-act="wanted" '
+            f'value="{figure(self.wanted)}" aria-label="Gain margin wanted"></label></div>{wrong}{pair}'
+        )
 
     def _row(self, lever: Lever, dose: float | None, effect: LeverEffect | None) -> str:
         on, name, label = dose is not None, lever.name, escape(lever.label)
@@ -61,6 +81,12 @@ class LeverView:
             else ""
         )
         words = f'<p class="effect">{escape(effect_words(effect))}</p>' if effect is not None else ""
+        answer = self.answers.get(name)
+        if answer is not None:
+            take = ""
+            if answer.in_steps is not None and answer.in_steps != dose:
+                take = f' <button class="link" data-act="take" data-key="{name}">Lay {figure(answer.in_steps)} {escape(lever.unit)}</button>'
+            words += f'<p class="enough">{escape(answer.sentence)}{take}</p>'
         more = ""
         if self.opened == name:
             more = (
@@ -95,8 +121,34 @@ class LeverView:
             dose = lever.minimum + float(request.value) / _STEPS * (lever.maximum - lever.minimum)
             dose = min(lever.maximum, max(lever.minimum, lever.step * round(dose / lever.step)))
             bench.attempt(place, lambda: self._with(key, dose), moving=request.live)
+        elif request.act == "wanted" and request.event != "escape":
+            self._want(request.value)
+        elif request.act == "enough":
+            self._find()
+        elif request.act == "take" and self.answers[key].in_steps is not None:
+            dose = self.answers[key].in_steps
+            bench.attempt(place, lambda: self._with(key, dose))
         elif request.act == "dose" and request.event != "escape":
             bench.attempt(place, lambda: self._with(key, self._typed(key, request.value)))
+
+    def _want(self, text: str) -> None:
+        try:
+            self.wanted = checked_margin(float(text.strip().replace(",", ".")))
+        except (ValueError, InvalidInputError):
+            self.bench.refuse("enough", f"The gain margin wanted must be a positive number, such as 1.3; got {text.strip()[:30]!r}.")
+            return
+        self.bench.refusals.pop("enough", None)
+        self.answers, self.pair = {}, ""
+        self.draw()
+
+    def _find(self) -> None:
+        """The smallest dose of each lever; where none is enough alone, the smallest pair."""
+        case = self.bench.case
+        self.answers = smallest_doses(case, self.wanted)
+        alone = any(answer.dose is not None for answer in self.answers.values())
+        self.pair = "" if alone else smallest_pair(case, self.wanted).sentence
+        self._answered_for = case
+        self.draw()
 
     def _typed(self, key: str, text: str) -> float:
         lever = LEVERS[self.bench.case.kind][key]

@@ -7,12 +7,14 @@ from typing import Any
 import panel as pn
 
 from lagscape.app.case_view import CaseView
+from lagscape.app.certainty_view import CertaintyView
 from lagscape.app.handover_view import HandoverView
 from lagscape.app.lever_view import LeverView
 from lagscape.app.map_view import MapView
 from lagscape.app.page_link import PageLink
 from lagscape.app.recording_view import RecordingView
 from lagscape.app.scipy_loader import ensure_scipy
+from lagscape.app.share_view import ShareView
 from lagscape.app.standing_view import StandingView
 from lagscape.app.trace_view import TraceView
 from lagscape.app.workbench import Workbench
@@ -33,11 +35,12 @@ def build(page: PageLink) -> dict[str, Any]:
     commands = _Commands(bench)
     recording = RecordingView(bench)
     commands.recording = recording
+    right = (StandingView, ShareView, LeverView, CertaintyView)
     return {
         "case": CaseView(bench).root,
         "map": MapView(bench).root,
         "traces": TraceView(bench).root,
-        "standing": pn.Column(StandingView(bench).root, LeverView(bench).root, sizing_mode="stretch_width"),
+        "standing": pn.Column(*(view(bench).root for view in right), sizing_mode="stretch_width"),
         "recording": recording.root,
         "handover": HandoverView(bench).root,
     }

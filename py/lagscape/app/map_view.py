@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import asyncio
 from typing import Any
 
 import numpy as np
@@ -29,8 +28,6 @@ const up = Math.min(y.end, Math.max(y.start, cb_obj.y))
 dot.data = {delay: [across], sensitivity: [up]}
 """
 """Runs in the page, so that the dot is under the pointer before Python has answered."""
-
-_REST_S = 0.25
 
 _STEP = {"fine": 0.01, "coarse": 0.10}
 
@@ -86,6 +83,7 @@ class MapView:
         self._shape: Any = None
         self._map: BoundaryMap | None = None
         self._held = False
+        self._contours_due = False
         bench.listen("moving", self.follow)
         bench.listen("settled", self.draw)
         bench.listen("units", self.draw)
@@ -130,7 +128,9 @@ class MapView:
             self._draw_boundary(self._map)
             self.contours.data = {"delay": [], "sensitivity": []}
             self.contour_texts.data = {"delay": [], "sensitivity": [], "text": []}
-            self.bench.later(self._contours_later(shape))
+            self._contours_due = True
+        if self._contours_due:
+            self.bench.when_rested(self._draw_contours)
         loop = case.loop()
         unit = to_display(1.0, loop.sensitivity_unit, self.bench.units)[1]
         self.plot.yaxis.axis_label = f"{loop.sensitivity_name} ({unit})" if unit else loop.sensitivity_name
@@ -167,7 +167,11 @@ class MapView:
         x = min(max(end[0], self.delay.start), self.delay.end)
         y = min(max(end[1], self.sensitivity.start), self.sensitivity.end)
         arrow.update(x_start=start[0], y_start=start[1], x_end=x, y_end=y, visible=True)
-        label.update(x=0.5 * (start[0] + x), y=0.5 * (start[1] + y), text=words, visible=True)
+        across = self.delay.end - self.delay.start
+        middle = 0.5 * (start[0] + x)
+        if label is self.across_words:
+            middle = min(max(middle, self.delay.start + 0.13 * across), self.delay.end - 0.13 * across)
+        label.update(x=middle, y=0.5 * (start[1] + y), text=words, visible=True)
 
     def _draw_boundary(self, drawn: BoundaryMap) -> None:
         window = drawn.window
@@ -178,12 +182,11 @@ class MapView:
         self.hunts_words.update(x=window.delay_high, y=window.sensitivity_high)
         self.quiet_words.update(x=window.delay_low, y=window.sensitivity_low)
 
-    async def _contours_later(self, shape: Any) -> None:
-        """The contours take longer than a frame: they come when the hand has rested, and not at all if the shape changed meanwhile."""
-        await asyncio.sleep(_REST_S)
-        if shape is not self._shape or self._held:
-            return
-        lines = cycle_contours(self.bench.case, shape[1])
+    def _draw_contours(self) -> None:
+        """The contours take longer than a frame: they come when the hand has rested."""
+        _, window = self._shape
+        self._contours_due = False
+        lines = cycle_contours(self.bench.case, window)
         self.contours.data = {"delay": [line.delays for line in lines], "sensitivity": [line.sensitivities for line in lines]}
         self.contour_texts.data = {
             "delay": [line.label_at[0] for line in lines],

@@ -96,9 +96,10 @@ class RecordingView:
             self.head,
             pn.pane.Bokeh(self.strip, sizing_mode="stretch_width"),
             pn.pane.Bokeh(self.window, sizing_mode="stretch_width"),
-            sizing_mode="stretch_width",
+            styles={"flex": "3 1 480px", "min-width": "0", "width": "auto"},
         )
-        self.root = pn.FlexBox(drawn, self.side, css_classes=["recording"], stylesheets=[_LAYOUT])
+        self.side.styles = {"flex": "1 1 310px", "min-width": "0", "width": "auto"}
+        self.root = pn.FlexBox(drawn, self.side, gap="20px", align_items="flex-start", sizing_mode="stretch_width")
 
     def cycles_on_strip(self) -> ColumnDataSource:
         self.strip_cycles = ColumnDataSource({"start": [], "stop": [], "low": []})
@@ -341,10 +342,3 @@ def clock(seconds: float) -> str:
     whole = round(seconds)
     hours, rest = divmod(whole, 3600)
     return f"{hours}:{rest // 60:02d}:{rest % 60:02d}" if hours else f"{rest // 60}:{rest % 60:02d}"
-
-
-_LAYOUT = """
-:host { display: flex; flex-wrap: wrap; gap: 16px; align-items: flex-start; width: 100%; }
-:host > *:first-child { flex: 3 1 520px; min-width: 0; }
-:host > *:last-child { flex: 1 1 320px; min-width: 280px; }
-"""

@@ -27,6 +27,9 @@ __all__ = ["Workbench"]
 
 OPENING_CASE = "heart-failure-periodic"
 
+_REST_S = 0.35
+"""How long the hand must rest before slow figures are worked out."""
+
 
 class Judged:
     """One case with what is worked out from it, each at most once."""
@@ -103,6 +106,17 @@ class Workbench:
             work.close()
         else:
             self.page.spawn(work)
+
+    def when_rested(self, work: Callable[[], None]) -> None:
+        """Do slow work a moment after the case has settled, and only if it still stands then."""
+        case = self.case
+
+        async def rested() -> None:
+            await asyncio.sleep(_REST_S)
+            if case is self.case:
+                work()
+
+        self.later(rested())
 
     def move(self, case: Case) -> None:
         """The case follows the hand; nothing is recorded until it settles."""

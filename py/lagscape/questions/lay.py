@@ -86,7 +86,7 @@ def lay_measurement(case: Case, cycle_length: MeasuredSpread | None, loop_gain: 
     changes = []
     for name, number in case.numbers.items():
         after = laid.value(name)
-        is_delay = name.endswith("delay_s")
+        is_delay = name in ("peripheral_delay_s", "central_delay_s")
         touched = is_delay or (gain is not None and name in ("peripheral_gain_l_min_mmhg", "central_gain_l_min_mmhg"))
         if not touched:
             continue

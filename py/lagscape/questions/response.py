@@ -106,7 +106,7 @@ def respond(case: Case, judged: Judgement, duration: float, purpose: Purpose = "
     trace = simulate(
         judged.form, duration=duration, rest=judged.rest, disturbances=disturbances, purpose=purpose, output_times=points
     )
-    return Response(trace, judged.loop.signals(trace.states, trace.output), start)
+    return Response(trace, judged.loop.signals(trace.states, trace.output, trace.times), start)
 
 
 def cycle_bracket(response: Response, length: float | None) -> tuple[float, float] | None:
@@ -121,8 +121,8 @@ def cycle_bracket(response: Response, length: float | None) -> tuple[float, floa
     if swing <= 1e-3 * max(1e-12, abs(float(values.mean()))):
         return None
     crest = np.flatnonzero((values[1:-1] >= values[:-2]) & (values[1:-1] > values[2:])) + 1
-    crest = crest[values[crest] > values.min() + 0.02 * swing]
     crest = crest[times[crest] > response.start_s + 0.25 * length]
+    crest = crest[values[crest] > values[0] + 0.04 * swing]
     kept: list[int] = []
     for index in crest:
         if kept and times[index] - times[kept[-1]] < 0.6 * length:
