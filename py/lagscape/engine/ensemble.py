@@ -135,7 +135,11 @@ def _times_map(a: _Map, b: _Map) -> _Map:
 
 
 def _product(a: Any, b: Any) -> Any:
-    return None if a is None or b is None else a * b
+    if a is None or b is None:
+        return None
+    if isinstance(a, float) and a == 1.0:
+        return b
+    return a * b
 
 
 def _total(terms: list[Any]) -> Any:
@@ -179,6 +183,23 @@ def _step_map(step: float, at: tuple[_Map, _Map, _Map], forcing: tuple[_Map, _Ma
     )
 
 
+def _constant_step_map(step: float, system: _Map) -> tuple[_Map, tuple[_Map, _Map, _Map]]:
+    """As `_step_map` where W is constant: M, and the matrices of g = Q_0 w_0 + Q_m w_m + Q_1 w_1."""
+    size = len(system)
+    nothing: _Map = [[None] for _ in range(size)]
+    columns: list[list[_Map]] = []
+    step_map: _Map = []
+    for stage in range(3):
+        columns.append([])
+        for j in range(size):
+            unit: _Map = [[1.0 if i == j else None] for i in range(size)]
+            forcing = tuple(unit if k == stage else nothing for k in range(3))
+            step_map, gain = _step_map(step, (system, system, system), forcing)  # type: ignore[arg-type]
+            columns[-1].append(gain)
+    weights = tuple([[columns[stage][j][i][0] for j in range(size)] for i in range(size)] for stage in range(3))
+    return step_map, weights  # type: ignore[return-value]
+
+
 def _walk(step_map: _Map, gain: _Map, start: Array, steps: int) -> Array:
     """The chain x_(n+1) = M_n x_n + g_n, shape (steps + 1, size, *batch)."""
     size, depth = len(start), start.ndim
@@ -205,31 +226,34 @@ class _Delayed:
         base = np.floor(-back + 1e-9)
         share = np.maximum(-back - base, 0.0)
         self._base = pad + base.astype(int).reshape(-1)
-        self._members = np.arange(self._base.size)
+        self._index = np.empty((0, 0), dtype=int)
         self._start_weights = _hermite_weights(share, step)
         late = share + 0.5
         over = late >= 1.0
         weights = _hermite_weights(np.where(over, late - 1.0, late), step)
-        self._middle_weights = [(np.where(over, 0.0, w), np.where(over, w, 0.0)) for w in weights]
+        # The middle of a step falls into the same cell for some members and into the next for others.
+        self._middle_weights = [
+            (shift, [np.where(chosen, w, 0.0) for w in weights]) for shift, chosen in ((0, ~over), (1, over)) if np.any(chosen)
+        ]
         self._batch = batch
 
     def block(self, values: Array, starts: Array, ends: Array, at: int, steps: int) -> tuple[Array, Array]:
         """The signal at the grid (steps + 1, *batch) and at the middles (steps, *batch) of a block."""
+        members = self._base.size
+        if len(self._index) != steps + 2:
+            self._index = (np.arange(steps + 2)[:, None] + self._base) * members + np.arange(members)
         # The last rows may lie past what is known; their weights are zero there.
-        rows = np.minimum(at + np.arange(steps + 2)[:, None] + self._base, len(values) - 1)
-        index = rows * self._members.size + self._members
-        x = values.reshape(-1).take(index).reshape(steps + 2, *self._batch)
-        s = starts.reshape(-1).take(index).reshape(x.shape)
-        e = ends.reshape(-1).take(index).reshape(x.shape)
+        index = self._index + at * members
+        x, s, e = (array.reshape(-1).take(index).reshape(steps + 2, *self._batch) for array in (values, starts, ends))
         w = self._start_weights
-        grid = w[0] * x[:-1] + w[1] * x[1:] + w[2] * s[:-1] + w[3] * e[:-1]
+        grid = w[0] * x[:-1]
+        for weight, cells in ((w[1], x[1:]), (w[2], s[:-1]), (w[3], e[:-1])):
+            grid += weight * cells
         middle = np.zeros((steps, *self._batch))
-        for shift in (0, 1):
-            ws = [pair[shift] for pair in self._middle_weights]
-            if any(np.any(item) for item in ws):
-                here = slice(shift, shift + steps)
-                after = x[shift + 1 : shift + 1 + steps]
-                middle += ws[0] * x[here] + ws[1] * after + ws[2] * s[here] + ws[3] * e[here]
+        for shift, ws in self._middle_weights:
+            here, after = slice(shift, shift + steps), slice(shift + 1, shift + 1 + steps)
+            for weight, cells in zip(ws, (x[here], x[after], s[here], e[here]), strict=True):
+                middle += weight * cells
         return grid, middle
 
 
@@ -253,7 +277,7 @@ class _Blocks:
         self.rows, self.first_row = rows, int(row_of.reshape(-1)[0])
         longest = max(float(np.max(delay)) for delay in form.sensed_delays)
         self.pad = math.ceil(longest / step) + 2
-        shape = (self.pad + count + 1, *batch)
+        shape = (self.pad + count + 3, *batch)
         self.values = [np.zeros(shape) for _ in rows]
         self.starts, self.ends = [np.zeros(shape) for _ in rows], [np.zeros(shape) for _ in rows]
         for array, row in zip(self.values, rows, strict=True):
@@ -270,8 +294,8 @@ class _Blocks:
         self.states = np.empty((count + 1, form.n_plant + form.n_control, *batch)) if keep else np.empty((0, 0, *batch))
         self.plant, self.by_output = _entries(form.plant), _entries(form.plant_by_output)
         if form.n_control:
-            control = _entries(form.control)
-            self.control = (control, control, control)
+            self.control = _entries(form.control)
+            self.control_map, self.control_weights = _constant_step_map(step, self.control)
             self.by_sensed = _entries(form.control_by_sensed)
 
     def advance(self) -> None:
@@ -286,9 +310,13 @@ class _Blocks:
             middle.append(m)
         sensed, sensed_middle = np.array(grid), np.array(middle)
         control, control_middle = self._control(sensed, sensed_middle, steps)
-        v, level = self._output(sensed[:, :-1], control[:, :-1], at, steps, 0)
+        if self.signals:
+            v, level = self._output(sensed[:, :-1], control[:, :-1], at, steps, 0)
+            v_end, level_end = self._output(sensed[:, 1:], control[:, 1:], at, steps, 2)
+        else:  # without a disturbance the end of a step is the start of the next
+            both, both_levels = self._output(sensed, control, at, steps, 0)
+            v, v_end, level, level_end = both[:-1], both[1:], both_levels[:-1], both_levels[1:]
         v_middle, _ = self._output(sensed_middle, control_middle, at, steps, 1)
-        v_end, level_end = self._output(sensed[:, 1:], control[:, 1:], at, steps, 2)
         stages = [self._plant_at(item, at, steps, stage) for stage, item in enumerate((v, v_middle, v_end))]
         at_stage, forcing = tuple(item[0] for item in stages), tuple(item[1] for item in stages)
         step_map, gain = _step_map(self.step, at_stage, forcing)  # type: ignore[arg-type]
@@ -311,9 +339,10 @@ class _Blocks:
         u, u_middle = driven(sensed), driven(middle)
         before = [[None if item[0] is None else item[0][:-1]] for item in u]
         after = [[None if item[0] is None else item[0][1:]] for item in u]
-        step_map, gain = _step_map(self.step, self.control, (before, u_middle, after))
-        c = np.moveaxis(_walk(step_map, gain, self.c, steps), 1, 0)
-        slope_map = _sum_maps((1.0, _times_map(self.control[0], [[item] for item in c])), (1.0, u))
+        parts = [_times_map(weight, item) for weight, item in zip(self.control_weights, (before, u_middle, after), strict=True)]
+        gain = _sum_maps(*((1.0, part) for part in parts))
+        c = np.moveaxis(_walk(self.control_map, gain, self.c, steps), 1, 0)
+        slope_map = _sum_maps((1.0, _times_map(self.control, [[item] for item in c])), (1.0, u))
         slope = np.array([np.zeros_like(c[0]) + (0.0 if item[0] is None else item[0]) for item in slope_map])
         return c, 0.5 * (c[:, :-1] + c[:, 1:]) + self.step / 8.0 * (slope[:, :-1] - slope[:, 1:])
 
@@ -372,7 +401,7 @@ class _Blocks:
 
     def trace(self) -> EnsembleTrace:
         times = self.step * np.arange(self.count + 1)
-        return EnsembleTrace(times, self.states, self.output, self.values[self.first_row][self.pad :], self.level)
+        return EnsembleTrace(times, self.states, self.output, self.values[self.first_row][self.pad : self.pad + self.count + 1], self.level)
 
 
 def _cycles(times: Array, signal: Array, level: Array) -> EnsembleCycles:
