@@ -40,7 +40,9 @@ def test_progress_never_goes_back_and_ends_ready(new_context: NewContext, site: 
     while_booting = [value for state, value in seen if state == "booting"]
     assert len(while_booting) >= 6
     assert while_booting == sorted(while_booting)
-    assert max(while_booting) > 0.9
+    # Stages are half of the bar and bytes the other half; the last stage ends with the start itself, so the bar cannot be full before.
+    assert max(while_booting) > 0.75
+    assert seen[-1][1] == 1
     states = [state for state, _ in seen]
     assert states[-1] == "ready" and "failed" not in states
     assert states == sorted(states, key=["booting", "ready"].index)
@@ -86,7 +88,7 @@ def test_scipy_is_not_fetched_before_it_is_needed(new_context: NewContext, site:
 
 
 def test_a_missing_runtime_is_said_in_a_sentence_and_can_be_tried_again(new_context: NewContext, site: str) -> None:
-    context, watch = new_context()
+    context, _ = new_context()
     context.route("**/numpy.zip", lambda route: route.fulfill(status=404, body="gone"))
     page = context.new_page()
     page.goto(site)
@@ -100,7 +102,6 @@ def test_a_missing_runtime_is_said_in_a_sentence_and_can_be_tried_again(new_cont
     page.locator("#restart").click()
     wait_ready(page)
     assert not page.locator("#failed").is_visible()
-    watch.expect_errors("404")
 
 
 def test_a_missing_page_script_is_said_in_a_sentence(new_context: NewContext, site: str) -> None:
