@@ -5,6 +5,8 @@ const SITE_PACKAGES = "/lib/python3.12/site-packages";
 
 let pyodide = null;
 let unpack = null;
+let loadScipy = null;
+let library = null;
 const times = {};
 
 const bytesOf = (address) => fetch(address).then((answer) => {
@@ -17,7 +19,8 @@ const tasks = {
   async start({ app, bare }) {
     const { site } = await import(`${app}site.js`);
     ({ unpack } = await import(`${app}worker_unpack.js`));
-    const library = new URL(site.library, app).href;
+    ({ loadScipy } = await import(`${app}worker_scipy.js`));
+    library = new URL(site.library, app).href;
     const begun = performance.now();
     const numpy = bytesOf(`${library}numpy.zip`);
     const { loadPyodide } = await import(`${library}pyodide.mjs`);
@@ -42,7 +45,7 @@ const tasks = {
     return null;
   },
   async scipy() {
-    await pyodide.loadPackage("scipy", { messageCallback: () => {}, checkIntegrity: true });
+    await loadScipy(pyodide, library);
     return null;
   },
   /** Calls a function of an importable module with JSON values; its result must be JSON values too. */

@@ -6,6 +6,7 @@ Everything but `index.html`, the service worker and the icons lies in two folder
 
 from __future__ import annotations
 
+import gzip
 import hashlib
 import json
 import os
@@ -110,7 +111,7 @@ def _library_files(compiler: Compiler, runtime: Path, wheels: Mapping[str, Path]
 def _pack_library(compiler: Compiler, runtime: Path, wheels: Mapping[str, Path]) -> dict[str, bytes]:
     lock = json.loads(RUNTIME_LOCK.read_text(encoding="utf-8"))
     packages = {name: entry["file_name"] for name, entry in lock["packages"].items()}
-    plain = ("pyodide.mjs", "pyodide.asm.js", "pyodide.asm.wasm", packages["scipy"], packages["openblas"])
+    plain = ("pyodide.mjs", "pyodide.asm.js", "pyodide.asm.wasm", packages["openblas"])
     files = {name: (runtime / name).read_bytes() for name in plain}
     files["pyodide-lock.json"] = runtime_lock_text().encode()
     with zipfile.ZipFile(runtime / "python_stdlib.zip") as archive:
@@ -120,6 +121,8 @@ def _pack_library(compiler: Compiler, runtime: Path, wheels: Mapping[str, Path])
     # scipy asks numpy for every public name, so the Fortran wrapper maker must be importable; nothing in a browser can run it.
     numpy["numpy/f2py/__init__.py"] = b""
     files["numpy.zip"] = pack(compiler.compile(numpy))
+    scipy = compiler.compile(wheel_files(runtime / packages["scipy"], keep_native=True))
+    files["scipy.bundle"] = gzip.compress(pack(scipy), compresslevel=6, mtime=0)
     files["libraries.zip"] = pack(compiler.compile(merged(wheel_files(path, keep_native=False) for path in wheels.values())))
     with zipfile.ZipFile(wheels["bokeh"]) as archive:
         for name in BOKEH_SCRIPTS:
@@ -137,8 +140,7 @@ def _site_module(version: str, library_folder: str, library: Mapping[str, bytes]
     sizes = {name: len(library[name]) for name in ("pyodide.asm.wasm", "python_stdlib.zip", "numpy.zip", "libraries.zip")}
     sizes["lagscape.zip"] = len(app["lagscape.zip"])
     scripts = [*BOKEH_SCRIPTS, "panel.min.js"]
-    scipy = [name for name in library if name.startswith(("scipy-", "openblas-"))]
-    site = {"version": version, "library": f"../{library_folder}/", "sizes": sizes, "scripts": scripts, "scipyFiles": scipy}
+    site = {"version": version, "library": f"../{library_folder}/", "sizes": sizes, "scripts": scripts}
     return f"// Written by the build: what this version is made of.\nexport const site = {json.dumps(site, indent=2)};\n".encode()
 
 

@@ -30,6 +30,7 @@ FIXED_DATE = (1980, 1, 1, 0, 0, 0)
 LEFT_OUT = (
     "*.pyi", "*.pyx", "*.pxd", "*.a", "*.h", "*.c", "*.ts", "*.map", "*/tests/*", "*/_examples/*", "*/py.typed",
     "numpy/f2py/*", "numpy/distutils/*", "numpy/_pyinstaller/*", "numpy/conftest.py",
+    "scipy/misc/*", "scipy/datasets/*", "scipy/conftest.py",
     "bokeh/server/static/*", "bokeh/sampledata/*", "bokeh/command/*",
     "panel/dist/bundled/*", "panel/dist/assets/*", "panel/dist/dts/*", "panel/dist/lib/*", "panel/dist/*.js", "panel/dist/panel.json",
     "panel/examples/*", "panel/node_modules/*", "panel/package-lock.json", "panel/dist/images/*", "*.data/*", "panel/models/*.ts",
@@ -40,14 +41,9 @@ LEFT_OUT = (
 
 
 def runtime_lock_text() -> str:
-    """The runtime's package lock, cut down to the packages that we ship.
-
-    numpy travels in a bundle of ours, so scipy must not ask for its wheel again.
-    """
+    """The runtime's package lock, cut down to the one package that the runtime loads itself; numpy and scipy travel in bundles."""
     lock = json.loads(RUNTIME_LOCK.read_text(encoding="utf-8"))
-    packages = {name: dict(entry) for name, entry in lock["packages"].items()}
-    packages["scipy"]["depends"] = ["openblas"]
-    return json.dumps({"info": lock["info"], "packages": packages})
+    return json.dumps({"info": lock["info"], "packages": {"openblas": lock["packages"]["openblas"]}})
 
 
 def wheel_files(wheel: Path, keep_native: bool) -> dict[str, bytes]:

@@ -2,6 +2,7 @@
 // Nothing here knows what the application is about; Python's side of the boundary is lagscape.app.boot.
 import { TO_PAGE, TO_WORKER, checked, message } from "./messages.js";
 import { countedFetch } from "./worker_fetch.js";
+import { loadScipy } from "./worker_scipy.js";
 import { unpack } from "./worker_unpack.js";
 import { site } from "./site.js";
 
@@ -11,7 +12,7 @@ const here = new URL("./", import.meta.url).href;
 
 let pyodide = null;
 let application = null;
-const waiting = [];
+let scipyLoading = null;
 
 function post(kind, fields, transfer = []) {
   self.postMessage(message(TO_PAGE, kind, fields), transfer);
@@ -48,8 +49,12 @@ const host = {
   trouble(sentence, support) {
     post("trouble", { sentence, support });
   },
-  async loadScipy() {
-    await pyodide.loadPackage("scipy", { messageCallback: () => {}, checkIntegrity: true });
+  loadScipy() {
+    scipyLoading ??= loadScipy(pyodide, library).catch((error) => {
+      scipyLoading = null; // the next one who asks tries again
+      throw error;
+    });
+    return scipyLoading;
   },
   // Reads part of a file the user opened; only a worker may read it in step with Python.
   readSlice(file, begin, end) {
