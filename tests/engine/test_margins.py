@@ -106,10 +106,10 @@ def test_delay_switches_back_and_forth_are_all_seen():
 def test_the_first_crossover_is_not_taken_for_the_only_one():
     # A resonance at 5 rad/s behind a slow lag: the second phase crossover has the larger gain. Oracle: brute force on 400,000 frequencies.
     plant = [[-1.0, 0.0, 0.0], [0.0, 0.0, 1.0], [0.0, -25.0, -0.2]]
-    form, rest = linear_form(plant, [0.3, 0.0, 2.0], [[-1.0, -1.0, 0.0]], [0.9])
+    form, rest = linear_form(plant, [0.3, 0.0, 2.0], [[-1.0, -1.0, 0.0]], [1.57])
     known = margins(form, rest)
     w = np.linspace(1e-3, 30.0, 400_000)
-    answer = -np.exp(-0.9j * w) * (-0.3 / (1j * w + 1.0) - 2.0 / (25.0 - w**2 + 0.2j * w))
+    answer = -np.exp(-1.57j * w) * (-0.3 / (1j * w + 1.0) - 2.0 / (25.0 - w**2 + 0.2j * w))
     crosses = np.flatnonzero((np.diff(np.sign(answer.imag)) != 0) & (answer.real[1:] < 0.0))
     brute = np.abs(answer[crosses])
     assert len(crosses) >= 3 and np.argmax(brute) > 0
@@ -143,7 +143,7 @@ def test_no_feedback_no_crossover_and_no_remedy_each_have_a_status():
     assert growing.delay_status is MarginStatus.NO_DELAY_RESTORES
 
 
-@pytest.mark.parametrize(("short", "long"), [(3.0, 60.0), (1e-3, 12.0), (400.0, 405.0)])
+@pytest.mark.parametrize(("short", "long"), [(3.0, 60.0), (0.02, 12.0), (400.0, 405.0)])
 def test_far_apart_tiny_and_huge_delays(short, long):
     # Oracle: brute force on a frequency grid finer than any turn of the phase.
     loop = p2(2.5, 1.0, short, long)
@@ -151,14 +151,20 @@ def test_far_apart_tiny_and_huge_delays(short, long):
     assert known.complete
     assert known.loop_gain is not None
     q, tissue, v0 = 863.0 * 0.0065 * 5.0 / 60.0, 5.0 / 900.0, 863.0 * 0.2 / 40.0 / 60.0
-    w = np.linspace(1e-5, 8.0, 1_500_000)
+    w = np.geomspace(1e-4, 120.0, 2_000_000)
     below = 3.0 * 1j * w + q + v0 - q * tissue / (1j * w + tissue)
     answer = 40.0 / 60.0 * (2.5 * np.exp(-1j * w * short) + np.exp(-1j * w * long) / (1.0 + 60j * w)) / below
     crosses = np.flatnonzero((np.diff(np.sign(answer.imag)) != 0) & (answer.real[1:] < 0.0))
     values = np.abs(answer[crosses])
-    if values.size and max(values) > 0.05:
-        reach = max(values) if not known.stable else max(value for value in values if value <= 1.0)
-        assert abs(known.loop_gain - reach) < 1e-3 * reach
+    reach = max(values) if not known.stable else max(value for value in values if value <= 1.0)
+    assert abs(known.loop_gain - reach) < 1e-3 * reach
+
+
+def test_delays_in_a_ratio_of_thousands_say_that_the_search_was_cut_short():
+    loop = p2(2.5, 1.0, 1e-3, 12.0)
+    known = margins(loop.form(), loop.rest())
+    assert not known.complete
+    assert known.stable
 
 
 @given(st.floats(0.0, 3.0), st.floats(0.01, 10.0), st.floats(0.01, 30.0))
