@@ -11,12 +11,15 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+import numpy.typing as npt
 
 from lagscape.engine.margins_batch import MarginsBatch
 from lagscape.engine.open_loop import OpenLoop
 from lagscape.loops.protocol import Array
 
 __all__ = ["DominantBatch", "dominant_batch"]
+
+Mask = npt.NDArray[np.bool_]
 
 _STEPS = 12
 _FREQUENCIES = 48
@@ -34,7 +37,7 @@ _CHUNK = 2048
 class DominantBatch:
     """One entry a member, shape (n,). Where `has` is False the others are 0 and mean nothing."""
 
-    has: Array
+    has: Mask
     """bool; False where no crossover leads to an oscillation: what disturbs the loop dies without a cycle."""
     growth_rate_per_s: Array
     cycle_length_s: Array
@@ -66,7 +69,7 @@ def dominant_batch(opened: OpenLoop, known: MarginsBatch) -> DominantBatch:
     return DominantBatch(has, np.where(has, root.real, 0.0), period)
 
 
-def _towards(opened: OpenLoop, crossover: Array) -> tuple[np.ndarray, Array]:
+def _towards(opened: OpenLoop, crossover: Array) -> tuple[np.ndarray, Mask]:
     """Newton steps on log(-L) = 0 from i w, each at most 0.4 |s| long: the roots, and which of them settled above the real axis."""
     end = 1j * crossover
     settled = np.zeros(end.size, dtype=bool)
@@ -90,7 +93,7 @@ def _towards(opened: OpenLoop, crossover: Array) -> tuple[np.ndarray, Array]:
     return end, settled
 
 
-def _from_others(opened: OpenLoop, deciding: Array) -> tuple[np.ndarray, Array]:
+def _from_others(opened: OpenLoop, deciding: Array) -> tuple[np.ndarray, Mask]:
     """The root of the strongest crossover, the deciding one left out, that leads to an oscillation."""
     members = deciding.size
     share = np.arange(1, _FREQUENCIES + 1)[:, None] / _FREQUENCIES
@@ -120,7 +123,7 @@ def _from_others(opened: OpenLoop, deciding: Array) -> tuple[np.ndarray, Array]:
     return root, has
 
 
-def _from_fan(opened: OpenLoop) -> tuple[np.ndarray, Array]:
+def _from_fan(opened: OpenLoop) -> tuple[np.ndarray, Mask]:
     """The rightmost pair that any seed of the fan, or an open-loop resonance, leads to."""
     members = opened.coefficients.shape[2]
     scale = 1.0 / np.broadcast_to(opened.shortest_delay, members)
@@ -134,7 +137,7 @@ def _from_fan(opened: OpenLoop) -> tuple[np.ndarray, Array]:
     return np.where(has, best, 0.0), has
 
 
-def _polished(opened: OpenLoop, seed: np.ndarray) -> tuple[np.ndarray, Array]:
+def _polished(opened: OpenLoop, seed: np.ndarray) -> tuple[np.ndarray, Mask]:
     """Newton steps on the characteristic function: the roots, and which of them settled above the real axis."""
     root, settled = seed.copy(), np.zeros(seed.size, dtype=bool)
     active, s, few = np.arange(seed.size), seed, opened

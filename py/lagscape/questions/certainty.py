@@ -19,7 +19,7 @@ from lagscape.errors import InvalidInputError
 from lagscape.loops.protocol import Array
 from lagscape.loops.register import LOOPS
 from lagscape.questions.levers import apply_levers, lay_levers
-from lagscape.questions.many import Many, judge_many
+from lagscape.questions.many import Index, Many, Mask, judge_many
 from lagscape.questions.standing import Standing, judge_loop
 
 __all__ = ["DRAWS", "SEED", "Certainty", "Doubt", "Interval", "certainty", "drawn_numbers"]
@@ -97,8 +97,8 @@ def certainty(case: Case, draws: int = DRAWS, seed: int = SEED) -> Certainty:
     standing = judge_loop(apply_levers(case)).standing
     numbers = drawn_numbers(case, draws, seed)
 
-    def build(which: Array) -> Any:
-        drawn = {name: values if np.ndim(values) == 0 else values[which] for name, values in numbers.items()}
+    def build(which: Index) -> Any:
+        drawn = {name: values if isinstance(values, float) else values[which] for name, values in numbers.items()}
         return lay_levers(LOOPS[case.kind](**drawn, **case.choices), case.levers)
 
     found = judge_many(build, draws, growth=True)
@@ -147,7 +147,7 @@ def _normal_draws(count: int, draws: int, seed: int) -> Array:
     return normal
 
 
-def _interval(values: Array, has: Array, possible: int) -> Interval | None:
+def _interval(values: Array, has: Mask, possible: int) -> Interval | None:
     if not has.any():
         return None
     low, median, high = (float(item) for item in np.quantile(values[has], (0.05, 0.5, 0.95)))

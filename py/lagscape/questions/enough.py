@@ -20,7 +20,7 @@ from lagscape.loops.protocol import Array
 from lagscape.quantities import figure
 from lagscape.questions.lever import Lever
 from lagscape.questions.levers import LEVERS, apply_levers, lay_levers, lever_of
-from lagscape.questions.many import judge_many
+from lagscape.questions.many import Index, judge_many
 
 __all__ = ["SAFE_GAIN_MARGIN", "DoseAnswer", "amount_words", "checked_margin", "margins_of_rows", "smallest_dose", "smallest_doses"]
 
@@ -111,7 +111,7 @@ def margins_of_rows(case: Case, rows: Sequence[Mapping[str, Array]]) -> list[Arr
             doses[name][start : start + size] = values
     loop = case.loop()
 
-    def build(which: Array) -> object:
+    def build(which: Index) -> object:
         # A dose that is the same for all stays a number: its rule is then worked out once.
         settings = (LeverSetting(name, float(d[0]) if np.all(d == d[0]) else d[which]) for name, d in doses.items())  # type: ignore[arg-type]
         return lay_levers(loop, settings)

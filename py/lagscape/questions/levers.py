@@ -30,6 +30,7 @@ __all__ = [
     "cautions",
     "check_lever",
     "effects",
+    "figures_of",
     "judge_with_levers",
     "lay_levers",
     "lever_of",
@@ -189,7 +190,7 @@ def effects(case: Case) -> tuple[LeverEffect, ...]:
     if not case.levers:
         return ()
     before = figures_of(judge(case))
-    laid = [(LEVERS[case.kind][setting.name].label, (setting,)) for setting in case.levers]
+    laid: list[tuple[str, tuple[LeverSetting, ...]]] = [(LEVERS[case.kind][setting.name].label, (setting,)) for setting in case.levers]
     if len(case.levers) > 1:
         laid.append(("All together", case.levers))
     return tuple(_effect(case, label, settings, before) for label, settings in laid)

@@ -79,7 +79,7 @@ def smallest_pair(case: Case, gain_margin: float = SAFE_GAIN_MARGIN) -> PairAnsw
     pairs = [
         _Pair(first, second, ends)
         for first, second in combinations(levers.values(), 2)
-        for ends in product(*((end for end in (lever.maximum, lever.minimum) if end) for lever in (first, second)))
+        for ends in product(_ends(first), _ends(second))
     ]
     share = np.linspace(0.0, 1.0, _NET)
     u, v = (axis.ravel() for axis in np.meshgrid(share, share, indexing="ij"))
@@ -96,6 +96,10 @@ def smallest_pair(case: Case, gain_margin: float = SAFE_GAIN_MARGIN) -> PairAnsw
     words = " with ".join(f"{levers[item.name].label} {amount_words(levers[item.name], item.dose)}" for item in settings)
     sentence = f"No single lever gives {margin} within its range. The smallest pair that does: {words}."
     return PairAnswer(wanted, settings, best.reached, sentence)
+
+
+def _ends(lever: Lever) -> list[float]:
+    return [end for end in (lever.maximum, lever.minimum) if end]
 
 
 def _refined(case: Case, pairs: list[_Pair], wanted: float) -> list[_Pair]:

@@ -24,7 +24,7 @@ from lagscape.errors import InvalidInputError
 from lagscape.loops.protocol import Array
 from lagscape.loops.register import LOOPS
 from lagscape.quantities import figure
-from lagscape.questions.many import judge_many
+from lagscape.questions.many import Index, judge_many
 from lagscape.questions.standing import Judgement, Standing, judge_loop
 
 __all__ = ["PARTS", "Part", "PartShare", "Share", "parts_of", "shapley_values", "share_of_excess", "typical_case"]
@@ -202,7 +202,7 @@ def _mixed_gains(case: Case, typical: Case, parts: Mapping[Part, tuple[str, ...]
     count = 2 ** len(parts)
     own = {name: (np.arange(count) >> k) & 1 == 1 for k, names in enumerate(parts.values()) for name in names}
 
-    def build(which: Array) -> Any:
+    def build(which: Index) -> Any:
         numbers = {name: np.where(mask[which], case.value(name), typical.value(name)) for name, mask in own.items()}
         return LOOPS[case.kind](**numbers, **case.choices)
 
