@@ -1,12 +1,16 @@
 """What cannot be read is refused in words, and nothing a stranger's file holds ends in anything but RecordingError."""
 
 import io
+import os
 
 import numpy as np
 import pytest
 
 from lagscape.errors import RecordingError
 from lagscape.recordings import measure_breathing, read_recording
+
+N_DAMAGED = int(os.environ.get("LAGSCAPE_DAMAGED_FILES", "200"))
+"""How many damaged files to try; raise it for a long run."""
 
 
 @pytest.mark.parametrize(
@@ -97,11 +101,11 @@ def _damaged(rng, data):
     return bytes(data)
 
 
-def test_four_hundred_damaged_tables_end_in_a_recording_or_a_recording_error():
+def test_damaged_tables_end_in_a_recording_or_a_recording_error():
     rng = np.random.default_rng(20)
     healthy = _healthy()
     read = refused = 0
-    for _ in range(400):
+    for _ in range(N_DAMAGED):
         try:
             recording = read_recording(_damaged(rng, healthy))
             for signal in recording.signals:
@@ -111,4 +115,4 @@ def test_four_hundred_damaged_tables_end_in_a_recording_or_a_recording_error():
         except RecordingError:
             refused += 1
     # Both ends are reached often, or the test would show nothing.
-    assert read > 50 and refused > 50
+    assert read > N_DAMAGED // 8 and refused > N_DAMAGED // 8

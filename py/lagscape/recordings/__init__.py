@@ -6,24 +6,36 @@ scipy is imported only when something is measured, so that importing this packag
 from lagscape.recordings.breathing import measure_breathing
 from lagscape.recordings.breathing_result import BreathingCycle, BreathingMeasurement, Spread
 from lagscape.recordings.cycles import Thresholds
+from lagscape.recordings.derived import effort_sum, flow_from_nasal_pressure
 from lagscape.recordings.loop_gain import loop_gain_from_duty_ratio
 from lagscape.recordings.overview import Overview, overview
 from lagscape.recordings.reading import read_recording
-from lagscape.recordings.recording import Note, ReadCancelled, Recording, Segment, Signal
+from lagscape.recordings.recording import Annotation, Note, ReadCancelled, Recording, Segment, Signal
+from lagscape.recordings.saturation_lag import SaturationLag, measure_saturation_lag
+from lagscape.recordings.tremor import TremorComparison, TremorMeasurement, compare_tremor, measure_tremor
 
 __all__ = [
+    "Annotation",
     "BreathingCycle",
     "BreathingMeasurement",
     "Note",
     "Overview",
     "ReadCancelled",
     "Recording",
+    "SaturationLag",
     "Segment",
     "Signal",
     "Spread",
     "Thresholds",
+    "TremorComparison",
+    "TremorMeasurement",
+    "compare_tremor",
+    "effort_sum",
+    "flow_from_nasal_pressure",
     "loop_gain_from_duty_ratio",
     "measure_breathing",
+    "measure_saturation_lag",
+    "measure_tremor",
     "overview",
     "read_recording",
 ]

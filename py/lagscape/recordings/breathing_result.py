@@ -159,6 +159,32 @@ class BreathingMeasurement:
     def periodic_s(self) -> float:
         return sum(stretch.duration_s for stretch in self.stretches if stretch.periodic)
 
+    @property
+    def cycle_length_variation(self) -> float | None:
+        """Distance between the quartiles of the cycle length over its median: how unsteady the pattern is."""
+        length = self.cycle_length_s
+        return None if length is None else (length.upper_quartile - length.lower_quartile) / length.median
+
+    @property
+    def peak_position(self) -> Spread | None:
+        """Where in the ventilatory phase ventilation peaks: 0 at its start, 1 at its end; 0.5 is symmetrical."""
+        return Spread.of(
+            (cycle.peak_s - cycle.start_s) / cycle.ventilatory_duration_s for cycle in self.used if cycle.ventilatory_duration_s > 0.0
+        )
+
+    @property
+    def shape(self) -> str:
+        """How ventilation waxes and wanes: crescendo-decrescendo, abrupt or mixed; '' where there are no cycles.
+
+        By how gradual the edges are, 0 for full breaths at once and 1 for the sine of the loop-gain formula.
+        """
+        gradual = Spread.of(cycle.gradual for cycle in self.used if cycle.pause == "apnoea")
+        if gradual is None:
+            return ""
+        if gradual.lower_quartile >= 0.5:
+            return "crescendo-decrescendo"
+        return "abrupt" if gradual.upper_quartile <= 0.5 else "mixed"
+
     def without(self, cycle_numbers: Iterable[int]) -> "BreathingMeasurement":
         """The same measurement with exactly these cycles excluded by hand; an empty set takes them all back in.
 
@@ -199,7 +225,7 @@ class BreathingMeasurement:
             return "none", ("No periodic breathing was found.",)
         reasons = [f"{counted(len(used), 'cycle')} used, {len(self.cycles) - len(used)} excluded."]
         word = "good" if len(used) >= 10 else "fair" if len(used) >= 5 else "poor"
-        unsteady = (length.upper_quartile - length.lower_quartile) / length.median
+        unsteady = self.cycle_length_variation or 0.0
         reasons.append(f"Cycle length varies by {100.0 * unsteady:.0f} % of its median between the quartiles.")
         if unsteady > 0.35:
             word = "fair" if word == "good" and unsteady <= 0.6 else "poor" if unsteady > 0.6 else word

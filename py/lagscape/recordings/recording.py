@@ -5,7 +5,7 @@ several hundred megabytes can be opened without being in memory; `Signal.pieces`
 """
 
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Protocol
 
 import numpy as np
@@ -179,6 +179,12 @@ class Recording:
             return alike[0]
         names = ", ".join(f"'{known}'" for known in self.channel_names) or "none"
         raise RecordingError(f"no channel '{name}'; the file has: {names}")
+
+    def with_signal(self, signal: Signal) -> "Recording":
+        """This recording with one more channel, made from its own."""
+        if signal.name in self.channel_names:
+            raise RecordingError(f"there is a channel '{signal.name}' already")
+        return replace(self, signals=(*self.signals, signal))
 
     def of_kind(self, *kinds: str) -> tuple[Signal, ...]:
         """The channels guessed to be of one of these kinds, in the order of `kinds`."""
