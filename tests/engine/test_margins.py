@@ -4,11 +4,11 @@ import math
 
 import numpy as np
 import pytest
-from engine.oracle_loops import linear_form, oscillator, p2, scalar_loop
 from hypothesis import given
 from hypothesis import strategies as st
 from scipy.optimize import brentq
 
+from engine.oracle_loops import linear_form, oscillator, p2, scalar_loop
 from lagscape.engine.margins import MarginStatus, margins
 from lagscape.loops.plain import PlainLoop
 

@@ -64,7 +64,7 @@ class Cycle:
     output: Array | None = None
     """Shape (n_times,)."""
     residual: float | None = None
-    """Imbalance left in the harmonics kept, relative to their norm."""
+    """Imbalance of the harmonics kept, relative to their norm, before the last Newton step; what is left is of the order of its square."""
     last_harmonic: float | None = None
     """Size of the last harmonic kept relative to the first: what truncation leaves out is of this order."""
     harmonics: Harmonics | None = None

@@ -37,7 +37,7 @@ class FloquetStatus(StrEnum):
 
     CONVERGED = "converged"
     COARSE = "coarse"
-    """The multiplier that must be 1 is off by more than 0.02: too few steps for this cycle."""
+    """The multiplier that must be 1 is off by more than 0.1 before polishing: too few steps for this cycle."""
 
 
 @dataclass(frozen=True)
@@ -86,7 +86,7 @@ def floquet_multipliers(form: DriveForm, rest: Rest, cycle: Cycle, steps: int = 
         if abs(value) > _WEAKEST and abs(value - 1.0) > 3.0 * error:
             values[i] = hill.polish(complex(value))
     largest = max((abs(value) for value in values), default=0.0)
-    status = FloquetStatus.CONVERGED if error < 0.02 else FloquetStatus.COARSE
+    status = FloquetStatus.CONVERGED if error < 0.1 else FloquetStatus.COARSE
     ordered = sorted((complex(value) for value in values), key=lambda value: -abs(value))
     return Floquet(tuple(ordered), largest < 1.0, largest, error, status)
 
