@@ -70,16 +70,18 @@ class _Running:
                 self._add_root(slot, viewable)
 
     def document_json(self) -> str:
-        """The whole document and the slot of each root, as JSON text."""
-        return json.dumps([json.dumps(self.document.to_json(deferred=False)), json.dumps(self.roots)])
-
-    def start(self) -> None:
-        """Joins the document to the page's copy of it."""
-        from bokeh.events import DocumentReady
-
+        """The whole document and the slot of each root, as JSON text; what changes from here on is gathered for the page."""
         from .document_link import DocumentLink
 
+        text = json.dumps([json.dumps(self.document.to_json(deferred=False)), json.dumps(self.roots)])
         self.link = DocumentLink(self.document, self._send_patch)
+        return text
+
+    def start(self) -> None:
+        """The page has its copy of the document: joins the two."""
+        from bokeh.events import DocumentReady
+
+        self.link.open()
         with self.link:
             self.document.callbacks.trigger_event(DocumentReady())
 

@@ -7,7 +7,7 @@ from typing import Any
 
 __all__ = ["BrowserFile", "open_browser_file"]
 
-BUFFER_BYTES = 1 << 20
+BUFFER_BYTES = 4 << 20
 
 
 class BrowserFile(io.RawIOBase):

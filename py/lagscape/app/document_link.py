@@ -36,7 +36,13 @@ class DocumentLink:
         self._events: list[DocumentPatchedEvent] = []
         self._inside = False
         self._scheduled = False
+        self._open = False
         document.on_change(self._gather)
+
+    def open(self) -> None:
+        """The page has drawn the document: what gathered meanwhile goes, and from now on everything does."""
+        self._open = True
+        self.flush()
 
     def apply(self, patch: str) -> None:
         """Lays a patch of the page on the document; changes that follow from it go back in one patch."""
@@ -55,8 +61,10 @@ class DocumentLink:
         self.flush()
 
     def flush(self) -> None:
-        """Sends what has gathered."""
+        """Sends what has gathered; nothing before the page has the document."""
         self._scheduled = False
+        if not self._open:
+            return
         events, self._events = self._events, []
         if not events:
             return

@@ -2,11 +2,16 @@
 
 from __future__ import annotations
 
+import asyncio
 import importlib
 import sys
 from collections.abc import Awaitable, Callable
 
-__all__ = ["ensure_scipy", "use_loader"]
+__all__ = ["ensure_scipy", "prepare_scipy", "use_loader"]
+
+# What scipy.signal and scipy.ndimage import, in an order in which each step adds a part of its own.
+PARTS = ("special", "linalg", "sparse.linalg", "fft", "spatial", "optimize", "interpolate", "ndimage", "stats", "signal")
+PAUSE_S = 0.05
 
 _load: Callable[[], Awaitable[object]] | None = None
 
@@ -36,3 +41,17 @@ async def ensure_scipy() -> None:
             ) from error
         importlib.invalidate_caches()
     importlib.import_module("scipy")
+
+
+async def prepare_scipy() -> None:
+    """Fetches scipy and imports what a recording needs, a part at a time, so that whatever the user does meanwhile is answered between.
+
+    Raises
+    ------
+    ImportError
+        As `ensure_scipy`.
+    """
+    await ensure_scipy()
+    for part in PARTS:
+        await asyncio.sleep(PAUSE_S)
+        importlib.import_module(f"scipy.{part}")
