@@ -1,22 +1,5 @@
 // Carries out what the application asks of the page.
-
-/** Puts text on the clipboard; false if the browser does not let us. */
-export async function copyText(text) {
-  try {
-    await navigator.clipboard.writeText(text);
-    return true;
-  } catch {
-    // Plain http has no clipboard interface: the older way needs a selected text field.
-    const field = document.createElement("textarea");
-    field.value = text;
-    field.className = "unseen";
-    document.body.append(field);
-    field.select();
-    const copied = document.execCommand("copy");
-    field.remove();
-    return copied;
-  }
-}
+import { copyText } from "./clipboard.js";
 
 function download({ name, type, data }) {
   const address = URL.createObjectURL(new Blob([data], { type }));

@@ -98,6 +98,21 @@ const restart = () => {
   boot(page.keptCase ?? linkInAddress(), true);
 };
 
+/** Calls back once, when neither pointer nor key has moved for a while. */
+function whenIdle(callback) {
+  const events = ["pointermove", "pointerdown", "keydown", "wheel"];
+  let timer = 0;
+  const wait = () => {
+    clearTimeout(timer);
+    timer = setTimeout(() => {
+      for (const name of events) window.removeEventListener(name, wait);
+      callback();
+    }, IDLE_AFTER_MS);
+  };
+  for (const name of events) window.addEventListener(name, wait, { passive: true });
+  wait();
+}
+
 state.onRestart(restart);
 startInput(page);
 window.addEventListener("hashchange", () => page.link.command("set_link", { link: linkInAddress() }));
@@ -114,7 +129,7 @@ boot(linkInAddress());
 state.whenReady(() => {
   const later = window.requestIdleCallback ?? ((work) => setTimeout(work, 1000));
   later(() => offline.register());
-  setTimeout(() => page.link?.command("idle"), IDLE_AFTER_MS);
+  whenIdle(() => page.link.command("idle"));
 });
 
 // For tests and benchmarks: what the page knows, read only by them.

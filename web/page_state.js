@@ -1,4 +1,5 @@
 // What the frame shows: starting, ready, working, refused, failed, and the quiet lines. No knowledge of Python or Bokeh.
+import { copyText } from "./clipboard.js";
 
 const STAGES = [
   ["runtime", "Python"],
@@ -25,7 +26,7 @@ export class PageState {
     this.stages = new Map();
     this.readyCallbacks = [];
     this.supportText = "";
-    this.byId("copy-support").addEventListener("click", () => this.copySupport());
+    this.byId("copy-support").addEventListener("click", (event) => this.copySupport(event.currentTarget));
   }
 
   byId(id) {
@@ -45,6 +46,9 @@ export class PageState {
     const list = this.byId("boot-stages");
     list.replaceChildren();
     this.stages.clear();
+    this.stagesDone = 0;
+    this.bytes = 0;
+    this.total = 0;
     for (const [name, label] of STAGES) {
       const item = this.root.createElement("li");
       item.textContent = label;
@@ -73,9 +77,9 @@ export class PageState {
   // Half of the bar is bytes, half is stages: neither alone says how far the start is.
   showProgress() {
     const part = this.total ? this.bytes / this.total : 0;
-    this.byId("boot-bar").value = 0.5 * part + (0.5 * (this.stagesDone ?? 0)) / STAGES.length;
+    this.byId("boot-bar").value = 0.5 * part + (0.5 * this.stagesDone) / STAGES.length;
     const of = this.total ? `, ${(this.bytes / 1e6).toFixed(1)} of ${(this.total / 1e6).toFixed(1)} MB` : "";
-    this.byId("boot-title").textContent = `Starting: step ${Math.min((this.stagesDone ?? 0) + 1, STAGES.length)} of ${STAGES.length}${of}`;
+    this.byId("boot-title").textContent = `Starting: step ${Math.min(this.stagesDone + 1, STAGES.length)} of ${STAGES.length}${of}`;
   }
 
   ready() {
@@ -92,18 +96,17 @@ export class PageState {
   busy(on) {
     clearTimeout(this.thinkingTimer);
     clearTimeout(this.stuckTimer);
-    const mark = this.byId("thinking");
-    if (!on) {
-      mark.hidden = true;
-      if (this.root.body.dataset.state === "stuck") this.set("ready");
-      return;
+    if (on) {
+      this.thinkingTimer = setTimeout(() => this.reveal("thinking", true), THINKING_AFTER_MS);
+      this.stuckTimer = setTimeout(() => this.reveal("stuck", true), STUCK_AFTER_MS);
+    } else {
+      this.reveal("thinking", false);
+      this.reveal("stuck", false);
     }
-    this.thinkingTimer = setTimeout(() => {
-      mark.hidden = false;
-    }, THINKING_AFTER_MS);
-    this.stuckTimer = setTimeout(() => {
-      if (this.root.body.dataset.state === "ready") this.say("standing", "This takes long. You can wait, or load the page again from a saved case.", "note");
-    }, STUCK_AFTER_MS);
+  }
+
+  reveal(id, on) {
+    this.byId(id).hidden = !on;
   }
 
   working(text) {
@@ -142,7 +145,12 @@ export class PageState {
   /** Something unexpected that the application survived. */
   trouble(sentence, support) {
     this.supportText = support;
-    this.say("bar", `Something went wrong and the last step was not carried out: ${sentence}`, "refused");
+    this.say("bar", `the last step failed unexpectedly: ${sentence} `, "refused");
+    const button = this.root.createElement("button");
+    button.type = "button";
+    button.textContent = "Copy the lines for support";
+    button.addEventListener("click", () => this.copySupport(button));
+    this.byId("said-bar").append(button);
   }
 
   failed(sentence, support) {
@@ -157,13 +165,12 @@ export class PageState {
   }
 
   onRestart(callback) {
-    this.byId("restart").addEventListener("click", callback);
+    for (const id of ["restart", "stop"]) this.byId(id).addEventListener("click", callback);
   }
 
-  async copySupport() {
-    const { copyText } = await import("./calls.js");
+  async copySupport(button) {
     const copied = await copyText(this.supportText);
-    this.byId("copy-support").textContent = copied ? "Copied" : "Select and copy the text below";
+    button.textContent = copied ? "Copied" : "The browser does not allow copying here";
   }
 
   /** Opens or closes a view over the middle; focus goes in and comes back. */
