@@ -200,6 +200,22 @@ def test_measure_says_which_channels_there_are(periodic_effort, capsys):
     assert "'effort'" in capsys.readouterr().err
 
 
+def test_measure_finds_the_peak_of_a_known_tremor(tmp_path, capsys):
+    times = np.arange(0.0, 60.0, 0.01)
+    noise = np.random.default_rng(1).standard_normal((2, times.size))
+    axes = 2.0 * np.sin(2.0 * np.pi * 6.2 * times) * np.array([[1.0], [0.5]]) + 0.2 * noise
+    path = tmp_path / "limb.csv"
+    path.write_text("x,y\n" + "\n".join(f"{a:.5f},{b:.5f}" for a, b in axes.T) + "\n")
+    assert main(["measure", str(path), "--signal", "x", "--signal", "y", "--kind", "tremor", "--sampling-frequency", "100"]) == 0
+    result = json.loads(capsys.readouterr().out)
+    # Oracle: the recording's own construction. Tolerance: half a line of the 8 s analysis, 1/16 Hz.
+    assert abs(result["peak_frequency_hz"] - 6.2) <= 1.0 / 16.0
+    assert result["signals"] == ["x", "y"] and result["kind"] == "tremor" and result["window_s"] == [0.0, 60.0]
+    assert len(result["power"]) == len(result["frequency_hz"]) > 100
+    assert main(["measure", str(path), "--signal", "x", "--signal", "y", "--sampling-frequency", "100"]) == 2
+    assert capsys.readouterr().err == "lagscape: Breathing is measured on one signal; got 2.\n"
+
+
 def test_what_measure_prints_does_not_say_what_the_file_is_called(tmp_path, periodic_effort, capsys):
     named = periodic_effort.rename(tmp_path / "Smith_John_1950.csv")
     assert main(["measure", str(named), "--signal", "effort", "--sampling-frequency", "10"]) == 0

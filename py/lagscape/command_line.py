@@ -71,7 +71,7 @@ def _parser() -> argparse.ArgumentParser:
 
     measure = commands.add_parser("measure", help="measure a recording", description="Measure one signal; JSON on standard output.")
     measure.add_argument("file", metavar="FILE", help="a recording: CSV or EDF")
-    measure.add_argument("--signal", required=True, metavar="NAME", help="the channel or column")
+    measure.add_argument("--signal", required=True, action="append", metavar="NAME", help="the channel or column; for tremor, once an axis")
     measure.add_argument("--kind", choices=("breathing", "tremor"), default="breathing", help="what is looked for (breathing)")
     measure.add_argument("--window", nargs=2, type=_seconds, metavar=("START", "END"), help="seconds from the start (everything)")
     measure.add_argument("--sampling-frequency", type=_seconds, metavar="HZ", help="for a table without a time column")
@@ -99,6 +99,8 @@ def _analyse(options: argparse.Namespace) -> int:
 def _measure(options: argparse.Namespace) -> int:
     from lagscape.recordings.reading import read_recording
 
+    if options.kind == "breathing" and len(options.signal) > 1:
+        raise InvalidInputError(f"Breathing is measured on one signal; got {len(options.signal)}.")
     recording = read_recording(options.file, sampling_frequency_hz=options.sampling_frequency)
     window = tuple(options.window) if options.window else None
     notes = tuple(str(note) for note in recording.notes)
@@ -111,7 +113,7 @@ def _measure(options: argparse.Namespace) -> int:
         from lagscape.handover.measurement import breathing_document
         from lagscape.recordings.breathing import measure_breathing
 
-        _print_json(breathing_document(measure_breathing(recording, options.signal, window=window), notes))
+        _print_json(breathing_document(measure_breathing(recording, options.signal[0], window=window), notes))
     return 0
 
 

@@ -9,8 +9,9 @@ from typing import Any
 
 from lagscape.handover.plain_values import plain
 from lagscape.recordings.breathing_result import BreathingCycle, BreathingMeasurement, Spread
+from lagscape.recordings.tremor import TremorMeasurement
 
-__all__ = ["breathing_document", "cycle_record"]
+__all__ = ["breathing_document", "cycle_record", "tremor_document"]
 
 _MEDIANS = ("cycle_length_s", "ventilatory_duration_s", "apnoeic_duration_s", "duty_ratio", "loop_gain")
 
@@ -80,3 +81,30 @@ def cycle_record(cycle: BreathingCycle) -> dict[str, Any]:
         "reason": cycle.reason,
     }
     return plain(record)
+
+
+def tremor_document(measurement: TremorMeasurement, reading_notes: tuple[str, ...] = ()) -> dict[str, Any]:
+    """The tremor's peak and its spectrum as dicts, lists, strings and numbers.
+
+    `rms` is in the signal's `unit`, `power` in its square per Hz. What does not exist is None, and `reasons` says why.
+    """
+    figures = {name: plain(getattr(measurement, name)) for name in ("peak_frequency_hz", "peak_error_hz", "width_hz", "rms", "displacement_mm")}
+    reasons: dict[str, str] = {}
+    for name, value in figures.items():
+        if value is None and measurement.peak_frequency_hz is None:
+            reasons[name] = "No peak stands out of the spectrum."
+        elif value is None:
+            reasons[name] = "The unit is not one of acceleration." if name == "displacement_mm" else "The recording does not show it."
+    return {
+        "kind": "tremor",
+        "signals": list(measurement.signals),
+        "unit": measurement.unit,
+        "window_s": [float(edge) for edge in measurement.window],
+        **figures,
+        "reasons": reasons,
+        "stands_out": plain(measurement.stands_out),
+        "segments": measurement.n_segments,
+        "frequency_hz": plain(measurement.frequency_hz),
+        "power": plain(measurement.power),
+        "notes": [*reading_notes, *measurement.notes],
+    }
