@@ -12,7 +12,6 @@ import heapq
 import itertools
 import math
 from dataclasses import dataclass
-from functools import lru_cache
 from typing import Any
 
 import numpy as np
@@ -134,6 +133,7 @@ class _Path:
         self.inner = np.clip(points(self.n), _NUDGE, 1.0 - _NUDGE)
         dense = np.cos(np.pi * np.arange(4 * self.n + 1)[::-1] / (4 * self.n))
         self.dense = 0.5 * (1.0 + dense)
+        self.places = self.dense.tolist()
         self.to_dense = (np.polynomial.chebyshev.chebvander(dense, self.n) @ to_chebyshev(self.n)).T
 
     def advance(self, end: float) -> bool:
@@ -200,35 +200,33 @@ class _Path:
         """Roots well inside the pieces of the polynomials through these values at the points, (m, n + 1)."""
         dense = values @ self.to_dense
         lowest, highest = dense.min(axis=1).tolist(), dense.max(axis=1).tolist()
-        brackets: list[tuple[int, float, float]] = []
+        found: list[float] = []
         for piece, (low, high) in enumerate(zip(lowest, highest, strict=True)):
             near = _GRAZING * (high - low)
             if low <= near and high >= -near:
-                brackets += self._brackets(piece, dense[piece], values[piece])
-        if not brackets:
-            return []
-        pieces = np.array([item[0] for item in brackets])
-        low_ends, high_ends = np.array([item[1] for item in brackets]), np.array([item[2] for item in brackets])
-        where = _refine(values[pieces] @ to_chebyshev(self.n).T, low_ends, high_ends)
-        kept = (where > _SAME_PLACE) & (where < 1.0 - _SAME_PLACE)
-        return (edges[pieces] + where * (edges[pieces + 1] - edges[pieces]))[kept].tolist()
+                series = (to_chebyshev(self.n) @ values[piece]).tolist()
+                for left, right in self._brackets(dense[piece].tolist(), series):
+                    place = _refined(series, left, right)
+                    if _SAME_PLACE < place < 1.0 - _SAME_PLACE:
+                        found.append(float(edges[piece] + place * (edges[piece + 1] - edges[piece])))
+        return found
 
-    def _brackets(self, piece: int, dense: Array, values: Array) -> list[tuple[int, float, float]]:
+    def _brackets(self, dense: list[float], series: list[float]) -> list[tuple[float, float]]:
         """Intervals of [0, 1] with one sign change each: between dense samples, or beside a dip that no sample shows (grazing)."""
-        size = np.abs(dense).max()
-        kept = np.flatnonzero(np.abs(dense) > 1e-9 * size)
-        places, signs = self.dense[kept], np.sign(dense[kept])
-        found = [(piece, places[i], places[i + 1]) for i in np.flatnonzero(signs[1:] != signs[:-1]).tolist()]
-        inner, before, after = np.abs(dense[1:-1]), np.abs(dense[:-2]), np.abs(dense[2:])
-        dips = (inner < before) & (inner < after) & (inner < _GRAZING * 2.0 * size) & (dense[:-2] * dense[2:] > 0.0)
-        for j in (np.flatnonzero(dips) + 1).tolist():
-            if dense[j] * dense[j - 1] <= 0.0:
-                continue
-            fine = np.linspace(self.dense[j - 1], self.dense[j + 1], 33)
-            height = np.polynomial.chebyshev.chebval(2.0 * fine - 1.0, to_chebyshev(self.n) @ values) * np.sign(dense[j])
-            lowest = int(np.argmin(height))
-            if height[lowest] < 0.0:
-                found += [(piece, fine[0], fine[lowest]), (piece, fine[lowest], fine[-1])]
+        size = max(map(abs, dense))
+        places = self.places
+        kept = [j for j, value in enumerate(dense) if abs(value) > 1e-9 * size]
+        found = [(places[i], places[j]) for i, j in itertools.pairwise(kept) if (dense[i] > 0.0) != (dense[j] > 0.0)]
+        for j in range(1, len(dense) - 1):
+            before, value, after = dense[j - 1 : j + 2]
+            one_sign = before * value > 0.0 and value * after > 0.0
+            if one_sign and abs(value) < 2.0 * _GRAZING * size and abs(value) < abs(before) and abs(value) < abs(after):
+                left, right = places[j - 1], places[j + 1]
+                fine = [left + (right - left) * i / 32.0 for i in range(1, 32)]
+                heights = [_value_and_slope(series, place)[0] * (1.0 if value > 0.0 else -1.0) for place in fine]
+                deepest = min(range(len(fine)), key=heights.__getitem__)
+                if heights[deepest] < 0.0:
+                    found += [(left, fine[deepest]), (fine[deepest], right)]
         return found
 
     def _plant(self, edges: Array, times: Array, arguments: Array) -> Array:
@@ -279,36 +277,33 @@ def _pieces_first(signal: Array | float) -> Array | float:
     return np.moveaxis(signal, 0, 1) if isinstance(signal, np.ndarray) else signal
 
 
-@lru_cache(maxsize=16)
-def _slope_matrix(count: int) -> Array:
-    """Chebyshev coefficients, as a row, to those of the derivative by a place of [0, 1]."""
-    matrix = np.zeros((count, count))
-    matrix[:, :-1] = 2.0 * np.polynomial.chebyshev.chebder(np.eye(count), axis=1)
-    return matrix
+def _value_and_slope(series: list[float], place: float) -> tuple[float, float]:
+    """A Chebyshev series and its derivative at a place of [0, 1], by Clenshaw's recurrence in plain floats."""
+    x = 2.0 * place - 1.0
+    b1 = b2 = d1 = d2 = 0.0
+    for coefficient in series[:0:-1]:
+        d1, d2 = 2.0 * (b1 + x * d1) - d2, d1
+        b1, b2 = coefficient + 2.0 * x * b1 - b2, b1
+    return series[0] + x * b1 - b2, 2.0 * (b1 + x * d1 - d2)
 
 
-def _refine(coefficients: Array, low: Array, high: Array) -> Array:
-    """Roots of Chebyshev series on [0, 1], each bracketed: Newton steps, halving where a step leaves the bracket."""
-    orders = np.arange(float(coefficients.shape[1]))
-    both = np.stack([coefficients, coefficients])
-    both[1] = coefficients @ _slope_matrix(coefficients.shape[1])
-    rising = _series(both, high, orders)[0] > 0.0
+def _refined(series: list[float], low: float, high: float) -> float:
+    """The root of a Chebyshev series between two places of [0, 1]: Newton steps, halving where a step leaves the bracket."""
+    rising = _value_and_slope(series, high)[0] > 0.0
     place = 0.5 * (low + high)
     for _ in range(60):
-        value, slope = _series(both, place, orders)
-        above = (value > 0.0) == rising
-        low, high = np.where(above, low, place), np.where(above, place, high)
-        following = place - value / np.where(slope == 0.0, 1.0, slope)
-        following = np.where((following > low) & (following < high), following, 0.5 * (low + high))
-        moved = np.abs(following - place).max()
-        place = following
+        value, slope = _value_and_slope(series, place)
+        if (value > 0.0) == rising:
+            high = place
+        else:
+            low = place
+        following = place - value / slope if slope != 0.0 else low
+        if not low < following < high:
+            following = 0.5 * (low + high)
+        moved, place = abs(following - place), following
         if moved < 1e-11:
             break
     return place
-
-
-def _series(coefficients: Array, place: Array, orders: Array) -> Array:
-    return (coefficients * np.cos(np.arccos(2.0 * place - 1.0)[:, None] * orders)).sum(axis=-1)
 
 
 def exact_path(run: Run, times: Array, rate: float, start: float = 0.0, settings: ExactSettings | None = None) -> Trace:
@@ -343,8 +338,7 @@ def _trace(path: _Path, times: Array, start: float, status: str) -> Trace:
         table = np.concatenate(path.tables)
         signals.append(edges, np.moveaxis(table, 1, 2))
         silences = _silences(run, edges, table, start)
-    number = np.broadcast_to(np.arange(len(at_rest))[:, None], (len(at_rest), len(times)))
-    values = signals.at(np.broadcast_to(times, number.shape), number)
+    values = signals.all_at(times).T
     sensed, control = values[form.n_plant : form.n_plant + form.n_sensed], values[form.n_plant + form.n_sensed :]
     states = np.concatenate([values[: form.n_plant], control]).T
     output = run.controlled(sensed, control, times)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from functools import lru_cache
+from typing import Any
 
 import numpy as np
 
@@ -55,10 +56,19 @@ class PiecewiseHistory:
 
     def at(self, times: Array, signal: Array, inner: Array | None = None) -> Array:
         """Signal numbers `signal` at `times`, arrays of one shape; `inner`, slightly moved times, decide which piece is meant."""
-        piece = np.searchsorted(self._edges[: self._count + 1], times if inner is None else inner, side="right") - 1
+        piece, basis = self._basis(times, times if inner is None else inner)
+        return np.einsum("...k,...k->...", basis, self._coefficients[piece, :, signal])
+
+    def all_at(self, times: Array) -> Array:
+        """Every signal at `times`, shape (n_times, n_signals)."""
+        piece, basis = self._basis(times, times)
+        return (basis[:, None, :] @ self._coefficients[piece])[:, 0]
+
+    def _basis(self, times: Array, inner: Array) -> tuple[Any, Array]:
+        """The piece of each time, and the Chebyshev polynomials there."""
+        piece = self._edges[: self._count + 1].searchsorted(inner, side="right") - 1
         piece = np.minimum(np.maximum(piece, 0), self._count - 1)
         left = self._edges[piece]
         place = 2.0 * (times - left) / (self._edges[piece + 1] - left) - 1.0
         angle = np.arccos(np.minimum(np.maximum(place, -1.0), 1.0))
-        basis = np.cos(angle[..., None] * self._orders)
-        return np.einsum("...k,...k->...", basis, self._coefficients[piece, :, signal])
+        return piece, np.cos(angle[..., None] * self._orders)
