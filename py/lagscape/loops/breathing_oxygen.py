@@ -46,7 +46,8 @@ __all__ = [
 ]
 
 _HALVINGS = 80
-_DOUBLINGS = 12
+_HIGHEST_PACO2 = 200.0
+"""mmHg: nobody lives there; a drive that is met only beyond it counts as none."""
 
 
 @dataclass(frozen=True)
@@ -236,16 +237,14 @@ def _resting_pco2(loop: Any, load: Any) -> Array:
 
     low = np.zeros(batch_shape(loop)) + inspired
     high = np.maximum(loop.resting_paco2_mmhg, low + load / loop.line_ventilation)
-    for _ in range(_DOUBLINGS):
-        reached = enough(high)
-        if np.all(reached):
-            break
-        high = np.where(reached, high, inspired + 2.0 * (high - inspired))
-    else:
-        raise InvalidInputError(
-            "With these levers the drive to breathe never meets the CO2 production, so the loop has no rest. Give less oxygen, or keep "
-            "more of the chemoreflex gain."
-        )
+    reached = enough(high)
+    if not np.all(reached):
+        high = np.where(reached, high, np.maximum(high, _HIGHEST_PACO2))
+        if not np.all(enough(high)):
+            raise InvalidInputError(
+                f"With these levers the drive to breathe does not meet the CO2 production below a PaCO2 of {_HIGHEST_PACO2:.0f} mmHg, "
+                "so the loop has no rest. Give less oxygen, or keep more of the chemoreflex gain."
+            )
     for _ in range(_HALVINGS):
         middle = 0.5 * (low + high)
         above = enough(middle)
