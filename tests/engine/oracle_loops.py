@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from itertools import pairwise
 from typing import Any, ClassVar
 
 import numpy as np
@@ -99,7 +100,7 @@ def p2_characteristic(loop: BreathingLoop, s: complex) -> complex:
 def roots_in_box(function: Any, low: complex, high: complex, points: int = 4000) -> int:
     """How many roots lie in a rectangle, by the argument principle; the function must be analytic inside and not vanish on its edge."""
     corners = [low, complex(high.real, low.imag), high, complex(low.real, high.imag), low]
-    path = np.concatenate([a + (b - a) * np.linspace(0.0, 1.0, points, endpoint=False) for a, b in zip(corners[:-1], corners[1:], strict=True)])
+    path = np.concatenate([a + (b - a) * np.linspace(0.0, 1.0, points, endpoint=False) for a, b in pairwise(corners)])
     values = function(np.append(path, path[0]))
     turns = np.sum(np.angle(values[1:] / values[:-1])) / (2.0 * np.pi)
     assert abs(turns - round(turns)) < 1e-6

@@ -4,8 +4,8 @@ import math
 
 import numpy as np
 import pytest
-from engine.oracle_loops import p2
 
+from engine.oracle_loops import p2
 from lagscape.engine.boundary import PointStatus, boundary_curve, delay_at_sensitivity, sensitivity_at_delay
 from lagscape.engine.margins import margins
 from lagscape.engine.roots import rightmost_roots
@@ -15,9 +15,11 @@ from lagscape.loops.plain import PlainLoop
 from lagscape.loops.reflex import ReflexLoop
 
 REFLEX = ReflexLoop(reflex_gain_per_rad=3.0)
+MOVED = p2(0.5, 0.3).freeze_line().with_numbers(co2_production_l_min=0.25)
+"""Its rest moves with the sensitivity: the controller's line stays while the metabolism has changed."""
 
 
-@pytest.mark.parametrize("loop", [p2(), BreathingLoop(drive_shape="sigmoid"), p2().freeze_line().with_numbers(lung_volume_l=2.0), REFLEX, PlainLoop(half_level=0.5)])
+@pytest.mark.parametrize("loop", [p2(), BreathingLoop(drive_shape="sigmoid"), MOVED, REFLEX, PlainLoop(half_level=0.5)])
 def test_every_point_of_the_curve_is_marginal_and_deciding(loop):
     # Oracle: the margins of the loop at that point; the law "the boundary has loop gain 1 and spectral abscissa 0".
     boundary = boundary_curve(loop)
@@ -57,7 +59,7 @@ def test_curve_is_smooth_and_reaches_the_frame():
     assert touches
 
 
-@pytest.mark.parametrize("loop", [p2(), p2(0.5, 0.3), p2(0.5, 0.3).freeze_line().with_numbers(lung_volume_l=2.0), REFLEX, PlainLoop(half_level=0.5)])
+@pytest.mark.parametrize("loop", [p2(), p2(0.5, 0.3), MOVED, REFLEX, PlainLoop(half_level=0.5)])
 def test_nearest_points_lie_on_the_boundary(loop):
     # Oracle: the loop moved there has loop gain 1, and a little to either side it is stable on one and unstable on the other.
     across = sensitivity_at_delay(loop)

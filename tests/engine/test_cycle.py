@@ -92,7 +92,10 @@ def test_convergence_in_the_number_of_harmonics():
         assert errors[1] < errors[0] / ratio
 
 
-@pytest.mark.parametrize("loop", [p2(), ReflexLoop(reflex_gain_per_rad=8.0), PlainLoop(half_level=0.5, exponent=5.0), p2().with_numbers(drive_shape="sigmoid")])
+@pytest.mark.parametrize(
+    "loop",
+    [p2(), ReflexLoop(reflex_gain_per_rad=8.0), PlainLoop(half_level=0.5, exponent=5.0), p2().with_numbers(drive_shape="sigmoid")],
+)
 def test_quick_and_general_balance_agree(loop):
     # Oracle: the general batched balance, written separately. Tolerance: both stop when a Newton step is under 1e-7.
     form, rest = loop.form(), loop.rest()

@@ -49,7 +49,7 @@ def test_largest_multiplier_is_the_decay_seen_in_a_run():
     cycle = limit_cycle(form, rest, order=32)
     assert cycle.status is CycleStatus.CONVERGED
     found = floquet_multipliers(form, rest, cycle)
-    times, pressure, _ = run_breathing(loop, 3000.0, 0.25, push=8.0)
+    _, pressure, _ = run_breathing(loop, 3000.0, 0.25, push=8.0)
     inner = (pressure[1:-1] > pressure[:-2]) & (pressure[1:-1] >= pressure[2:])
     tops = pressure[1:-1][inner]
     final = tops[-1]

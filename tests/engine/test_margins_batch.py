@@ -2,8 +2,8 @@
 
 import numpy as np
 import pytest
-from engine.oracle_loops import p2
 
+from engine.oracle_loops import p2
 from lagscape.engine.margins import margins
 from lagscape.engine.margins_batch import margins_batch
 from lagscape.engine.open_loop import open_loop

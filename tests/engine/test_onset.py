@@ -56,7 +56,7 @@ def test_soft_cycle_grows_as_the_square_root():
 
 def reflex_run(loop, push, duration):
     """Peak angle in the last fifth of a run of the reflex loop's own equations, Runge-Kutta, from an initial angle. Shares no code."""
-    delay, h = loop.delay, loop.delay / 40.0
+    h = loop.delay / 40.0
     inertia, bias = loop.total_inertia, math.atanh(loop.held_mass_kg * 9.80665 * loop.load_distance_m / loop.largest_torque_n_m)
     rate, start = 1.0 / loop.activation_time_s, math.tanh(bias)
     past = [(push, 0.0)] * 81

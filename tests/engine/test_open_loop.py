@@ -4,8 +4,8 @@ import math
 
 import numpy as np
 import pytest
-from engine.oracle_loops import p2, p2_characteristic, scalar_loop
 
+from engine.oracle_loops import p2, p2_characteristic, scalar_loop
 from lagscape.engine.open_loop import open_loop
 from lagscape.errors import InvalidInputError
 from lagscape.loops.breathing import BreathingLoop

@@ -4,11 +4,11 @@ import math
 
 import numpy as np
 import pytest
-from engine.oracle_loops import linear_form, oscillator, p2, p2_characteristic, roots_in_box, scalar_loop
 from hypothesis import given
 from hypothesis import strategies as st
 from scipy.special import lambertw
 
+from engine.oracle_loops import linear_form, oscillator, p2, p2_characteristic, roots_in_box, scalar_loop
 from lagscape.engine.margins import margins
 from lagscape.engine.roots import RootStatus, generator_eigenvalues, rightmost_roots
 from lagscape.loops.breathing import BreathingLoop

@@ -4,8 +4,8 @@ import math
 
 import numpy as np
 import pytest
-from engine.oracle_loops import p2
 
+from engine.oracle_loops import p2
 from lagscape.engine.margins import margins
 from lagscape.engine.roots import rightmost_roots
 from lagscape.engine.sensitivity import sensitivities
@@ -23,7 +23,10 @@ def whole(loop, name, value):
     return np.array([known.loop_gain, known.phase_crossover_frequency, roots.oscillatory.real, roots.cycle_length_s])
 
 
-@pytest.mark.parametrize("loop", [p2(1.5, 1.0), BreathingLoop(peripheral_gain_l_min_mmhg=3.0), ReflexLoop(reflex_gain_per_rad=8.0), PlainLoop(half_level=0.5)])
+@pytest.mark.parametrize(
+    "loop",
+    [p2(1.5, 1.0), BreathingLoop(peripheral_gain_l_min_mmhg=3.0), ReflexLoop(reflex_gain_per_rad=8.0), PlainLoop(half_level=0.5)],
+)
 def test_derivatives_are_finite_differences_of_the_whole(loop):
     # Oracle: central differences of margins and roots, step 1e-5: they err by about 1e-9 of the figure per relative change.
     names = [item.name for item in loop.specifications if isinstance(getattr(loop, item.name), float)]

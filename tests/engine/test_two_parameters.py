@@ -4,8 +4,8 @@ import math
 
 import numpy as np
 import pytest
-from engine.oracle_loops import p2
 
+from engine.oracle_loops import p2
 from lagscape.engine.boundary import boundary_curve
 from lagscape.engine.margins import margins
 from lagscape.engine.two_parameters import boundary_in_two

@@ -318,10 +318,10 @@ def _branches(loop: Loop, values: Array, delays: tuple[float, float]) -> list[tu
                 seen += 1
     branches = []
     for entries in kept.values():
-        member = np.array([entry[0] for entry in entries])
-        for piece in np.split(np.arange(member.size), np.flatnonzero(np.diff(member) > 1) + 1):
+        members = np.array([entry[0] for entry in entries])
+        for piece in np.split(np.arange(members.size), np.flatnonzero(np.diff(members) > 1) + 1):
             rows = [entries[i] for i in piece.tolist()]
-            branches.append((values[member[piece]], np.array([row[1] for row in rows]), np.array([row[2] for row in rows])))
+            branches.append((values[members[piece]], np.array([row[1] for row in rows]), np.array([row[2] for row in rows])))
     return branches
 
 
@@ -334,7 +334,7 @@ def _search_sensitivity(loop: Loop, known: Margins, factor: float) -> BoundaryPo
     if not flips.size:
         return BoundaryPoint(PointStatus.NEVER_HUNTS if known.stable else PointStatus.NEVER_SETTLES)
     near, far = float(ladder[flips[0] - 1]), float(ladder[flips[0]])
-    value: dict[float, Any] = {}
+    value: dict[str, Margins] = {}
 
     def excess(log_sensitivity: float) -> float:
         other = loop.with_sensitivity(math.exp(log_sensitivity))

@@ -133,7 +133,7 @@ def _sample(opened: OpenLoop, start: float, end: float, longest: float) -> tuple
     return frequency, response, complete
 
 
-def _near_turns(size: Array) -> Array:
+def _near_turns(size: Array) -> np.ndarray:
     """Where |L| turns just before it reaches 1: between these samples it may pass 1 and come back."""
     middle, left, right = size[1:-1], size[:-2], size[2:]
     peak = (middle >= left) & (middle > right) & (middle < 1.0) & (middle > 0.8)

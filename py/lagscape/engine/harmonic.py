@@ -52,7 +52,7 @@ class Harmonics:
 
 
 @lru_cache(maxsize=16)
-def _index(order: int) -> tuple[Array, Array]:
+def _index(order: int) -> tuple[np.ndarray, np.ndarray]:
     """Where harmonics j - k and j + k stand among -2H .. 2H."""
     j, k = np.arange(order + 1)[:, None], np.arange(order + 1)[None, :]
     return j - k + 2 * order, j + k + 2 * order
@@ -151,7 +151,7 @@ class Balance:
     def size(self) -> int:
         return self.plant.shape[0]
 
-    def with_gain(self, gain: Array) -> Balance:
+    def with_gain(self, gain: Any) -> Balance:
         return replace(self, gain=np.broadcast_to(np.asarray(gain, dtype=float), (self.size,)))
 
     def curves(self, harmonics: Harmonics, samples: int, member: int = 0) -> tuple[Array, Array, Array]:

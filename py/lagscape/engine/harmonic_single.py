@@ -19,7 +19,7 @@ __all__ = ["SingleBalance", "single_balance"]
 
 
 @lru_cache(maxsize=8)
-def _tables(order: int) -> tuple[Array, Array, Array, np.ndarray]:
+def _tables(order: int) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
     j, k = np.arange(order + 1)[:, None], np.arange(order + 1)[None, :]
     samples = samples_for(order)
     return (j - k) % samples, (j + k) % samples, np.arange(order + 1), np.arange(2 * (order + 1))

@@ -35,13 +35,13 @@ class LinearMap:
     names: tuple[str, str]
     first: Array
     second: Array
-    stable: Array
+    stable: np.ndarray
     loop_gain: Array
     """0 where the loop has no phase crossover."""
     growth_rate_per_s: Array
     """Of the dominant oscillation; 0 where `oscillates` is False."""
     cycle_length_s: Array
-    oscillates: Array
+    oscillates: np.ndarray
     """False where no root oscillates."""
 
 
@@ -52,8 +52,8 @@ class CycleMap:
     names: tuple[str, str]
     first: Array
     second: Array
-    stable: Array
-    found: Array
+    stable: np.ndarray
+    found: np.ndarray
     """A cycle was found. Where the loop is stable none is sought; elsewhere False is a failure of the search."""
     output_amplitude: Array
     """Peak to trough of the controlled signal, in its unit."""
@@ -107,7 +107,7 @@ def cycle_map(loop: Loop, first: str, firsts: Any, second: str, seconds: Any, or
     if cells.size:
         omega = known.phase_crossover_frequency.reshape(-1)[cells]
 
-        def rebuilt(which: Array) -> tuple[Any, Balance]:
+        def rebuilt(which: np.ndarray) -> tuple[Any, Balance]:
             part = _cells(loop, first, firsts, second, seconds, cells[which])
             form = part.form()
             return form, prepare(form, part.rest())
@@ -161,7 +161,7 @@ def _grid(loop: Any, first: str, firsts: Any, second: str, seconds: Any) -> tupl
     return firsts, seconds, with_named(with_named(loop, first, across), second, upright)
 
 
-def _cells(loop: Any, first: str, firsts: Array, second: str, seconds: Array, cells: Array) -> Any:
+def _cells(loop: Any, first: str, firsts: Array, second: str, seconds: Array, cells: np.ndarray) -> Any:
     across, upright = firsts[cells % firsts.size], seconds[cells // firsts.size]
     return with_named(with_named(loop, first, across), second, upright)
 
@@ -182,8 +182,8 @@ def _describing_start(balance: Balance, omega: Array, order: int) -> Harmonics:
 
 
 def _settled(
-    rebuilt: Callable[[Array], tuple[Any, Balance]], which: Array, omega: Array, order: int
-) -> tuple[Array, Harmonics, Array]:
+    rebuilt: Callable[[np.ndarray], tuple[Any, Balance]], which: np.ndarray, omega: Array, order: int
+) -> tuple[Array, Harmonics, np.ndarray]:
     """First amplitudes, harmonics and success of some cells, begun from their describing functions."""
     balance = rebuilt(which)[1]
     start = _describing_start(balance, omega, order)
@@ -206,12 +206,12 @@ def _settled(
 
 def _reseeded(
     harmonics: Harmonics,
-    good: Array,
+    good: np.ndarray,
     start: Array,
-    cells: Array,
+    cells: np.ndarray,
     shape: tuple[int, int],
-    rebuilt: Callable[[Array], tuple[Any, Balance]],
-) -> tuple[Harmonics, Array]:
+    rebuilt: Callable[[np.ndarray], tuple[Any, Balance]],
+) -> tuple[Harmonics, np.ndarray]:
     """Cells that failed, begun again from the nearest that did not, until no more come right."""
     force, omega, good = harmonics.force.copy(), harmonics.omega.copy(), good.copy()
     for _ in range(6):
@@ -228,7 +228,7 @@ def _reseeded(
     return Harmonics(force, omega), good
 
 
-def _nearest_good(cells: Array, good: Array, bad: Array, shape: tuple[int, int]) -> Array:
+def _nearest_good(cells: np.ndarray, good: np.ndarray, bad: np.ndarray, shape: tuple[int, int]) -> np.ndarray:
     row, column = cells // shape[1], cells % shape[1]
     source = np.flatnonzero(good)
     distance = (row[bad, None] - row[source]) ** 2 + (column[bad, None] - column[source]) ** 2

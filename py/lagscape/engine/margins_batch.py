@@ -10,6 +10,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 
@@ -23,6 +24,8 @@ _CHUNK = 2048
 """Members worked on at once, so that the work arrays stay in the cache."""
 _LEAST_FREQUENCIES, _MOST_FREQUENCIES = 20, 400
 _STEPS_PER_HALF_TURN = 3.0
+_FINEST = 60.0
+"""Grids are made four times denser up to this factor."""
 _ABOUT_RESONANCE = np.array([-3.0, -1.2, -0.6, -0.25, 0.0, 0.25, 0.6, 1.2, 3.0])[:, None]
 _KINDS = (bool, int, float, bool, float, bool, float, float, bool, float, float)
 """Of the columns of `MarginsBatch`, in order."""
@@ -33,21 +36,21 @@ _TURN = 2.0 * math.pi
 class MarginsBatch:
     """One entry a member, arrays of the batch's shape. Where a `has_` array is False the numbers beside it are 0 and mean nothing."""
 
-    stable: Array
+    stable: np.ndarray
     """bool; by Nyquist's criterion."""
-    unstable_roots: Array
+    unstable_roots: np.ndarray
     """Roots with positive real part, a pair counted twice."""
     loop_gain: Array
     """|L| at the deciding phase crossover; 0 where there is none."""
-    has_phase_crossover: Array
+    has_phase_crossover: np.ndarray
     phase_crossover_frequency: Array
     """rad/s."""
-    has_gain_crossover: Array
+    has_gain_crossover: np.ndarray
     phase_margin_rad: Array
     """The smallest lag missing to the boundary of a stable member; of an unstable one the negative lead at its last gain crossover."""
     delay_margin_s: Array
     """The same as a delay."""
-    has_oscillation: Array
+    has_oscillation: np.ndarray
     growth_rate_per_s: Array
     """Of the dominant oscillation; negative while it dies."""
     cycle_length_s: Array
@@ -97,18 +100,16 @@ def margins_of(opened: OpenLoop, growth: bool = True) -> MarginsBatch:
         for column, values in zip(columns, part, strict=True):
             column[which] = values
         careful += redone
-    return MarginsBatch(*(column.reshape(shape) for column in columns), careful=careful)
+    values: list[Any] = [*(column.reshape(shape) for column in columns), careful]
+    return MarginsBatch(*values)
 
 
-def _chunk(opened: OpenLoop, end: Array, growth: bool, density: float = 1.0) -> tuple[list[Array], int]:
+def _chunk(opened: OpenLoop, end: Array, growth: bool, density: float = 1.0) -> tuple[list[np.ndarray], int]:
+    """The columns of some members, and how many were done one by one; members whose grid proves too coarse are done again finer."""
     members = opened.coefficients.shape[2]
     feedback = opened.has_feedback
     frequency = _frequencies(opened, end, density)
     response = opened.response(frequency)
-    if density < 64.0:
-        coarse = _coarse(response)
-        if coarse.size:
-            return _patched(opened, end, growth, density, coarse)
 
     who, bracket, direction = _phase_brackets(frequency, response)
     w, gain = _close_phase(opened, who, *bracket)
@@ -129,11 +130,20 @@ def _chunk(opened: OpenLoop, end: Array, growth: bool, density: float = 1.0) -> 
 
     has_gain, phase_margin, delay_margin = _lags(opened, frequency, response, stable)
     columns = [stable, unstable, loop_gain, has_phase, crossover, has_gain & feedback, phase_margin, delay_margin]
-    if not growth:
-        return [*columns, np.zeros(members, dtype=bool), np.zeros(members), np.zeros(members)], 0
-    has_root, root, redone = _dominant(opened, has_phase, crossover, stable)
-    period = np.divide(_TURN, root.imag, out=np.zeros(members), where=has_root)
-    return [*columns, has_root, np.where(has_root, root.real, 0.0), period], redone
+    redone = 0
+    if growth:
+        has_root, root, redone = _dominant(opened, has_phase, crossover, stable)
+        period = np.divide(_TURN, root.imag, out=np.zeros(members), where=has_root)
+        columns += [has_root, np.where(has_root, root.real, 0.0), period]
+    else:
+        columns += [np.zeros(members, dtype=bool), np.zeros(members), np.zeros(members)]
+    coarse = _coarse(response, density) if density < _FINEST else np.empty(0, dtype=int)
+    if coarse.size:
+        finer, more = _chunk(opened.member(coarse), end[coarse], growth, 4.0 * density)
+        for column, values in zip(columns, finer, strict=True):
+            column[coarse] = values
+        redone += more
+    return columns, redone
 
 
 def _search_end(opened: OpenLoop) -> Array:
@@ -163,31 +173,18 @@ def _frequencies(opened: OpenLoop, end: Array, density: float) -> Array:
     return frequency
 
 
-def _coarse(response: np.ndarray) -> Array:
+def _coarse(response: np.ndarray, density: float) -> np.ndarray:
     """Members whose phase turns so far between neighbouring frequencies, or whose gain turns so near 1, that a crossing could be missed."""
     turned = response[1:] * np.conj(response[:-1])
     doubtful = np.any((turned.real < 0.0) & (np.abs(turned.imag) < -2.0 * turned.real), axis=0)
     size = np.log(response.real**2 + response.imag**2 + 1e-300)
     middle, left, right = size[1:-1], size[:-2], size[2:]
-    # How far a parabola through three samples passes beyond the middle one; even steps are near enough for a guard.
+    # How far a parabola through three samples passes beyond the middle one; steps are not even, hence twice that.
     bend = left + right - 2.0 * middle
-    beyond = np.abs((right - left) ** 2 / (8.0 * np.where(bend != 0.0, bend, 1.0))) + 0.02
+    beyond = 2.0 * np.abs((right - left) ** 2 / (8.0 * np.where(bend != 0.0, bend, 1.0))) + 0.03 / density
     peak = (bend < 0.0) & (middle >= left) & (middle > right) & (middle < 0.0) & (middle + beyond > 0.0)
     dip = (bend > 0.0) & (middle <= left) & (middle < right) & (middle > 0.0) & (middle - beyond < 0.0)
     return np.flatnonzero(doubtful | np.any(peak | dip, axis=0))
-
-
-def _patched(opened: OpenLoop, end: Array, growth: bool, density: float, coarse: Array) -> tuple[list[Array], int]:
-    """The chunk with the members listed in `coarse` done on a finer grid and the others as they are."""
-    fine = np.ones(end.size, dtype=bool)
-    fine[coarse] = False
-    parts = [(fine, _chunk(opened.member(fine), end[fine], growth, density))] if fine.any() else []
-    parts.append((~fine, _chunk(opened.member(~fine), end[~fine], growth, 4.0 * density)))
-    columns = [np.zeros(end.size, dtype=column.dtype) for column in parts[0][1][0]]
-    for which, (values, _) in parts:
-        for column, part in zip(columns, values, strict=True):
-            column[which] = part
-    return columns, sum(redone for _, (_, redone) in parts)
 
 
 def _phase_brackets(frequency: Array, response: np.ndarray) -> tuple[Array, tuple[Array, ...], Array]:
@@ -275,12 +272,12 @@ def _routh_stable(denominator: Array) -> Array:
 class GainCrossings:
     """Every place where |L(i w)| = 1, over all members of a one-axis batch."""
 
-    member: Array
+    member: np.ndarray
     frequency: Array
     """rad/s."""
     lag_left: Array
     """rad in (-pi, pi]: pi + arg L."""
-    falling: Array
+    falling: np.ndarray
     """bool: |L| falls with frequency, so that more delay moves a root pair to the right."""
 
 
@@ -315,7 +312,7 @@ def _round_turn(lag: Array) -> Array:
     return np.where((lag > -ON_BOUNDARY) & (lag <= 0.0), 0.0, np.mod(lag, _TURN))
 
 
-def _lags(opened: OpenLoop, frequency: Array, response: np.ndarray, stable: Array) -> tuple[Array, Array, Array]:
+def _lags(opened: OpenLoop, frequency: Array, response: np.ndarray, stable: np.ndarray) -> tuple[np.ndarray, Array, Array]:
     members = opened.coefficients.shape[2]
     found = _close_gain(opened, frequency, response)
     who, w, lag = found.member, found.frequency, found.lag_left
@@ -337,7 +334,7 @@ def _lags(opened: OpenLoop, frequency: Array, response: np.ndarray, stable: Arra
     return has, phase_margin, delay_margin
 
 
-def _dominant(opened: OpenLoop, has_phase: Array, crossover: Array, stable: Array) -> tuple[Array, np.ndarray, int]:
+def _dominant(opened: OpenLoop, has_phase: np.ndarray, crossover: Array, stable: np.ndarray) -> tuple[np.ndarray, np.ndarray, int]:
     members = crossover.size
     root = np.zeros(members, dtype=complex)
     which = np.flatnonzero(has_phase)

@@ -11,7 +11,6 @@ Keller 1977, in Applications of Bifurcation Theory, 359-384 (from memory).
 from __future__ import annotations
 
 import math
-from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Any
 
@@ -182,13 +181,19 @@ class _Plane:
         worst = max(residual for _, residual in points)
         return PlaneCurve(values[:, 0], values[:, 1], 2.0 * math.pi * np.exp(-kept[:, 2]), closed, worst)
 
+    def _try(self, guess: Array, tangent: Array) -> tuple[Array, Array, float] | None:
+        try:
+            return self.correct(guess, tangent)
+        except (np.linalg.LinAlgError, InvalidInputError):
+            return None
+
     def _follow(self, started: tuple[Array, Array, float], sign: float) -> tuple[list[tuple[Array, float]], bool]:
         point, jacobian, residual = started
         tangent = sign * _tangent(jacobian)
         points, step = [(point, residual)], _FIRST_STEP
         first, first_tangent, travelled = point, tangent, 0.0
         while len(points) < _MOST_POINTS:
-            found = _try(lambda guess, along=tangent: self.correct(guess, along), point + step * tangent)
+            found = self._try(point + step * tangent, tangent)
             turn = 0.0
             if found is not None:
                 after = _tangent(found[1])
@@ -209,13 +214,6 @@ class _Plane:
                 return points, False
             step = min(step * 1.4, _LARGEST_STEP) if turn > 0.995 else step
         return points, False
-
-
-def _try(correct: Callable[[Array], Any], guess: Array) -> Any:
-    try:
-        return correct(guess)
-    except (np.linalg.LinAlgError, InvalidInputError):
-        return None
 
 
 def _inside(point: Array, slack: float) -> bool:
