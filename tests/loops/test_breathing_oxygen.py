@@ -12,6 +12,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from lagscape.case.case import Case
+from lagscape.engine.boundary import boundary_curve
 from lagscape.engine.disturbance import pulse
 from lagscape.engine.margins import margins
 from lagscape.engine.margins_batch import margins_batch
@@ -348,6 +349,18 @@ def test_margins_of_a_batch_over_the_map_are_those_of_its_members() -> None:
             one = NIGHT.with_sensitivity(float(sensitivities[i, 0])).with_delay(float(delays[0, k]))
             # Two methods of the engine, both polished by Newton to 1e-9 and better.
             assert found.loop_gain[i, k] == pytest.approx(margins(one.form(), one.rest()).loop_gain, rel=1e-7)
+
+
+def test_the_boundary_of_a_loop_that_is_not_proportional_to_its_sensitivity() -> None:
+    # Oxygen's slope at rest does not grow with the gain, so the curve is found by the second method. Law: on it a root pair lies on
+    # the imaginary axis, its period the curve's; Newton on the edge is good to 1e-8.
+    found = boundary_curve(NIGHT)
+    assert found.curves
+    for curve in found.curves:
+        for i in (len(curve.delay_s) // 4, len(curve.delay_s) // 2):
+            one = NIGHT.with_sensitivity(float(curve.sensitivity[i])).with_delay(float(curve.delay_s[i]))
+            s = 2j * math.pi / float(curve.period_s[i])
+            assert abs(1.0 + open_loop(one.form(), one.rest()).at(s)[0]) <= 1e-6
 
 
 # ---- a controller that stays while the plant changes ------------------------------------------------------------------------------
