@@ -73,7 +73,7 @@ class _ResourcesLoader(importlib.abc.Loader):
     def create_module(self, spec: importlib.machinery.ModuleSpec) -> ModuleType | None:
         return self._loader.create_module(spec)
 
-    def exec_module(self, module: ModuleType) -> None:
+    def exec_module(self, module: Any) -> None:
         self._loader.exec_module(module)
         old = module.CDN_DIST
         module.CDN_DIST = self._address

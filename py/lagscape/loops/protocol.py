@@ -23,7 +23,8 @@ import numpy.typing as npt
 
 __all__ = ["Array", "Channel", "Drive", "DriveForm", "Loop", "Rest", "Signal", "batch_shape"]
 
-Array = npt.NDArray[np.float64]
+Array = npt.NDArray[Any]
+"""Numbers, counts or truth values: numpy's own types do not follow which through an expression."""
 
 
 @runtime_checkable
