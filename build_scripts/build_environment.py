@@ -27,7 +27,7 @@ def environment_python(progress: Progress) -> Path:
     BuildError
         If this Python is too old, or pip cannot install the pinned packages.
     """
-    if sys.version_info < (3, 11):
+    if sys.version_info < (3, 11):  # noqa: UP036 - said to whoever starts an older Python
         raise BuildError(f"Python 3.11 or newer is needed, this is {sys.version.split()[0]}.")
     folder = ROOT / ".venv"
     python = folder / ("Scripts/python.exe" if sys.platform == "win32" else "bin/python")

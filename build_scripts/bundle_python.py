@@ -20,7 +20,7 @@ from pathlib import Path
 from build_progress import BuildError, Progress
 from fetch_files import RUNTIME_LOCK
 
-__all__ = ["Compiler", "package_files", "pack", "runtime_lock_text", "wheel_files"]
+__all__ = ["Compiler", "pack", "package_files", "runtime_lock_text", "wheel_files"]
 
 SITE = "/lib/python3.12/site-packages"
 STANDARD_LIBRARY = "/lib/python312.zip"

@@ -12,6 +12,7 @@ import sys
 from functools import partial
 from http.server import SimpleHTTPRequestHandler, ThreadingHTTPServer
 from pathlib import Path
+from typing import ClassVar
 
 from build_environment import ROOT
 from build_progress import BuildError, Progress
@@ -23,7 +24,7 @@ DEFAULT_PORT = 8600
 class SiteHandler(SimpleHTTPRequestHandler):
     """A plain file server; folders named by their content may be kept for ever, all else is asked for again."""
 
-    extensions_map = {**SimpleHTTPRequestHandler.extensions_map, ".wasm": "application/wasm", ".mjs": "text/javascript",
+    extensions_map: ClassVar[dict[str, str]] = {**SimpleHTTPRequestHandler.extensions_map, ".wasm": "application/wasm", ".mjs": "text/javascript",
                       ".js": "text/javascript", ".webmanifest": "application/manifest+json", ".whl": "application/zip"}
 
     def end_headers(self) -> None:
