@@ -12,6 +12,7 @@ const STAGES = [
 const THINKING_AFTER_MS = 150;
 const STUCK_AFTER_MS = 20000;
 const LIVE_AFTER_MS = 700;
+const NOTE_FOR_MS = 8000;
 
 // Shape says the standing as well as colour: a level line, a dying ring, a steady wave.
 const MARKS = {
@@ -26,6 +27,8 @@ export class PageState {
     this.stages = new Map();
     this.readyCallbacks = [];
     this.supportText = "";
+    this.workingOn = false;
+    this.byId("dismiss").addEventListener("click", () => this.say("bar", "", "note"));
     this.byId("copy-support").addEventListener("click", (event) => this.copySupport(event.currentTarget));
   }
 
@@ -42,6 +45,7 @@ export class PageState {
     this.byId("failed").hidden = true;
     this.byId("boot").hidden = false;
     this.byId("boot-bar").value = 0;
+    this.workingOn = false;
     this.busy(false);
     const list = this.byId("boot-stages");
     list.replaceChildren();
@@ -100,7 +104,7 @@ export class PageState {
       this.thinkingTimer = setTimeout(() => this.reveal("thinking", true), THINKING_AFTER_MS);
       this.stuckTimer = setTimeout(() => this.reveal("stuck", true), STUCK_AFTER_MS);
     } else {
-      this.reveal("thinking", false);
+      this.reveal("thinking", this.workingOn);
       this.reveal("stuck", false);
     }
   }
@@ -109,8 +113,11 @@ export class PageState {
     this.byId(id).hidden = !on;
   }
 
+  /** Work that goes on between messages: the mark stays, with its own words, until the text is empty. */
   working(text) {
+    this.workingOn = text !== "";
     this.byId("thinking-text").textContent = text || "working";
+    this.reveal("thinking", this.workingOn);
   }
 
   standing(text, standing) {
@@ -136,6 +143,12 @@ export class PageState {
     element.textContent = text;
     element.dataset.tone = tone;
     element.hidden = text === "";
+    if (place !== "bar") return;
+    this.byId("slip").hidden = text === "";
+    this.byId("slip").dataset.tone = tone;
+    clearTimeout(this.slipTimer);
+    // What was done needs no keeping; what was refused stays until it is put away.
+    if (tone === "note") this.slipTimer = setTimeout(() => this.say("bar", "", "note"), NOTE_FOR_MS);
   }
 
   line(name, on) {
@@ -155,6 +168,7 @@ export class PageState {
 
   failed(sentence, support) {
     this.set("failed");
+    this.workingOn = false;
     this.busy(false);
     this.supportText = support;
     this.byId("boot").hidden = true;
