@@ -37,11 +37,12 @@ MAY_IMPORT = {
 """Part of the package to the other parts that it may import."""
 
 ONLY_THESE = {
-    ("case", "loops"): {"lagscape.loops.register"},
+    ("case", "loops"): {"lagscape.loops.register", "lagscape.loops.gases"},
     ("loops", "case"): {"lagscape.case.parameters"},
     ("engine", "loops"): {"lagscape.loops.protocol"},
 }
-"""Of these arrows one module alone: the engine knows the shape of a loop and no physiology; loops know what a parameter is."""
+"""Of these arrows these modules alone: cases know the register and the formulas of gases, which know no loop; the engine knows the
+shape of a loop and no physiology; loops know what a parameter is."""
 
 BROWSER_MODULES = {"js", "pyodide", "pyodide_js", "panel", "bokeh", "param"}
 DRAG_PATH = ("lagscape.questions.standing", "lagscape.engine.simulate", "lagscape.engine.boundary", "lagscape.loops.register", "lagscape.case.case")

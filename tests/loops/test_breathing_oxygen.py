@@ -189,7 +189,7 @@ def test_the_lines_of_all_pressures_meet_at_the_apnoeic_threshold() -> None:
 
 
 # ---- against the form without oxygen ----------------------------------------------------------------------------------------------
-def same_open_loop(one: BreathingLoop, other: BreathingLoop, slack: float) -> None:
+def check_same_open_loop(one: BreathingLoop, other: BreathingLoop, slack: float) -> None:
     frequency = np.geomspace(1e-3, 2.0, 40)
     first = open_loop(one.form(), one.rest()).response(frequency)
     second = open_loop(other.form(), other.rest()).response(frequency)
@@ -202,7 +202,7 @@ def test_with_a_flat_oxygen_sensitivity_it_is_the_loop_without_oxygen(shape: str
     monkeypatch.setattr(breathing_oxygen, "HYPOXIC_RATE", 0.0)
     periodic = replace(Case.from_starting_case("heart-failure-periodic").loop(), drive_shape=shape)
     both = replace(periodic, gases="co2_o2", barometric_pressure_mmhg=560.0)
-    same_open_loop(both, periodic, 1e-12)
+    check_same_open_loop(both, periodic, 1e-12)
     sigh = pulse("sigh", 5.0, 6.0, 15.0)
     with_o2 = simulate(both, duration=200.0, disturbances=sigh, purpose="release")
     without = simulate(periodic, duration=200.0, disturbances=sigh, purpose="release")
@@ -211,7 +211,7 @@ def test_with_a_flat_oxygen_sensitivity_it_is_the_loop_without_oxygen(shape: str
 
 
 def test_without_a_peripheral_gain_oxygen_does_nothing() -> None:
-    same_open_loop(replace(NIGHT, peripheral_gain_l_min_mmhg=0.0), replace(NIGHT, peripheral_gain_l_min_mmhg=0.0, gases="co2"), 1e-12)
+    check_same_open_loop(replace(NIGHT, peripheral_gain_l_min_mmhg=0.0), replace(NIGHT, peripheral_gain_l_min_mmhg=0.0, gases="co2"), 1e-12)
 
 
 @shapes
@@ -415,7 +415,7 @@ def test_a_new_sensitivity_keeps_rest_and_split(loop: BreathingLoop) -> None:
     split = loop.peripheral_gain_l_min_mmhg / loop.central_gain_l_min_mmhg
     assert stronger.peripheral_gain_l_min_mmhg / stronger.central_gain_l_min_mmhg == pytest.approx(split, rel=1e-12)
     with_one = loop.with_sensitivity(loop.sensitivity)
-    same_open_loop(with_one, loop, 1e-10)
+    check_same_open_loop(with_one, loop, 1e-10)
 
 
 # ---- signals and refusals ---------------------------------------------------------------------------------------------------------
