@@ -100,8 +100,8 @@ def margins_of(opened: OpenLoop, growth: bool = True) -> MarginsBatch:
         for column, values in zip(columns, part, strict=True):
             column[which] = values
         careful += redone
-    values: list[Any] = [*(column.reshape(shape) for column in columns), careful]
-    return MarginsBatch(*values)
+    shaped: list[Any] = [column.reshape(shape) for column in columns]
+    return MarginsBatch(*shaped, careful=careful)  # type: ignore[misc]
 
 
 def _chunk(opened: OpenLoop, end: Array, growth: bool, density: float = 1.0) -> tuple[list[np.ndarray], int]:

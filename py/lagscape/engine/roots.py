@@ -92,15 +92,15 @@ def rightmost_roots(
     """
     opened = open_loop(form, rest) if opened is None else opened
     known = margins(form, rest, opened) if known is None else known
-    seeds = [complex(item) for item in opened.poles.tolist() if item.imag >= 0.0]
-    towards = _crossing_seeds(opened, known)
-    seeds += towards
+    seeds = [*_crossing_seeds(opened, known), *(complex(item) for item in opened.poles.tolist() if item.imag >= 0.0)]
     found: dict[complex, float] = {}
     agrees = False
     for nodes in (_NODES, *_FINER):
         seeds += generator_eigenvalues(form, rest, nodes)[: max(count, known.unstable_roots // 2) + 4]
         for seed in seeds:
-            _keep(found, opened, seed)
+            # A seed this near a root that is known already would only lead there again.
+            if not any(abs(seed - root) <= 1e-4 * abs(root) for root in found):
+                _keep(found, opened, seed)
         agrees = sum(1 if root.imag == 0.0 else 2 for root in found if root.real > 0.0) == known.unstable_roots
         if agrees or not known.complete or _on_boundary(found):
             agrees = True
@@ -164,7 +164,7 @@ def _on_boundary(found: dict[complex, float]) -> bool:
 
 def _crossing_seeds(opened: OpenLoop, known: Margins) -> list[complex]:
     """From i w at each strong phase crossover, the deciding one first, to the root that it becomes as the gain passes 1."""
-    frequencies = [item.frequency for item in sorted(known.phase_crossovers, key=lambda item: -item.gain)[: 6 + known.unstable_roots // 2]]
+    frequencies = [item.frequency for item in sorted(known.phase_crossovers, key=lambda item: -item.gain)[: 3 + known.unstable_roots // 2]]
     if known.phase_crossover_frequency is not None:
         frequencies = [known.phase_crossover_frequency, *(w for w in frequencies if w != known.phase_crossover_frequency)]
     found = (crossing_root(opened, w) for w in frequencies)
