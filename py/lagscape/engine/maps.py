@@ -167,20 +167,12 @@ def _cells(loop: Any, first: str, firsts: Array, second: str, seconds: Array, ce
 
 
 def _describing_start(balance: Balance, omega: Array, order: int) -> Harmonics:
-    """The least amplitude at which the first harmonic alone balances, by a ladder and then bisection in every cell at once."""
+    """Amplitudes where the first harmonic alone balances, by bisection on their logarithm in every cell at once."""
     unit = np.max(np.abs(balance.level), axis=1) * np.maximum(np.abs(balance.output_rest), 1e-3)
-    low = np.log(unit * 1e-3)
-    rung = math.log(1e6) / 18.0
+    low, high = np.log(unit * 1e-5), np.log(unit * 1e4)
     with np.errstate(all="ignore"):
         transfer, factor, _, _ = balance.transfers(np.asarray(omega, dtype=float), 1)
-        climbing = np.ones(balance.size, dtype=bool)
-        for _ in range(18):
-            climbing &= first_harmonic_gain(balance, transfer, factor, np.exp(low + rung)).real >= 1.0
-            if not climbing.any():
-                break
-            low = np.where(climbing, low + rung, low)
-        high = low + rung
-        for _ in range(3):
+        for _ in range(11):
             middle = 0.5 * (low + high)
             above = first_harmonic_gain(balance, transfer, factor, np.exp(middle)).real >= 1.0
             low, high = np.where(above, middle, low), np.where(above, high, middle)
