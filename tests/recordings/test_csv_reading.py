@@ -180,6 +180,12 @@ def test_damaged_fields_are_counted_with_their_first_line():
     assert "1 line with too few columns; what was there was kept (first in line 7)" in told
 
 
+def test_a_damaged_first_line_of_numbers_is_not_taken_for_the_names():
+    recording = read_recording(b"clock;stage;flow\n22:00:00,0;N;artefact\n22:00:00,5;N1;0,25\n22:00:01,0;N1;0,5\n22:00:01,5;N1;0,75\n")
+    assert recording.channel_names == ("flow",)
+    assert np.array_equal(column(recording, "flow"), [np.nan, 0.25, 0.5, 0.75], equal_nan=True)
+
+
 def test_lines_out_of_order_are_left_out():
     rows = [f"{i / 10:.1f},{i}" for i in range(100)]
     rows[40], rows[41] = rows[41], rows[40]

@@ -62,15 +62,18 @@ def test_patient_and_recording_fields_are_nowhere_in_what_comes_back():
     assert "patient and recording fields were not read" in notes_of(recording)
 
 
+class Counting(io.BytesIO):
+    """A stream that counts the bytes taken from it, and gives them as a browser's wrapper does: as a memoryview."""
+
+    taken = 0
+
+    def read(self, size=-1):
+        part = super().read(size)
+        self.taken += len(part)
+        return memoryview(part)
+
+
 def test_a_window_reads_only_its_own_part_of_the_file():
-    class Counting(io.BytesIO):
-        taken = 0
-
-        def read(self, size=-1):
-            part = super().read(size)
-            self.taken += len(part)
-            return part
-
     digital = np.arange(200_000) % 1000
     stream = Counting(edf([channel("Flow", digital, 100), channel("Other", digital, 100)]))
     recording = read_recording(stream)
@@ -80,6 +83,19 @@ def test_a_window_reads_only_its_own_part_of_the_file():
     assert (start, values.size) == (1000.0, 350)
     assert values == pytest.approx(physical(digital[100_000:100_350], -1, 1), abs=1e-12)
     assert stream.taken - before == 4 * 400
+
+
+def test_opening_reads_no_byte_twice_and_measuring_one_channel_reads_once():
+    # A whole night is read in blocks; what it costs is what is read.
+    lists = [b"+%d\x14\x14\0" % i for i in range(1800)]
+    digital = (8000 * np.sin(np.arange(18_000) / 6.0)).astype(int)
+    data = edf([channel("Thorax", digital, 10), channel("EEG", np.zeros(1800 * 200), 200), annotation_channel(lists)], reserved="EDF+D")
+    stream = Counting(data)
+    recording = read_recording(stream)
+    assert stream.taken <= len(data) + 256  # the first 256 bytes are looked at twice
+    before = stream.taken
+    measure_breathing(recording, "Thorax")
+    assert stream.taken - before <= len(data)
 
 
 def test_large_data_records_are_read_by_channel():

@@ -71,6 +71,7 @@ def read_layout(head: bytes, *, time_column: str | None = None, time_unit: str |
     """
     lines = _decode(head).split("\n")[:_LINES_LOOKED_AT]
     separator, first, n_columns = _find_table(lines)
+    first = _damaged_start(lines, first, separator, n_columns)
     data = [fields for fields in (_split(line, separator) for line in lines[first:] if _is_data(line)) if len(fields) == n_columns]
     guesses: list[str] = []
     decimal_comma = _uses_decimal_comma(data, separator)
@@ -144,6 +145,22 @@ def _find_table(lines: list[str]) -> tuple[str, int, int]:
         seen = next((line.strip() for line in lines if line.strip()), "")
         raise RecordingError(f"no line of numbers was found; the file starts with '{one_line(seen)}'")
     return best[1], best[2], best[3]
+
+
+def _damaged_start(lines: list[str], first: int, separator: str, n_columns: int) -> int:
+    """The first line of numbers, allowing for damaged ones between the names and the first sound one."""
+
+    def fields_of(index: int) -> list[str]:
+        return _split(lines[index], separator)
+
+    def holds_a_number(index: int) -> bool:
+        return any(is_number(field) or clock_seconds(field) is not None for field in fields_of(index))
+
+    at = first
+    while at > 0 and len(fields_of(at - 1)) == n_columns and holds_a_number(at - 1):
+        at -= 1
+    named = at > 0 and len(fields_of(at - 1)) == n_columns and not holds_a_number(at - 1)
+    return at if named else first
 
 
 def _is_value(field: str) -> bool:

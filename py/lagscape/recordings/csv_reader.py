@@ -13,6 +13,8 @@ from lagscape.recordings.time_base import TimeBase, even_time_base, time_base_of
 
 __all__ = ["read_csv"]
 
+_LOOKED_AT = 100_000
+
 _TELL = {
     "missing": ("value", "{n} of '{name}' missing"),
     "unit": ("value", "{n} of '{name}' with text behind the number ('{example}'); the number was kept"),
@@ -38,23 +40,44 @@ def read_csv(
         layout: Layout | None = None
         tally = Tally()
         wanted: list[int] = []
-        parts: list[list[np.ndarray]] = []
+        parts: list[_Column] = []
+        read = 0
         for block in text_blocks(stream, total, progress):
+            read += len(block)
             if layout is None:
                 layout = read_layout(block, time_column=time_column, time_unit=time_unit)
                 block, tally.lines = _after_lines(block, layout.skipped_lines), layout.skipped_lines
                 wanted = [i for i, role in enumerate(layout.roles) if role == "number" or i == layout.time_column]
-                parts = [[] for _ in wanted]
-            for part, column, values in zip(parts, wanted, columns_of(block, layout, wanted, tally), strict=True):
-                part.append(values if column == layout.time_column else _single(values))
+                parts = [_Column(np.float64 if i == layout.time_column else np.float32) for i in wanted]
+            for part, values in zip(parts, columns_of(block, layout, wanted, tally), strict=True):
+                part.add(values, int(1.02 * (part.n + values.size) * max((total or 0) / read, 1.0)))
     if layout is None:
         raise RecordingError("the file is empty")
-    # One column at a time, so that no second copy of the whole table is ever held.
-    columns = {}
-    for i, column in enumerate(wanted):
-        columns[column] = np.concatenate(parts[i])
-        parts[i] = []
+    columns = {column: part.taken() for column, part in zip(wanted, parts, strict=True)}
+    del parts
     return _assemble(columns, layout, tally, name or source_name, sampling_frequency_hz)
+
+
+class _Column:
+    """Values as they come, in one array sized by what the file's length promises: no second copy is ever held."""
+
+    def __init__(self, dtype: type) -> None:
+        self.values = np.empty(0, dtype=dtype)
+        self.n = 0
+
+    def add(self, values: np.ndarray, expected: int) -> None:
+        """Append; `expected` is how many values the whole file is likely to have."""
+        needed = self.n + values.size
+        if needed > self.values.size:
+            grown = np.empty(max(needed, expected, int(1.25 * self.values.size)), dtype=self.values.dtype)
+            grown[: self.n] = self.values[: self.n]
+            self.values = grown
+        with np.errstate(over="ignore"):
+            self.values[self.n : needed] = values
+        self.n = needed
+
+    def taken(self) -> np.ndarray:
+        return self.values[: self.n]
 
 
 def _after_lines(block: bytes, n_lines: int) -> bytes:
@@ -62,11 +85,6 @@ def _after_lines(block: bytes, n_lines: int) -> bytes:
     for _ in range(n_lines):
         at = block.index(b"\n", at) + 1
     return block[at:]
-
-
-def _single(values: np.ndarray) -> np.ndarray:
-    with np.errstate(over="ignore"):
-        return values.astype(np.float32)
 
 
 def _assemble(columns: dict[int, np.ndarray], layout: Layout, tally: Tally, name: str, rate: float | None) -> Recording:
@@ -114,7 +132,8 @@ def _time_base(
         return time_base_of_rate(n_rows, rate), start_clock
     if times is not None:
         if not clock:
-            times = times * (layout.time_unit_s or _guessed_unit(times, notes))
+            unit_s = layout.time_unit_s or _guessed_unit(times[:_LOOKED_AT], notes)
+            times = times if unit_s == 1.0 else times * unit_s
         return even_time_base(times), start_clock
     if layout.stated_rate_hz is not None:
         notes.append(Note(f"the sampling rate was taken from the lines above the numbers: {layout.stated_rate_hz:g} Hz"))

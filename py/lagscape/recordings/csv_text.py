@@ -17,7 +17,7 @@ from lagscape.recordings.recording import Progress, report_progress
 
 __all__ = ["BLOCK_BYTES", "Source", "open_source", "text_blocks"]
 
-BLOCK_BYTES = 1 << 22
+BLOCK_BYTES = 1 << 20
 _LONGEST_LINE = 1 << 24
 
 Source = str | os.PathLike[str] | bytes | bytearray | memoryview | BinaryIO

@@ -60,7 +60,8 @@ class ByteSource:
             except (OSError, ValueError) as error:
                 raise RecordingError(f"cannot open '{path.name}': {getattr(error, 'strerror', None) or error}") from error
         try:
-            size = source.seek(0, os.SEEK_END)
+            source.seek(0, os.SEEK_END)
+            size = source.tell()
         except (AttributeError, OSError, ValueError) as error:
             raise RecordingError("an EDF file is read by position; the stream that was given cannot be positioned") from error
         return cls(source, size, Path(str(getattr(source, "name", "recording"))).name)

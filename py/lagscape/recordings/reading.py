@@ -76,4 +76,4 @@ def _head(source: Source) -> bytes:
         source.seek(here)
     except (AttributeError, OSError, ValueError):
         return b""
-    return head if isinstance(head, bytes) else b""
+    return bytes(head) if isinstance(head, bytes | bytearray | memoryview) else b""

@@ -17,6 +17,7 @@ __all__ = ["TimeBase", "even_time_base", "time_base_of_rate"]
 _LONGEST_FILLED_S = 1.0
 _MOST_BACKWARDS = 0.05
 _SHORTEST_STEP_S = 1e-5
+_AT_ONCE = 1 << 18
 
 
 @dataclass(frozen=True, eq=False)
@@ -52,6 +53,9 @@ def even_time_base(times: np.ndarray) -> TimeBase:
         If there are fewer than two times, they never change, or more than 1 in 20 run backwards.
     """
     notes: list[Note] = []
+    clean = _already_even(times)
+    if clean is not None:
+        return clean
     good = np.isfinite(times)
     if good.sum() < 2:
         raise RecordingError("the time column holds fewer than two times")
@@ -82,6 +86,25 @@ def even_time_base(times: np.ndarray) -> TimeBase:
     if uneven > 0.05 and not _on_a_grid(t, typical):
         return _resampled(t, kept, typical, origin, notes)
     return _pieces(t, kept, times.size, typical, origin, notes)
+
+
+def _already_even(times: np.ndarray) -> TimeBase | None:
+    """The time base of times on one even grid without break, judged in parts: the usual case, and free of memory."""
+    n = times.size
+    if n < 2 or not (np.isfinite(times[0]) and np.isfinite(times[-1])) or times[-1] <= times[0]:
+        return None
+    step = (times[-1] - times[0]) / (n - 1)
+    if step < _SHORTEST_STEP_S:
+        return None
+    roughness = 0.0
+    for at in range(0, n, _AT_ONCE):
+        part = times[at : at + _AT_ONCE]
+        away = np.abs(part - (times[0] + np.arange(at, at + part.size) * step)).max()
+        if not away <= 0.45 * step:
+            return None
+        roughness = max(roughness, float(away))
+    rate = _neat(1.0 / step, float(times[-1] - times[0]), roughness)
+    return TimeBase(rate, (Segment(0.0, n / rate),), (0,), None, None, None, (), float(times[0]))
 
 
 def _drop_backwards(kept: np.ndarray, t: np.ndarray, notes: list[Note]) -> tuple[np.ndarray, np.ndarray]:
@@ -149,7 +172,8 @@ def _pieces(t: np.ndarray, kept: np.ndarray, n_rows: int, typical: float, origin
     spans = t[edges[1:] - 1] - t[edges[:-1]]
     rate = float((lengths - 1).sum() / spans.sum()) if spans.sum() > 0 else 1.0 / typical
     longest = int(lengths.argmax())
-    rate = _neat(rate, t[edges[longest] : edges[longest + 1]])
+    piece = t[edges[longest] : edges[longest + 1]]
+    rate = _neat(rate, float(piece[-1] - piece[0]), float(np.abs(piece - np.linspace(piece[0], piece[-1], piece.size)).max()))
     filled = _LONGEST_FILLED_S
     short = breaks[steps[breaks] <= filled] if breaks.size else breaks
     if short.size:
@@ -210,13 +234,11 @@ def _refuse_bloat(n_samples: float, n_rows: int) -> None:
         )
 
 
-def _neat(rate: float, piece: np.ndarray) -> float:
+def _neat(rate: float, span_s: float, roughness_s: float) -> float:
     """The round rate nearby where the written times, given how roughly they are written, cannot tell the two apart."""
-    span = piece[-1] - piece[0]
-    if span <= 0.0:
+    if span_s <= 0.0:
         return rate
-    roughness = float(np.abs(piece - np.linspace(piece[0], piece[-1], piece.size)).max())
-    doubt = rate * (2.0 * roughness + 1e-9 * span) / span
+    doubt = rate * (2.0 * roughness_s + 1e-9 * span_s) / span_s
     for candidate in (float(round(rate)), round(rate, 1), round(rate, 2)):
         if candidate > 0.0 and abs(candidate - rate) <= doubt:
             return candidate
