@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from html import escape
 
+from lagscape.app.clinic_entries import ENTRIES, Field, apply_entry
 from lagscape.app.components.sheet import Request, Sheet
 from lagscape.app.workbench import Workbench
 from lagscape.case.case import Case, starting_case
@@ -25,6 +26,8 @@ class CaseView:
     def __init__(self, bench: Workbench) -> None:
         self.bench = bench
         self.opened: str | None = None
+        self.typed: dict[str, str] = {}
+        self.said: dict[str, str] = {}
         self.root = Sheet(self._handle)
         for topic in ("settled", "units", "moving"):
             bench.listen(topic, self.draw)
@@ -115,7 +118,34 @@ class CaseView:
             f'<div class="more"><p>{escape(item.meaning)}</p><dl>'
             f"<dt>Symbol</dt><dd>{escape(item.symbol)}</dd><dt>Taken</dt><dd>{figure(low)} to {figure(high)} {escape(unit)}</dd>"
             f"<dt>Typical</dt><dd>{escape(band)}</dd><dt>Spread</dt><dd>{escape(said)} ({case.numbers[item.name].basis})</dd>"
-            f"<dt>Source</dt><dd>{escape(item.source)}</dd></dl></div>"
+            f"<dt>Source</dt><dd>{escape(item.source)}</dd></dl>{self._entries(case, item)}</div>"
+        )
+
+    def _entries(self, case: Case, item: ParameterSpecification) -> str:
+        """The forms that turn what the clinic has into this number."""
+        if case.kind != "breathing":
+            return ""
+        forms = []
+        for number, entry in enumerate(ENTRIES.get(item.name, ())):
+            boxes = "".join(self._field(f"{item.name}/{number}/{place}", field) for place, field in enumerate(entry.fields))
+            forms.append(
+                f'<div class="entry"><b>{escape(entry.label)}</b>{boxes}'
+                f'<button data-act="apply" data-key="{item.name}/{number}">Use it</button></div>'
+            )
+        said = self.said.get(item.name)
+        note = f'<p class="quiet" role="status">{escape(said)}</p>' if said else ""
+        return "".join(forms) + note
+
+    def _field(self, key: str, field: Field) -> str:
+        text = self.typed.get(key, field.first)
+        label = escape(field.label)
+        if field.options:
+            options = "".join(f"<option{' selected' if option == text else ''}>{escape(option)}</option>" for option in field.options)
+            return f'<label>{label} <select data-act="entry" data-key="{key}">{options}</select></label>'
+        unit = to_display(1.0, field.unit, self.bench.units)[1]
+        return (
+            f'<label>{label} <input class="box short" type="text" inputmode="decimal" autocomplete="off" data-act="entry" data-key="{key}"'
+            f' value="{escape(text)}" aria-label="{label}, {escape(unit)}"> {escape(unit)}</label>'
         )
 
     def _choices(self, case: Case) -> str:
@@ -155,9 +185,15 @@ class CaseView:
         elif request.act == "open":
             self.opened = None if self.opened == key else key
             self.draw()
+        elif request.act == "entry":
+            if request.event != "escape":
+                self.typed[key] = request.value
+        elif request.act == "apply":
+            self._apply(*key.split("/"))
         elif request.act == "choice":
             bench.attempt(key, lambda: case.with_choice(key, request.value))
         elif request.act == "loop":
+            self.said.clear()
             bench.begin(Case.from_starting_case(LOOPS[request.value].starting_cases[0].name))
         elif request.act == "start":
             bench.begin(Case.from_starting_case(request.value) if request.value else Case.typical(case.kind))
@@ -167,6 +203,17 @@ class CaseView:
             bench.undo()
         elif request.act == "redo":
             bench.redo()
+
+    def _apply(self, name: str, number: str) -> None:
+        entry = ENTRIES[name][int(number)]
+        typed = tuple(self.typed.get(f"{name}/{number}/{place}", field.first) for place, field in enumerate(entry.fields))
+
+        def change() -> Case:
+            case, self.said[name] = apply_entry(self.bench.case, entry, typed, self.bench.units)
+            return case
+
+        self.said.pop(name, None)
+        self.bench.attempt(name, change)
 
     def _shown(self, key: str) -> str:
         item = self.bench.case.specifications[key]

@@ -11,15 +11,17 @@ from lagscape.app.components.sheet import Request, Sheet
 from lagscape.app.lever_view import effect_words
 from lagscape.app.workbench import Workbench
 from lagscape.handover.pictures import Contour, Curve, MapPicture, TracePanel, above, boundary_map_svg, traces_svg
-from lagscape.handover.report import LeverLine, Picture, Report, report_html
+from lagscape.handover.report import LeverLine, Picture, Report, Section, report_html
 from lagscape.handover.svg import Axis
 from lagscape.handover.table import cycles_csv, trace_csv
 from lagscape.quantities import figure
 from lagscape.questions.boundary_map import cycle_contours, map_of, window_of
 from lagscape.questions.cautions import cautions
+from lagscape.questions.certainty import certainty
 from lagscape.questions.levers import LEVERS
 from lagscape.questions.response import DISTURBANCES, respond, run_length
-from lagscape.questions.standing import analysis_of, judge_loop
+from lagscape.questions.share import share_of_excess
+from lagscape.questions.standing import Standing, analysis_of, judge_loop
 from lagscape.questions.wording import seconds_words, standing_sentence
 
 __all__ = ["HandoverView"]
@@ -101,8 +103,19 @@ class HandoverView:
             Report(
                 bench.case, analysis, without, levers=self._lever_lines(), pictures=pictures,
                 cautions=tuple(f"{item.sentence} ({item.source})" for item in cautions(bench.case)),
-                measurement=bench.measurement, address=bench.page.address, pressure_unit=bench.units,
+                sections=self._sections(), measurement=bench.measurement, address=bench.page.address, pressure_unit=bench.units,
             )
+        )
+
+    def _sections(self) -> tuple[Section, ...]:
+        """Share of the excess and certainty, worked out for the report."""
+        share, sure = share_of_excess(self.bench.case), certainty(self.bench.case)
+        parts = tuple((item.part.label, f"{100.0 * item.share:.0f} %") for item in share.parts if item.share is not None)
+        held = [(f"{standing} in", f"{100.0 * sure.shares[standing]:.0f} % of draws") for standing in Standing]
+        held += [(f"doubt from {item.label}", f"{100.0 * item.share:.0f} %") for item in sure.doubts[:3]]
+        return (
+            Section("Share of the excess", parts, share.sentence),
+            Section("Certainty", tuple(held), f"{sure.sentence} {sure.draws} draws, seed {sure.seed}."),
         )
 
     def _lever_lines(self) -> tuple[LeverLine, ...]:

@@ -193,6 +193,9 @@ class RecordingView:
 
     def write(self) -> None:
         """Rewrite the head and the side from what is known now."""
+        if self.bench.measurement is not self.measurement:
+            self.bench.measurement = self.measurement
+            self.bench.tell("recording")
         head, side = recording_summary(self)
         self.head.show(head)
         self.side.show(side)

@@ -7,7 +7,9 @@ from html import escape
 
 from lagscape.app.components.sheet import Sheet
 from lagscape.app.workbench import Workbench
+from lagscape.case.plausibility import implausible
 from lagscape.quantities import figure, quantity
+from lagscape.questions.beginning import beginning_of
 from lagscape.questions.standing import Analysis, Judgement, analysis_of
 from lagscape.questions.wording import cycle_words, distance_sentence, seconds_words, standing_sentence
 
@@ -36,14 +38,22 @@ class StandingView:
         after = ""
         if changed is not None:
             after = f'<p class="after-levers"><b>With levers:</b> {escape(standing_sentence(changed))}</p>'
-        self._show(judged, analysis.sentence, distance_sentence(judged), self._figures(analysis, judged), after)
+        figures = self._figures(analysis, judged)
+        self._show(judged, analysis.sentence, distance_sentence(judged), figures, after)
 
-    def _show(self, judged: Judgement, sentence: str, distance: str, figures: str, after: str) -> None:
+        def add_beginning() -> None:
+            words = f'<p class="beginning">{escape(beginning_of(judged).sentence)}</p>'
+            self._show(judged, analysis.sentence, distance_sentence(judged), figures, after, words)
+
+        self.bench.when_rested(add_beginning)
+
+    def _show(self, judged: Judgement, sentence: str, distance: str, figures: str, after: str, beginning: str = "") -> None:
         standing = judged.standing
         refusal = self.bench.refusals.get("map")
         said = f'<p class="refusal" role="alert">{escape(refusal)}</p>' if refusal else ""
+        unlikely = "".join(f'<p class="caution">{escape(words)}</p>' for words in implausible(judged.loop)) if judged.loop.kind == "breathing" else ""
         self.bench.page.send("standing", {"text": sentence, "state": str(standing)})
-        self.root.show(f'<div class="support"><p class="distance">{escape(distance)}</p>{said}{after}{figures}</div>')
+        self.root.show(f'<div class="support"><p class="distance">{escape(distance)}</p>{said}{after}{figures}{beginning}{unlikely}</div>')
 
     def _figures(self, analysis: Analysis, judged: Judgement) -> str:
         units = self.bench.units

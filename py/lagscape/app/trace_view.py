@@ -91,6 +91,8 @@ class TraceView:
         panes = [pn.pane.Bokeh(strip.plot, sizing_mode="stretch_both", min_height=110) for strip in self.strips]
         self.root = pn.Column(self.bar, *panes, sizing_mode="stretch_both")
         self.duration = 0.0
+        self.lower = ""
+        self.others: dict[str, str] = {}
         bench.listen("moving", self.follow)
         bench.listen("settled", self.draw)
         bench.listen("units", self.draw)
@@ -123,7 +125,6 @@ class TraceView:
         case, judged = bench.case, bench.judged.judgement
         self.duration = run_length(judged)
         self.time.update(start=0.0, end=self.duration, reset_start=0.0, reset_end=self.duration)
-        self._draw_bar(case)
         for strip in self.strips:
             strip.show("before", [], [])
             strip.show("after", [], [])
@@ -133,10 +134,14 @@ class TraceView:
         if bench.judged.with_levers is not None:
             self._run("after", case, bench.judged.with_levers, grow_only=False)
         self._run("now", case, judged, grow_only=False)
+        self._draw_bar(case)
 
     def _run(self, name: str, case: Case, judged: Any, grow_only: bool) -> None:
         response = respond(case, judged, self.duration)
-        for strip, signal in zip(self.strips, response.signals, strict=False):
+        upper, *others = response.signals
+        self.others = {signal.name: signal.label for signal in others}
+        chosen = next((signal for signal in others if signal.name == self.lower), others[0])
+        for strip, signal in zip(self.strips, (upper, chosen), strict=True):
             values = signal.values
             unit = signal.unit
             factor, shown_unit = to_display(1.0, unit, self.bench.units)
@@ -197,13 +202,17 @@ class TraceView:
         unit = disturbance_units(case.kind).get(chosen, "")
         size = setting.size if setting is not None else 0.0
         shown, unit = to_display(size, unit, self.bench.units)
+        below = "".join(
+            f'<option value="{name}"{" selected" if name == self.lower else ""}>{escape(label)}</option>' for name, label in self.others.items()
+        )
+        lower = f'<label>Below <select data-act="lower" aria-label="Lower trace">{below}</select></label>' if len(self.others) > 1 else ""
         refusal = self.bench.refusals.get("disturbance")
         said = f'<span class="refusal" role="alert">{escape(refusal)}</span>' if refusal else ""
         after = '<span class="line after"></span>with levers' if self.bench.judged.with_levers is not None else ""
         self.bar.show(
             '<div class="trace-bar"><label>Disturbance <select data-act="kind" aria-label="Disturbance">'
             f'{options}</select></label><input class="box" type="text" inputmode="decimal" data-act="size" value="{figures(shown)}"'
-            f' aria-label="Size of the disturbance, {escape(unit)}"><span class="unit">{escape(unit)}</span>'
+            f' aria-label="Size of the disturbance, {escape(unit)}"><span class="unit">{escape(unit)}</span>{lower}'
             f'<span class="lines"><span class="line now"></span>now<span class="line before"></span>start{after}</span>{said}</div>'
         )
 
@@ -212,6 +221,9 @@ class TraceView:
         if request.act == "kind":
             kind = DISTURBANCES[case.kind][request.value]
             bench.attempt("disturbance", lambda: case.with_disturbance(kind.channel, kind.size))
+        elif request.act == "lower":
+            self.lower = request.value
+            self.draw()
         elif request.act == "size" and case.disturbance is not None:
             bench.attempt("disturbance", lambda: self._sized(case, request.value))
 
