@@ -14,7 +14,7 @@ from recordings.synthetic_breathing import as_recording, cut_off_sine, periodic,
 @pytest.mark.parametrize("rate_hz", [2.0, 10.0, 32.0])
 @pytest.mark.parametrize(
     ("cycle_length_s", "duty_ratio", "breath_hz"),
-    [(60.0, 0.5, 0.27), (60.0, 0.6, 0.27), (60.0, 0.75, 0.27), (40.0, 0.65, 0.3), (90.0, 0.7, 0.22), (20.0, 0.6, 0.4)],
+    [(60.0, 0.5, 0.27), (60.0, 0.6, 0.27), (60.0, 0.75, 0.27), (60.0, 0.85, 0.27), (40.0, 0.65, 0.3), (90.0, 0.7, 0.22), (20.0, 0.6, 0.4)],
 )
 @pytest.mark.parametrize("abrupt", [False, True], ids=["gradual", "abrupt"])
 def test_cycle_length_and_duty_ratio_at_10_db_with_drift(rate_hz, cycle_length_s, duty_ratio, breath_hz, abrupt):
@@ -220,3 +220,21 @@ def test_a_constant_signal_has_no_cycles():
     assert result.cycles == () and result.quality == "none"
     assert result.masked[0].reason == "flat"
     assert result.quality_reasons == ("No periodic breathing was found.",)
+
+
+@pytest.mark.parametrize("memory", [0.0, 0.5, 0.8])
+def test_regular_ventilation_yields_no_cycles(memory):
+    # Breath-by-breath ventilation with the scatter of quiet breathing (20 %) and with memory from breath to breath (autoregressive).
+    recorded = periodic_time = 0.0
+    for seed in range(4):
+        rng = np.random.default_rng(seed)
+        level = np.zeros(500)
+        for i in range(1, 500):
+            level[i] = memory * level[i - 1] + np.sqrt(1.0 - memory**2) * rng.normal()
+        ends = np.cumsum(rng.normal(3.7, 0.4, 500))
+        t = np.arange(3000) / 2.0
+        values = np.maximum(7.0 * (1.0 + 0.2 * level), 0.0)[np.searchsorted(ends, t)]
+        result = measure_breathing(as_recording(values, 2.0, name="ventilation"), "ventilation")
+        recorded += result.recorded_s
+        periodic_time += result.periodic_s
+    assert periodic_time < 0.02 * recorded

@@ -12,6 +12,7 @@ from lagscape.recordings.overview import Overview, overview
 from lagscape.recordings.reading import read_recording
 from lagscape.recordings.recording import Annotation, Note, ReadCancelled, Recording, Segment, Signal
 from lagscape.recordings.saturation_lag import SaturationLag, measure_saturation_lag
+from lagscape.recordings.summary import breathing_summary, tremor_summary
 from lagscape.recordings.tremor import TremorComparison, TremorMeasurement, compare_tremor, measure_tremor
 
 __all__ = [
@@ -29,6 +30,7 @@ __all__ = [
     "Thresholds",
     "TremorComparison",
     "TremorMeasurement",
+    "breathing_summary",
     "compare_tremor",
     "effort_sum",
     "flow_from_nasal_pressure",
@@ -38,4 +40,5 @@ __all__ = [
     "measure_tremor",
     "overview",
     "read_recording",
+    "tremor_summary",
 ]

@@ -180,6 +180,8 @@ def _is_periodic(row: list[BreathingCycle], thresholds: Thresholds) -> bool:
     used = [cycle for cycle in row if not cycle.excluded]
     if len(used) < max(thresholds.fewest_in_a_row, 2):
         return False
+    if float(np.median([cycle.wane_s / cycle.cycle_length_s for cycle in used])) < thresholds.shortest_wane_share:
+        return False
     irregular = float(np.median(np.abs(np.diff(np.log([cycle.cycle_length_s for cycle in row])))))
     shallow = float(np.median([cycle.pause_level for cycle in used])) >= thresholds.apnoea_below
     return irregular <= (thresholds.irregular_if_shallow if shallow else thresholds.most_irregular)
@@ -193,7 +195,7 @@ def _cycle(burst: Burst, following: Burst, masked: list[MaskedStretch], threshol
     duty = (end - start) / (stop - start) if pause == "apnoea" else None
     gain = loop_gain_from_duty_ratio(duty) if duty else None
     return BreathingCycle(
-        0, start, end, stop, burst.peak, burst.peak_s, pause, burst.pause_level, burst.gradual, duty, gain,
+        0, start, end, stop, burst.peak, burst.peak_s, pause, burst.pause_level, burst.wane_s, burst.gradual, duty, gain,
         touched is not None, touched.reason if touched else "",
     )  # fmt: skip
 

@@ -51,6 +51,7 @@ class BreathingCycle:
     peak_s: float
     pause: str
     pause_level: float
+    wane_s: float
     gradual: float
     duty_ratio: float | None
     loop_gain: float | None

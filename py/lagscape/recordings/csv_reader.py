@@ -62,7 +62,7 @@ class _Column:
     """Values as they come, in one array sized by what the file's length promises: no second copy is ever held."""
 
     def __init__(self, dtype: type) -> None:
-        self.values = np.empty(0, dtype=dtype)
+        self.values: np.ndarray = np.empty(0, dtype=dtype)
         self.n = 0
 
     def add(self, values: np.ndarray, expected: int) -> None:

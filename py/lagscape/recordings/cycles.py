@@ -38,6 +38,8 @@ class Thresholds:
     shortest_pause_s: float = 4.0
     fewest_in_a_row: int = 3
     """Fewer cycles in a row than this are no periodic breathing; three is the usual rule for Cheyne-Stokes respiration."""
+    shortest_wane_share: float = 0.1
+    """Least share of a typical cycle that lies under `wane_below`; dips of irregular breathing are shorter."""
     largest_step: float = 2.2
     """A cycle this many times longer or shorter than the middle one of the five about it does not belong to the row."""
     most_irregular: float = 0.6
@@ -54,7 +56,8 @@ class Thresholds:
 class Burst:
     """One stretch of ventilation: onset and end carried to zero (s), its peak, and the pause that follows it.
 
-    `pause_level` is the middle of the envelope in that pause over the peak; nan for the last burst of a stretch.
+    `pause_level` is the middle of the envelope in that pause over the peak, `wane_s` how long the envelope is under the waning
+    level there; nan for the last burst of a stretch.
     `gradual` tells how gradual its edges are: 0 abrupt, 1 as gradual as the sine of the loop-gain formula.
     """
 
@@ -63,6 +66,7 @@ class Burst:
     peak: float
     peak_s: float
     pause_level: float
+    wane_s: float
     gradual: float
 
 
@@ -116,6 +120,7 @@ def bursts_of(envelope: Envelope, hidden: np.ndarray, thresholds: Thresholds, is
                 peak,
                 envelope.start_s + peaks[i] / envelope.rate_hz,
                 pause_level,
+                (runs[i + 1][0] - runs[i][1]) / envelope.rate_hz if i < len(floors) else np.nan,
                 0.5 * (on[1] + off[1]),
             )
         )
