@@ -21,9 +21,10 @@ _NUMBER = re.compile(r"[+-]?(\d+([.,]\d*)?|[.,]\d+)([eE][+-]?\d+)?")
 _MISSING = frozenset(("", "na", "n/a", "nan", "-", "--", "---", "null", "none", ".", "inf", "-inf", "+inf"))
 _NAME_WITH_UNIT = re.compile(r"^(.*?)\s*[\[(]\s*([^\])]*?)\s*[\])]\s*$")
 _UNIT_SUFFIX = re.compile(
-    r"^(.*?)_(s|ms|us|min|h|hz|mmhg|kpa|percent|ml|l|l_per_min|l_per_s|ml_per_s|cmh2o|pa|g|mg|mv|uv|v|m_per_s2)$", re.I
+    r"^(.*?)_(s|ms|us|min|h|hz|mmhg|kpa|percent|ml|l|l_min|l_per_min|l_per_s|ml_per_s|cmh2o|pa|g|mg|mv|uv|v|m_per_s2)$", re.I
 )
-_SPELT_UNITS = {"l_per_min": "L/min", "l_per_s": "L/s", "ml_per_s": "mL/s", "percent": "%", "m_per_s2": "m/s2", "l": "L", "ml": "mL"}
+_SPELT_UNITS = {"l_min": "L/min", "l_per_min": "L/min", "l_per_s": "L/s", "ml_per_s": "mL/s", "percent": "%", "m_per_s2": "m/s2", "l": "L",
+                "ml": "mL"}
 _TIME_NAME = re.compile(r"\s*(rel(ative)?\.?|elapsed|rec(ording)?)?[ _]*(t|time|times|timestamp|time ?stamp|clock|zeit|uhrzeit|temps|tiempo|"
                         r"tempo|tijd|seconds?|secs?|sekunden|s|ms|datetime|date ?time)\s*\.?", re.I)
 _INDEX_NAME = re.compile(r"\s*(sample|index|idx|n|nr|no|#|row|i|sample ?(number|no|nr|index))\s*\.?", re.I)
