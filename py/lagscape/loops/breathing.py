@@ -272,7 +272,7 @@ class BreathingLoop:
             Signal("ventilation", "Ventilation", "L/min", output),
             Signal("paco2", "PaCO2", "mmHg", states[:, 0]),
             Signal("pvco2", "Mixed venous PCO2", "mmHg", states[:, 1]),
-            Signal("central_pco2", "Central chemoreceptor PCO2", "mmHg", states[:, -1]),
+            Signal("central_pco2", "Central PCO2", "mmHg", states[:, -1]),
         )
         return (*curves, *breathing_oxygen.oxygen_signals(self, states[:, 2], times)) if self.has_oxygen else curves
 

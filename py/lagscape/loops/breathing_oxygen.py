@@ -209,7 +209,7 @@ def oxygen_signals(loop: Any, arterial_po2: Array, times: Array | None) -> tuple
     ]
     if times is not None:
         seen = np.interp(np.asarray(times) - float(loop.sensor_delay_s), times, arterial_po2)
-        curves.append(Signal("spo2", "SpO2 at the sensor", "%", 100.0 * saturation(seen)))
+        curves.append(Signal("spo2", "SpO2", "%", 100.0 * saturation(seen)))
     return tuple(curves)
 
 

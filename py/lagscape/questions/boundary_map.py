@@ -90,7 +90,8 @@ def map_of(case: Case, window: MapWindow) -> BoundaryMap:
     loop = case.loop()
     delays = np.linspace(window.delay_low, window.delay_high, _DELAYS)
     high = 2.0 * window.sensitivity_high
-    found = boundary_curve(loop, (1e-3 * high, high), (window.delay_low, window.delay_high))
+    # A little more than the window, so that the boundary reaches both its ends.
+    found = boundary_curve(loop, (1e-3 * high, high), (0.9 * window.delay_low, 1.05 * window.delay_high))
     return BoundaryMap(window, delays, _lowest(found, delays))
 
 
