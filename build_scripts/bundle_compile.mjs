@@ -18,8 +18,11 @@ import json, os, py_compile
 with open(jobs_path) as file:
     jobs = json.load(file)
 for number, (source, target, shown) in enumerate(jobs, start=1):
-    py_compile.compile(f"/mounted/{source}", f"/mounted/{target}", dfile=shown, doraise=True,
-                       invalidation_mode=py_compile.PycInvalidationMode.UNCHECKED_HASH)
+    try:
+        py_compile.compile(f"/mounted/{source}", f"/mounted/{target}", dfile=shown, doraise=True,
+                           invalidation_mode=py_compile.PycInvalidationMode.UNCHECKED_HASH)
+    except py_compile.PyCompileError as error:
+        raise ValueError(f"{shown}: {error.exc_value}") from None
     if number % 100 == 0 or number == len(jobs):
         print(number, flush=True)
 `);

@@ -8,24 +8,29 @@
 from __future__ import annotations
 
 import argparse
+import os
 import sys
 from functools import partial
 from http.server import SimpleHTTPRequestHandler, ThreadingHTTPServer
 from pathlib import Path
-from typing import ClassVar
 
 from build_environment import ROOT
 from build_progress import BuildError, Progress
 from build_site import build_site
 
 DEFAULT_PORT = 8600
+CONTENT_TYPES = {
+    ".wasm": "application/wasm", ".js": "text/javascript", ".mjs": "text/javascript", ".css": "text/css", ".svg": "image/svg+xml",
+    ".webmanifest": "application/manifest+json", ".zip": "application/zip", ".bundle": "application/octet-stream",
+}
 
 
 class SiteHandler(SimpleHTTPRequestHandler):
     """A plain file server; folders named by their content may be kept for ever, all else is asked for again."""
 
-    extensions_map: ClassVar[dict[str, str]] = {**SimpleHTTPRequestHandler.extensions_map, ".wasm": "application/wasm", ".mjs": "text/javascript",
-                      ".js": "text/javascript", ".webmanifest": "application/manifest+json", ".whl": "application/zip"}
+    def guess_type(self, path: str | os.PathLike[str]) -> str:
+        """The content type; WebAssembly and modules must be named right, whatever this machine's own table says."""
+        return CONTENT_TYPES.get(Path(path).suffix) or super().guess_type(path)
 
     def end_headers(self) -> None:
         """Adds how long the browser may keep the answer."""
