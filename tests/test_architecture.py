@@ -30,6 +30,7 @@ MAY_IMPORT = {
     "recordings": {"errors", "units"},
     "questions": {"errors", "units", "quantities", "case", "loops", "engine", "recordings"},
     "handover": {"errors", "units", "quantities", "version", "case", "loops", "engine", "recordings", "questions"},
+    "surface": {"case", "engine", "questions"},
     "cohort": {"errors", "units", "version", "case", "loops", "questions", "handover"},
     "command_line": {"errors", "units", "version", "case", "recordings", "questions", "handover", "cohort"},
     "app": {"errors", "units", "quantities", "version", "case", "loops", "engine", "recordings", "questions", "handover", "lagscape"},
