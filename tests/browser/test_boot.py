@@ -84,7 +84,9 @@ def test_the_page_stays_on_its_origin_and_the_worker_s_requests_are_seen(ready_p
 def test_scipy_is_not_fetched_before_it_is_needed(new_context: NewContext, site: str) -> None:
     context, watch = new_context()
     open_ready(context, site)
-    assert [request for request in watch.requests if "scipy" in request.rsplit("/", 1)[-1]] == []
+    names = [request.rsplit("/", 1)[-1] for request in watch.requests]
+    # The script that could fetch it is a few hundred bytes and belongs to the page; scipy itself is megabytes in a zip or a wheel.
+    assert [name for name in names if ("scipy" in name or "openblas" in name) and not name.endswith(".js")] == []
 
 
 def test_a_missing_runtime_is_said_in_a_sentence_and_can_be_tried_again(new_context: NewContext, site: str) -> None:
