@@ -32,7 +32,8 @@ MAY_IMPORT = {
     "handover": {"errors", "units", "quantities", "version", "case", "loops", "engine", "recordings", "questions"},
     "surface": {"case", "engine", "questions"},
     "cohort": {"errors", "units", "version", "case", "loops", "questions", "handover"},
-    "command_line": {"errors", "units", "version", "case", "recordings", "questions", "handover", "cohort"},
+    "surface": {"errors", "units", "case", "engine", "questions"},
+    "command_line": {"errors", "units", "version", "surface", "case", "recordings", "questions", "handover", "cohort"},
     "app": {"errors", "units", "quantities", "version", "case", "loops", "engine", "recordings", "questions", "handover", "lagscape"},
 }
 """Part of the package to the other parts that it may import."""
