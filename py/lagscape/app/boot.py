@@ -8,8 +8,10 @@ from __future__ import annotations
 
 import gc
 import importlib
+import inspect
 import json
 import traceback
+from collections.abc import Iterable
 from typing import Any
 
 from . import panel_compat
@@ -28,6 +30,7 @@ def prepare(style_sheets: str) -> None:
 def import_drawing() -> None:
     """Imports Bokeh."""
     importlib.import_module("bokeh.plotting")
+    panel_compat.remember_defaults()
 
 
 def import_widgets() -> None:
@@ -38,6 +41,10 @@ def import_widgets() -> None:
 def import_application() -> None:
     """Imports the application's views."""
     importlib.import_module("lagscape.app.main")
+
+
+# Views that open over the middle: drawn when they are first opened or when nothing happens, so that the start does not wait for them.
+LATER = ("recording", "handover")
 
 
 class _Running:
@@ -65,6 +72,7 @@ class _Running:
         self.page.join(self._draw, self.trouble)
         self.roots: dict[str, str] = {}
         viewables = main.build(self.page)
+        self.waiting = {slot: viewables.pop(slot) for slot in LATER if slot in viewables}
         with self.document.models.freeze():  # the set of all models is worked out once, not once a root
             for slot, viewable in viewables.items():
                 self._add_root(slot, viewable)
@@ -84,6 +92,22 @@ class _Running:
         self.link.open()
         with self.link:
             self.document.callbacks.trigger_event(DocumentReady())
+
+    def draw_waiting(self, slots: Iterable[str]) -> None:
+        """Draws those of the slots that still wait."""
+        for slot in slots:
+            if slot in self.waiting:
+                viewable = self.waiting.pop(slot)
+                # A function in place of a view: then even its models are made only now.
+                self._draw(slot, viewable() if inspect.isfunction(viewable) or inspect.ismethod(viewable) else viewable)
+
+    def receive(self, name: str, fields: dict[str, Any]) -> None:
+        """Hands a command of the page to the application, after drawing what it may show."""
+        if name == "idle":
+            self.draw_waiting(LATER)
+        elif name == "show":
+            self.draw_waiting([fields["view"]])
+        self.page.receive(name, fields)
 
     def trouble(self, error: BaseException) -> None:
         """Tells the page of an error that nobody expected."""
@@ -110,6 +134,8 @@ class _Running:
     def _post(self, name: str, payload: dict[str, Any]) -> None:
         from pyodide.ffi import to_js
 
+        if name == "show" and self.link is not None:
+            self.draw_waiting([payload["view"]])
         data = payload.pop("data", None)
         self.host.call(name, json.dumps(payload), None if data is None else to_js(data))
 
@@ -158,6 +184,6 @@ def command(name: str, payload: str, file: Any) -> None:
         fields["file"] = open_browser_file(file, _running.host.readSlice, fields["name"], fields["bytes"])
     try:
         with _running.link:
-            _running.page.receive(name, fields)
+            _running.receive(name, fields)
     except Exception as error:
         _running.trouble(error)

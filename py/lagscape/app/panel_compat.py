@@ -8,6 +8,7 @@ of the start. Panel's components name style sheets of a content network: they ar
 
 from __future__ import annotations
 
+import functools
 import html
 import importlib.abc
 import importlib.machinery
@@ -15,7 +16,7 @@ import sys
 from types import ModuleType, SimpleNamespace
 from typing import Any
 
-__all__ = ["stand_in_for_unused", "use_own_style_sheets"]
+__all__ = ["remember_defaults", "stand_in_for_unused", "use_own_style_sheets"]
 
 RESOURCES = "panel.io.resources"
 
@@ -34,6 +35,18 @@ def stand_in_for_unused() -> None:
     _module("panel.chat")
     # Panel cleans the name of a custom component, which this program makes itself, with bleach: escaping serves as well.
     _module("bleach", sanitizer=SimpleNamespace(Cleaner=lambda **_: SimpleNamespace(clean=html.escape)))
+
+
+def remember_defaults() -> None:
+    """Has Bokeh look up the overridden defaults of a model class once. Call it after Bokeh is imported.
+
+    Bokeh walks all ancestors of the class for each property of each new model, a tenth of the time in which the page is built; the
+    answer never changes, because defaults are overridden in class bodies only.
+    """
+    from bokeh.core.has_props import HasProps
+
+    look_up = HasProps._overridden_defaults.__func__  # type: ignore[attr-defined]
+    HasProps._overridden_defaults = classmethod(functools.cache(look_up))  # type: ignore[method-assign, assignment, arg-type]
 
 
 def use_own_style_sheets(address: str) -> None:
