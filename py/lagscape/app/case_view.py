@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from html import escape
+from time import monotonic
 
 from lagscape.app.clinic_entries import ENTRIES, Field, apply_entry
 from lagscape.app.components.sheet import Request, Sheet
@@ -17,6 +18,7 @@ from lagscape.quantities import figure, from_display, quantity, to_display
 __all__ = ["CaseView"]
 
 _SLIDER_STEPS = 400
+_FOLLOW_EVERY_S = 0.12
 _DISCS = {Basis.MEASURED: "●", Basis.ASSUMED: "◐", Basis.TYPICAL: "○"}
 
 
@@ -29,12 +31,20 @@ class CaseView:
         self.typed: dict[str, str] = {}
         self.said: dict[str, str] = {}
         self.root = Sheet(self._handle)
-        for topic in ("settled", "units", "moving"):
-            bench.listen(topic, self.draw)
+        self._drawn_at = 0.0
+        bench.listen("settled", self.draw)
+        bench.listen("units", self.draw)
+        bench.listen("moving", self.follow)
         self.draw()
+
+    def follow(self) -> None:
+        """While the hand moves the numbers follow a few times a second: the dot and the traces go first."""
+        if monotonic() - self._drawn_at > _FOLLOW_EVERY_S:
+            self.draw()
 
     def draw(self) -> None:
         case = self.bench.case
+        self._drawn_at = monotonic()
         parts = [self._head(case)]
         groups: dict[str, list[ParameterSpecification]] = {}
         for specification in case.specifications.values():
@@ -57,7 +67,7 @@ class CaseView:
         )
         typical = f'<option value=""{" selected" if case.started_from is None else ""}>Typical numbers</option>'
         about = starting_case(case.started_from)[1].about if case.started_from else "Every number typical for an adult."
-        same = "" if case != case.start() else " disabled"
+        same = "" if case != self.bench.start.case else " disabled"
         undo = "" if bench.history.can_undo else " disabled"
         redo = "" if bench.history.can_redo else " disabled"
         refusal = self._refusal("")
@@ -79,7 +89,7 @@ class CaseView:
         shown, unit = to_display(number.value, item.unit, self.bench.units)
         position = _position(item, number.value)
         low, high = _position(item, item.typical_low), _position(item, item.typical_high)
-        start = _position(item, case.start().value(item.name)) if case.started_from else position
+        start = _position(item, self.bench.start.case.value(item.name)) if case.started_from else position
         open_ = self.opened == item.name
         refusal = self._refusal(item.name)
         label, name = escape(item.label), item.name

@@ -136,7 +136,7 @@ class MapView:
         self.plot.yaxis.axis_label = f"{loop.sensitivity_name} ({unit})" if unit else loop.sensitivity_name
         self.plot.xaxis.axis_label = f"{loop.delay_name} (s)"
         self._tick_units(loop.sensitivity_unit)
-        start = case.start().loop()
+        start = self.bench.start.judgement.loop
         self.hollow.data = {"delay": [float(start.delay)], "sensitivity": [float(start.sensitivity)]}
         self._draw_levers()
         self._say("")

@@ -8,6 +8,7 @@ from typing import Any
 import numpy as np
 import panel as pn
 from bokeh.core.properties import value
+from bokeh.core.property.validation import validate
 from bokeh.models import ColumnDataSource, Label, PanTool, Range1d, ResetTool, Span, WheelZoomTool
 from bokeh.plotting import figure
 
@@ -117,7 +118,9 @@ class TraceView:
 
     def follow(self) -> None:
         """Redraw only what follows the hand."""
-        self._run("now", self.bench.case, self.bench.judged.judgement, grow_only=True)
+        # Bokeh would look at every number of every curve to see whether it is one.
+        with validate(False):
+            self._run("now", self.bench.case, self.bench.judged.judgement, grow_only=True)
 
     def draw(self) -> None:
         """Redraw all: the run's length, the start behind, the levers' answer, the bar of disturbances."""

@@ -86,9 +86,10 @@ class Workbench:
     @property
     def start(self) -> Judged:
         """The case that this one started from, drawn behind."""
-        start = self.case.start()
-        if self._start_judged.case != start:
-            self._start_judged = Judged(start)
+        case = self.case
+        held = self._start_judged.case
+        if held.started_from != case.started_from or held.kind != case.kind:
+            self._start_judged = Judged(case.start())
         return self._start_judged
 
     def listen(self, topic: str, callback: Callable[[], None]) -> None:
