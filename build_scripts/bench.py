@@ -42,6 +42,9 @@ def main() -> int:
     except BuildError as error:
         print(f"Stopped: {error}", file=sys.stderr)
         return 1
+    # Said first, because it decides what the numbers are worth.
+    load = f"{os.getloadavg()[0]:.1f}" if hasattr(os, "getloadavg") else "not known"
+    print(f"Load of this machine before the run: {load}, on {os.cpu_count()} cores. Over 0.5, times are too long.", flush=True)
     _native(progress)
     if chromium and dist:
         _browser(dist, chromium, progress)
@@ -102,8 +105,8 @@ def _browser(dist: Path, chromium: Path, progress: Progress) -> None:
         _title("Whole drag on the page: pointer to painted trace, one move at a time")
         drags = bench.drags()
         print(f"worker's part of a drag          {drags['worker']:8.1f} ms")
-        print(f"whole drag                       {drags['whole']:8.1f} ms, at worst {drags['worst']:.1f} ms")
-        print(f"round trip with empty callback   {drags['empty']:8.1f} ms")
+        print(f"whole drag                       {drags['whole']:8.1f} ms, from {drags['best']:.1f} to {drags['worst']:.1f} ms")
+        print(f"round trip with empty callback   {drags['empty']:8.1f} ms, from {drags['empty_best']:.1f} ms")
         print(f"whole drag / empty round trip    {drags['whole'] / drags['empty']:8.2f}    (wished: at most 2)", flush=True)
         progress.step("start of the page")
         _title("Start, nothing cached, median of three in turn")
@@ -130,7 +133,7 @@ def _libraries(progress: Progress) -> None:
         else:
             rivals = [item for item in ours if item.problem == run.problem and item.error <= run.error]
             best = min(rivals, key=lambda item: item.milliseconds, default=None)
-            beside = f"   {best.milliseconds:.1f} ms, {run.milliseconds / best.milliseconds:.2f} times as fast" if best else "   none"
+            beside = f"   {best.milliseconds:.1f} ms, {run.milliseconds / best.milliseconds:.3g} times as fast" if best else "   none"
         print(f"{run.problem:4}{run.solver:10}{run.setting:18}{run.milliseconds:>10.1f}{run.error:>12.1e}{beside}", flush=True)
 
 

@@ -128,7 +128,9 @@ class BrowserBench:
             "empty": median(item["total"] for item in empty[5:]),
             "whole": median(item["total"] for item in real),
             "worker": median(item["worker"] for item in real),
+            "best": min(item["total"] for item in real),
             "worst": max(item["total"] for item in real),
+            "empty_best": min(item["total"] for item in empty[5:]),
         }
 
 

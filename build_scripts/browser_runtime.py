@@ -122,7 +122,7 @@ class BrowserRuntime:
         """Loads scipy as the application does when it needs it."""
         self._ask("scipy")
 
-    def run(self, module: str, name: str, **values: Any) -> Any:
+    def run(self, module: str, name: str, /, **values: Any) -> Any:
         """Calls module.name(**values) inside; values and result are JSON values.
 
         Raises
