@@ -36,7 +36,9 @@ export function countedFetch(plainFetch, sizes, report) {
     if (name.endsWith(".wasm")) {
       // The browser keeps compiled WebAssembly with the answer itself: a copy of the answer would be compiled anew at every visit.
       countWhenFetched(address, sizes[name]);
-      return answer;
+      if (answer.headers.get("content-type")?.startsWith("application/wasm")) return answer;
+      // Under any other type the browser refuses to compile what it loads, and the runtime would wait for ever.
+      return new Response(answer.body, { headers: { "content-type": "application/wasm" } });
     }
     const counter = new TransformStream({
       transform(chunk, controller) {

@@ -106,6 +106,20 @@ def test_a_missing_runtime_is_said_in_a_sentence_and_can_be_tried_again(new_cont
     assert not page.locator("#failed").is_visible()
 
 
+def test_a_server_that_does_not_know_webassembly_still_starts(new_context: NewContext, site: str) -> None:
+    # A plain server may send it as any bytes; the browser compiles only what comes as application/wasm.
+    context, _ = new_context()
+
+    def as_bytes(route: Any) -> None:
+        answer = route.fetch()
+        route.fulfill(response=answer, headers={**answer.headers, "content-type": "application/octet-stream"})
+
+    context.route("**/*.wasm", as_bytes)
+    page = open_ready(context, site)
+    assert page.locator("#standing-text").inner_text()
+    page.close()
+
+
 def test_a_missing_page_script_is_said_in_a_sentence(new_context: NewContext, site: str) -> None:
     context, watch = new_context()
     context.route("**/page.js", lambda route: route.fulfill(status=404, body="gone"))
