@@ -134,7 +134,7 @@ def test_less_gain_is_proportionally_less_loop_gain(dose: float) -> None:
 @pytest.mark.parametrize(
     ("kind", "name", "dose", "says"),
     [
-        ("breathing", "servo_ventilation", 1.0, "The breathing loop has no lever 'servo_ventilation'; it has: acetazolamide_mg_day"),
+        ("breathing", "servo_ventilation", 1.0, "The breathing loop has no lever 'servo_ventilation'; it has: waking_share"),
         ("breathing", "reflex_gain_fall_percent", 1.0, "The breathing loop has no lever"),
         ("nothing", "oxygen_l_min", 1.0, "The nothing loop has no lever 'oxygen_l_min'; it has none"),
         ("breathing", "oxygen_l_min", 9.0, "The dose of Oxygen must be a number from 0 to 6 L/min; got 9."),

@@ -36,7 +36,7 @@ __all__ = [
     "starting_case",
 ]
 
-MOST_LEVERS = 12
+MOST_LEVERS = 14
 """No case carries more levers than this; the link's length counts on it."""
 
 LARGEST_LOG_SPREAD = 2.0

@@ -19,7 +19,30 @@ __all__ = ["LEVERS"]
 _UNPUBLISHED = "No published loop gain known to us."
 _OPEN = "Not from a trial"
 
+_READING = "A way to read the loop in another state, not a treatment."
+
 _BREATHING = (
+    Lever(
+        "waking_share", "Waking", "share", 0.0, 1.0, 1.0, 0.1,
+        "Resting PaCO2, CO2 production and both CO2 gains: the controller's set point, threshold and slope.",
+        "From quiet sleep to waking PaCO2 falls by 2 mmHg, CO2 production rises by 15 % and both gains by 8 %, as between the healthy "
+        "starting cases.",
+        _UNPUBLISHED, _OPEN, f"{_READING} Lay it only on a case that is asleep.", "State", rules.waking,
+    ),
+    Lever(
+        "rem_sleep_share", "REM sleep", "share", 0.0, 1.0, 1.0, 0.1,
+        "Both CO2 gains and resting PaCO2.",
+        "From NREM to REM sleep both gains fall by 40 % and PaCO2 rises by 1 mmHg. REM sleep's own irregular breathing is not in the loop.",
+        "Hypercapnic response 0.45 in REM against 0.75 L/min/mmHg in NREM sleep.", "Douglas 1982, Am Rev Respir Dis 126:758",
+        f"{_READING} Lay it only on a case in NREM sleep.", "State", rules.rem_sleep,
+    ),
+    Lever(
+        "exercise_co2_rise_percent", "Exercise", "%", 0.0, 400.0, 100.0, 10.0,
+        "CO2 production and cardiac output together, and both delays.",
+        "CO2 production is multiplied by 1 plus the dose at the same PaCO2; cardiac output rises by 6 L/min per L/min of oxygen uptake "
+        "(common practice, no source) and both delays shorten by its inverse.",
+        _UNPUBLISHED, _OPEN, f"{_READING} A failing heart may not raise its output so.", "State", rules.exercise,
+    ),
     Lever(
         "acetazolamide_mg_day", "Acetazolamide", "mg/day", 0.0, 1000.0, 250.0, 125.0,
         "The controller's line: PCO2 falls and ventilation rises, so plant gain falls. The slope stays.",

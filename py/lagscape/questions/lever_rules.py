@@ -20,10 +20,13 @@ __all__ = [
     "chemoreflex_gain_fall",
     "cpap",
     "descent",
+    "exercise",
     "inspired_co2",
     "lateral_posture",
     "metabolic_rate_rise",
     "oxygen",
+    "rem_sleep",
+    "waking",
 ]
 
 _RESPIRATORY_QUOTIENT = 0.8
@@ -49,6 +52,13 @@ CPAP_L_PER_CMH2O = 0.06
 LATERAL_LUNG_VOLUME = 87.3 / 81.0
 """Functional residual capacity on the side over supine, each in percent of the seated one (20 patients, PMC5895090)."""
 
+WAKING_PACO2_MMHG, WAKING_CO2, WAKING_GAIN = 2.0, 0.15, 0.08
+"""Waking against quiet sleep, as between the two healthy starting cases (gains: Irsigler 1976 over Solin 2000; rest common practice)."""
+REM_GAIN, REM_PACO2_MMHG = 0.45 / 0.75, 1.0
+"""REM over NREM sleep: hypercapnic response 0.45 over 0.75 (Douglas 1982, ARRD 126:758); PaCO2 common practice, no source."""
+OUTPUT_PER_CO2 = 6.0 / 0.85
+"""L/min of cardiac output per L/min of CO2: about 6 per L/min of oxygen uptake (common practice, no source), at R 0.85."""
+
 BREATHS_PER_MIN = 15.0
 """Turns an added dead space in mL into a ventilation: common practice, no source. The loop itself has no breaths."""
 _LARGEST_DEAD_SPACE = 0.95
@@ -70,6 +80,44 @@ def acetazolamide(loop: Any, dose: Any) -> Any:
     share = share * (ACETAZOLAMIDE_FULL_MG_DAY + ACETAZOLAMIDE_HALF_MG_DAY) / ACETAZOLAMIDE_FULL_MG_DAY
     threshold = np.maximum(loop.resting_paco2_mmhg - loop.line_ventilation / loop.sensitivity, 0.0)
     return loop.with_numbers(resting_paco2_mmhg=loop.resting_paco2_mmhg - share * ACETAZOLAMIDE_SHIFT * threshold)
+
+
+def _resting_at(loop: Any, pressure: Any, production: Any) -> Any:
+    """The loop whose controller's line passes through this resting PaCO2 at this CO2 production, as far off its rest as before."""
+    need = production / loop.co2_production_l_min
+    need = need * (loop.resting_paco2_mmhg - loop.inspired_pco2_mmhg) / (pressure - loop.inspired_pco2_mmhg)
+    return loop.with_numbers(
+        resting_paco2_mmhg=pressure, co2_production_l_min=production, line_ventilation_l_min=loop.line_ventilation * need
+    )
+
+
+def _gains_times(loop: Any, factor: Any) -> Any:
+    return loop.with_numbers(
+        peripheral_gain_l_min_mmhg=loop.peripheral_gain_l_min_mmhg * factor,
+        central_gain_l_min_mmhg=loop.central_gain_l_min_mmhg * factor,
+    )
+
+
+def waking(loop: Any, dose: Any) -> Any:
+    """Share of the way from quiet sleep to waking: PaCO2 falls by 2 mmHg, CO2 production rises by 15 %, both gains by 8 %."""
+    awake = _resting_at(loop, loop.resting_paco2_mmhg - WAKING_PACO2_MMHG * dose, loop.co2_production_l_min * (1.0 + WAKING_CO2 * dose))
+    return _gains_times(awake, 1.0 + WAKING_GAIN * dose)
+
+
+def rem_sleep(loop: Any, dose: Any) -> Any:
+    """Share of the way from NREM to REM sleep: both gains fall by 40 %, PaCO2 rises by 1 mmHg."""
+    asleep = _resting_at(loop, loop.resting_paco2_mmhg + REM_PACO2_MMHG * dose, loop.co2_production_l_min)
+    return _gains_times(asleep, 1.0 - (1.0 - REM_GAIN) * dose)
+
+
+def exercise(loop: Any, dose: Any) -> Any:
+    """Percent more CO2 production at the same PaCO2; cardiac output rises with it and both delays shorten by its inverse."""
+    production = loop.co2_production_l_min * (1.0 + dose / 100.0)
+    output = loop.cardiac_output_l_min + OUTPUT_PER_CO2 * (production - loop.co2_production_l_min)
+    faster = output / loop.cardiac_output_l_min
+    return _resting_at(loop, loop.resting_paco2_mmhg, production).with_numbers(
+        cardiac_output_l_min=output, peripheral_delay_s=loop.peripheral_delay_s / faster, central_delay_s=loop.central_delay_s / faster
+    )
 
 
 def inspired_co2(loop: Any, dose: Any) -> Any:
