@@ -225,6 +225,7 @@ def _invented_effort() -> bytes:
 
 
 def _open(view: RecordingView, data: bytes, name: str = "night.csv") -> None:
+    assert view.root is not None
     asyncio.run(view.open({"name": name, "bytes": len(data), "file": io.BytesIO(data)}))
 
 

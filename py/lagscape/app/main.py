@@ -13,7 +13,7 @@ from lagscape.app.lever_view import LeverView
 from lagscape.app.map_view import MapView
 from lagscape.app.page_link import PageLink
 from lagscape.app.recording_view import RecordingView
-from lagscape.app.scipy_loader import ensure_scipy
+from lagscape.app.scipy_loader import prepare_scipy
 from lagscape.app.share_view import ShareView
 from lagscape.app.standing_view import StandingView
 from lagscape.app.trace_view import TraceView
@@ -41,8 +41,8 @@ def build(page: PageLink) -> dict[str, Any]:
         "map": MapView(bench).root,
         "traces": TraceView(bench).root,
         "standing": pn.Column(*(view(bench).root for view in right), sizing_mode="stretch_width"),
-        "recording": recording.root,
-        "handover": HandoverView(bench).root,
+        "recording": lambda: recording.root,
+        "handover": lambda: HandoverView(bench).root,
     }
 
 
@@ -83,7 +83,7 @@ class _Commands:
     async def prepare(self, _payload: Any) -> None:
         """Fetch scipy while nothing happens; a failure is said when a recording asks for it."""
         try:
-            await ensure_scipy()
+            await prepare_scipy()
         except ImportError:
             return
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from functools import cached_property
 from typing import Any
 
 import numpy as np
@@ -39,17 +40,24 @@ class RecordingView:
         self.measurement: BreathingMeasurement | None = None
         self.laying: Laying | None = None
         self.refusal = ""
+        self._built = False
         self._waiting: tuple[Any, str] | None = None
         self._whole = Range1d(0.0, 1.0)
         self._shown = Range1d(0.0, 1.0)
-        self._build()
         bench.listen("theme", self.dress)
         bench.listen("units", self.write)
         bench.page.on("open_recording", self.open)
+
+    @cached_property
+    def root(self) -> Any:
+        """The view, built when it is first asked for: the start of the page does not wait for it."""
+        drawn = self._build()
+        self._built = True
         self.dress()
         self.write()
+        return drawn
 
-    def _build(self) -> None:
+    def _build(self) -> Any:
         empty: dict[str, list[float]] = {"time": [], "low": [], "high": []}
         self.strip_source, self.window_source = ColumnDataSource(dict(empty)), ColumnDataSource(dict(empty))
         self.envelope = ColumnDataSource({"time": [], "value": []})
@@ -99,13 +107,15 @@ class RecordingView:
             styles={"flex": "3 1 480px", "min-width": "0", "width": "auto"},
         )
         self.side.styles = {"flex": "1 1 310px", "min-width": "0", "width": "auto"}
-        self.root = pn.FlexBox(drawn, self.side, gap="20px", align_items="flex-start", sizing_mode="stretch_width")
+        return pn.FlexBox(drawn, self.side, gap="20px", align_items="flex-start", sizing_mode="stretch_width")
 
     def cycles_on_strip(self) -> ColumnDataSource:
         self.strip_cycles = ColumnDataSource({"start": [], "stop": [], "low": []})
         return self.strip_cycles
 
     def dress(self) -> None:
+        if not self._built:
+            return
         palette = PALETTES[self.bench.theme]
         for item in (self.strip, self.window):
             dress(item, palette)
@@ -127,6 +137,7 @@ class RecordingView:
         """Read a file that the user chose or dropped, and measure its likeliest channel."""
         page = self.bench.page
         self.refusal, self.laying = "", None
+        _ = self.root
         page.send("show", {"view": "recording", "open": True})
         page.send("working", {"text": f"reading {payload['name']}"})
         try:
@@ -193,6 +204,8 @@ class RecordingView:
 
     def write(self) -> None:
         """Rewrite the head and the side from what is known now."""
+        if not self._built:
+            return
         if self.bench.measurement is not self.measurement:
             self.bench.measurement = self.measurement
             self.bench.tell("recording")
