@@ -9,7 +9,7 @@ import numpy as np
 import panel as pn
 from bokeh.core.properties import value
 from bokeh.events import Tap
-from bokeh.models import ColumnDataSource, FixedTicker, PanTool, Range1d, RangeTool, ResetTool, WheelZoomTool
+from bokeh.models import ColumnDataSource, FixedTicker, LinearAxis, PanTool, Range1d, RangeTool, ResetTool, WheelZoomTool
 from bokeh.plotting import figure
 
 from lagscape.app.components.sheet import Request, Sheet
@@ -63,7 +63,7 @@ class RecordingView:
         self.envelope = ColumnDataSource({"time": [], "value": []})
         self.cycles = ColumnDataSource({"start": [], "stop": [], "turn": [], "middle": [], "text": [], "alpha": []})
         self.masked = ColumnDataSource({"start": [], "stop": [], "text": []})
-        border: dict[str, Any] = {"min_border_left": 60, "min_border_right": 14, "toolbar_location": None, "sizing_mode": "stretch_width"}
+        border: dict[str, Any] = {"min_border_left": 60, "min_border_right": 54, "toolbar_location": None, "sizing_mode": "stretch_width"}
         self.strip = figure(height=110, x_range=self._whole, tools=[], min_border_bottom=30, y_range=Range1d(0.0, 1.0), **border)
         tool = RangeTool(x_range=self._shown)
         tool.overlay.fill_alpha = 0.18
@@ -92,7 +92,8 @@ class RecordingView:
             y=0.45, left="start", right="stop", height=0.88, source=self.masked, y_range_name="lane", fill_alpha=0.08, hatch_pattern="x",
             hatch_alpha=0.35, line_alpha=0.0,
         )  # fmt: skip
-        for item in (self.strip, self.window):
+        self._build_night(border)
+        for item in (self.strip, self.night, self.window):
             item.xaxis.ticker = FixedTicker(ticks=[])
             item.yaxis.ticker.desired_num_ticks = 3
         self.strip.yaxis.visible = False
@@ -103,11 +104,37 @@ class RecordingView:
         drawn = pn.Column(
             self.head,
             pn.pane.Bokeh(self.strip, sizing_mode="stretch_width"),
+            pn.pane.Bokeh(self.night, sizing_mode="stretch_width"),
             pn.pane.Bokeh(self.window, sizing_mode="stretch_width"),
             styles={"flex": "3 1 480px", "min-width": "0", "width": "auto"},
         )
         self.side.styles = {"flex": "1 1 310px", "min-width": "0", "width": "auto"}
         return pn.FlexBox(drawn, self.side, gap="20px", align_items="flex-start", sizing_mode="stretch_width")
+
+    def _build_night(self, border: dict[str, Any]) -> None:
+        """The whole recording in one picture: each cycle's length and duty ratio over the time at which it stands."""
+        self.per_cycle = ColumnDataSource({"time": [], "length": [], "duty": []})
+        self.lengths, self.duties = Range1d(0.0, 1.0), Range1d(0.0, 1.05)
+        self.night = figure(height=120, x_range=self._whole, y_range=self.lengths, tools=[], min_border_bottom=8, **border)
+        self.night.extra_y_ranges = {"duty": self.duties}
+        self.duty_axis = LinearAxis(y_range_name="duty", axis_label="Duty ratio □", ticker=FixedTicker(ticks=[0.0, 0.5, 1.0]))
+        self.night.add_layout(self.duty_axis, "right")
+        self.night.yaxis[0].axis_label = "Cycle (s) ●"
+        self.night.xaxis.visible = False
+        self.length_marks = self.night.scatter("time", "length", source=self.per_cycle, size=5)
+        self.duty_marks = self.night.scatter(
+            "time", "duty", source=self.per_cycle, size=5, marker="square", fill_alpha=0.0, y_range_name="duty"
+        )
+
+    def _draw_night(self) -> None:
+        used = [] if self.measurement is None else [cycle for cycle in self.measurement.cycles if not cycle.excluded]
+        lengths = [cycle.cycle_length_s for cycle in used]
+        self.per_cycle.data = {
+            "time": [0.5 * (cycle.start_s + cycle.stop_s) for cycle in used],
+            "length": lengths,
+            "duty": [np.nan if cycle.duty_ratio is None else cycle.duty_ratio for cycle in used],
+        }
+        self.lengths.update(start=0.0, end=1.15 * max(lengths, default=1.0))
 
     def cycles_on_strip(self) -> ColumnDataSource:
         self.strip_cycles = ColumnDataSource({"start": [], "stop": [], "low": []})
@@ -117,8 +144,10 @@ class RecordingView:
         if not self._built:
             return
         palette = PALETTES[self.bench.theme]
-        for item in (self.strip, self.window):
+        for item in (self.strip, self.night, self.window):
             dress(item, palette)
+        self.length_marks.glyph.fill_color = self.length_marks.glyph.line_color = palette.inside
+        self.duty_marks.glyph.line_color = palette.outside
         for band in (self.strip_band, self.window_band):
             band.glyph.fill_color = palette.quiet
             band.glyph.fill_alpha = 0.55
@@ -195,6 +224,7 @@ class RecordingView:
             self.measurement = None
             self.refusal = str(problem)
         self._draw_cycles()
+        self._draw_night()
         self._draw_window()
         self.write()
 
@@ -287,6 +317,7 @@ class RecordingView:
         self.measurement = self.measurement.without(out)
         self.laying = None
         self._draw_cycles()
+        self._draw_night()
         self.write()
 
     def _handle(self, request: Request) -> None:
