@@ -4,8 +4,7 @@ from __future__ import annotations
 
 from html import escape
 
-from lagscape.app.components.sheet import Sheet
-from lagscape.app.workbench import Workbench
+from lagscape.app.rested_view import RestedView
 from lagscape.quantities import figure
 from lagscape.questions.certainty import Certainty, Interval, certainty
 from lagscape.questions.standing import Standing
@@ -13,23 +12,11 @@ from lagscape.questions.standing import Standing
 __all__ = ["CertaintyView"]
 
 
-class CertaintyView:
-    """Worked out when the hand has rested; the old figures stay, greyed, until then."""
+class CertaintyView(RestedView):
+    """See the module."""
 
-    def __init__(self, bench: Workbench) -> None:
-        self.bench = bench
-        self.root = Sheet()
-        self._shown = ""
-        bench.listen("settled", self.draw)
-        self.draw()
-
-    def draw(self) -> None:
-        self.root.show(f'<div class="waiting">{self._shown}</div>' if self._shown else "")
-        self.bench.when_rested(self._work_out)
-
-    def _work_out(self) -> None:
-        self._shown = _words(certainty(self.bench.case), bool(self.bench.case.levers))
-        self.root.show(self._shown)
+    def words(self) -> str:
+        return _words(certainty(self.bench.case), bool(self.bench.case.levers))
 
 
 def _words(found: Certainty, levers: bool) -> str:

@@ -4,31 +4,18 @@ from __future__ import annotations
 
 from html import escape
 
-from lagscape.app.components.sheet import Sheet
-from lagscape.app.workbench import Workbench
+from lagscape.app.rested_view import RestedView
 from lagscape.quantities import figure
 from lagscape.questions.share import Share, share_of_excess
 
 __all__ = ["ShareView"]
 
 
-class ShareView:
-    """Worked out when the hand has rested; the old bars stay, greyed, until then."""
+class ShareView(RestedView):
+    """See the module."""
 
-    def __init__(self, bench: Workbench) -> None:
-        self.bench = bench
-        self.root = Sheet()
-        self._shown = ""
-        bench.listen("settled", self.draw)
-        self.draw()
-
-    def draw(self) -> None:
-        self.root.show(f'<div class="waiting">{self._shown}</div>' if self._shown else "")
-        self.bench.when_rested(self._work_out)
-
-    def _work_out(self) -> None:
-        self._shown = _bars(share_of_excess(self.bench.case))
-        self.root.show(self._shown)
+    def words(self) -> str:
+        return _bars(share_of_excess(self.bench.case))
 
 
 def _bars(found: Share) -> str:
