@@ -246,6 +246,20 @@ def test_a_recording_is_read_measured_corrected_and_laid(bench):
     assert bench.measurement is view.measurement
 
 
+def test_a_loop_is_fitted_to_the_recording_shown_and_taken(bench):
+    view = RecordingView(bench)
+    _open(view, _invented_effort())
+    do(Side(view), "fit", event="click")
+    said = view.side.content["html"]
+    assert "The most plausible loop" in said and "90 % intervals" in said
+    # The fitted loop's ventilation lies over every cycle used, one broken line each.
+    assert np.isnan(view.modelled.data["time"]).sum() == len(view.measurement.used)
+    do(Side(view), "take-fit", event="click")
+    # Oracle: the recording's construction, 45 s; the fit allows its own model error of some per cent.
+    assert bench.judged.judgement.cycle_length == pytest.approx(45.0, rel=0.06)
+    assert bench.history.can_undo and "Take this loop" not in view.side.content["html"]
+
+
 def test_a_table_without_times_asks_for_its_rate_and_then_opens(bench):
     view = RecordingView(bench)
     data = b"\n".join(line.split(b",")[1] for line in _invented_effort().splitlines())

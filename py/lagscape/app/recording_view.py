@@ -18,8 +18,11 @@ from lagscape.app.recording_words import recording_summary
 from lagscape.app.scipy_loader import ensure_scipy
 from lagscape.app.workbench import Workbench
 from lagscape.errors import InvalidInputError, RecordingError
+from lagscape.questions.fit import Fit, fit_recording
+from lagscape.questions.fit_measured import measured_from
 from lagscape.questions.lay import Laying, lay_measurement
-from lagscape.recordings import BreathingMeasurement, Recording, measure_breathing, overview, read_recording
+from lagscape.questions.standing import judge
+from lagscape.recordings import BreathingMeasurement, Recording, measure_breathing, measure_saturation_lag, overview, read_recording
 from lagscape.recordings.recording import Signal
 
 __all__ = ["RecordingView"]
@@ -39,6 +42,7 @@ class RecordingView:
         self.signal: Signal | None = None
         self.measurement: BreathingMeasurement | None = None
         self.laying: Laying | None = None
+        self.fit: Fit | None = None
         self.refusal = ""
         self._built = False
         self._waiting: tuple[Any, str] | None = None
@@ -61,6 +65,7 @@ class RecordingView:
         empty: dict[str, list[float]] = {"time": [], "low": [], "high": []}
         self.strip_source, self.window_source = ColumnDataSource(dict(empty)), ColumnDataSource(dict(empty))
         self.envelope = ColumnDataSource({"time": [], "value": []})
+        self.modelled = ColumnDataSource({"time": [], "value": []})
         self.cycles = ColumnDataSource({"start": [], "stop": [], "turn": [], "middle": [], "text": [], "alpha": []})
         self.masked = ColumnDataSource({"start": [], "stop": [], "text": []})
         border: dict[str, Any] = {"min_border_left": 60, "min_border_right": 54, "toolbar_location": None, "sizing_mode": "stretch_width"}
@@ -81,6 +86,7 @@ class RecordingView:
         self.window_band = self.window.varea("time", "low", "high", source=self.window_source)
         self.window_line = self.window.line("time", "high", source=self.window_source, line_width=1)
         self.envelope_line = self.window.line("time", "value", source=self.envelope, line_width=1.6, line_dash=[5, 3])
+        self.modelled_line = self.window.line("time", "value", source=self.modelled, line_width=2.0, line_dash=[9, 4])
         lane = {"source": self.cycles, "y_range_name": "lane"}
         self.breathing = self.window.segment("start", 0.955, "turn", 0.955, line_width=7, line_alpha="alpha", **lane)
         self.silent = self.window.segment("turn", 0.955, "stop", 0.955, line_width=2, line_alpha="alpha", **lane)
@@ -154,6 +160,7 @@ class RecordingView:
         self.window_line.glyph.line_color = palette.quiet
         self.strip_marks.glyph.line_color = palette.inside
         self.envelope_line.glyph.line_color = palette.inside
+        self.modelled_line.glyph.line_color = palette.outside
         self.breathing.glyph.line_color = palette.inside
         self.silent.glyph.line_color = palette.outside
         self.edges.glyph.line_color = palette.ink
@@ -165,7 +172,7 @@ class RecordingView:
     async def open(self, payload: Any) -> None:
         """Read a file that the user chose or dropped, and measure its likeliest channel."""
         page = self.bench.page
-        self.refusal, self.laying = "", None
+        self.refusal, self.laying, self.fit = "", None, None
         _ = self.root
         page.send("show", {"view": "recording", "open": True})
         page.send("working", {"text": f"reading {payload['name']}"})
@@ -216,7 +223,7 @@ class RecordingView:
 
     def _measure(self, window: tuple[float, float] | None) -> None:
         assert self.recording is not None and self.signal is not None
-        self.refusal, self.laying = "", None
+        self.refusal, self.laying, self.fit = "", None, None
         kind = self.signal.kind if self.signal.kind in _READABLE_KINDS else "effort"
         try:
             self.measurement = measure_breathing(self.recording, self.signal.name, window=window, kind=kind)
@@ -287,9 +294,24 @@ class RecordingView:
         if self.signal.kind == "ventilation":
             middle = 0.0
         self.envelope.data = {"time": time, "value": value + middle}
+        self._draw_model(middle)
         high, low = np.nanmax(band["high"]), np.nanmin(band["low"])
         self.window.y_range.update(start=float(low - 0.05 * (high - low)), end=float(high + 0.22 * (high - low)))
         _time_ticks(self.window, start, stop)
+
+    def _draw_model(self, middle: float) -> None:
+        """The fitted loop's ventilation over each cycle from its onset, as high as the recording's cycles are in the middle."""
+        model = None if self.fit is None else judge(self.fit.case).cycle
+        if model is None or self.measurement is None or model.output is None or model.times is None:
+            self.modelled.data = {"time": [], "value": []}
+            return
+        # The drawn period begins where ventilation begins, as the recording's cycles do.
+        first = int(np.argmax((model.output[1:] > 0.05 * model.output.max()) & (model.output[:-1] <= 0.05 * model.output.max())))
+        shape = np.roll(model.output[:-1], -first) / model.output.max()
+        used = self.measurement.used
+        height = float(np.median([cycle.peak for cycle in used]))
+        times = np.concatenate([np.append(cycle.start_s + model.times[:-1], np.nan) for cycle in used])
+        self.modelled.data = {"time": times, "value": middle + height * np.tile(np.append(shape, np.nan), len(used))}
 
     def _window_moved(self, _attribute: str, _old: float, _new: float) -> None:
         self._draw_window()
@@ -315,7 +337,7 @@ class RecordingView:
         else:
             out.add(number)
         self.measurement = self.measurement.without(out)
-        self.laying = None
+        self.laying = self.fit = None
         self._draw_cycles()
         self._draw_night()
         self.write()
@@ -337,6 +359,19 @@ class RecordingView:
             self._read_with_rate(request.value)
         elif request.act == "prepare":
             self._prepare()
+        elif request.act == "fit":
+            self._fit()
+        elif request.act == "drop-fit":
+            self.fit = None
+            self._draw_window()
+            self.write()
+        elif request.act == "take-fit" and self.fit is not None:
+            taken, self.fit = self.fit, None
+            bench.begin(taken.case)
+            bench.page.send("show", {"view": "recording", "open": False})
+            bench.page.send("say", {"place": "case", "text": "The fitted loop is the case. Undo goes back.", "tone": "note"})
+            self._draw_window()
+            self.write()
         elif request.act == "cancel":
             self.laying = None
             self.write()
@@ -359,6 +394,19 @@ class RecordingView:
             return
         file.seek(0)
         self._read(file, name, rate)
+
+    def _fit(self) -> None:
+        """The most plausible loop behind the measured cycles, with SpO2 where the recording has it."""
+        assert self.recording is not None and self.measurement is not None
+        self.refusal, self.laying = "", None
+        try:
+            oximeter = self.recording.of_kind("SpO2")
+            saturation = measure_saturation_lag(self.recording, self.measurement, oximeter[0].name) if oximeter else None
+            self.fit = fit_recording(self.bench.case, measured_from(self.measurement, saturation))
+        except (InvalidInputError, RecordingError) as problem:
+            self.refusal = str(problem)
+        self._draw_window()
+        self.write()
 
     def _prepare(self) -> None:
         assert self.measurement is not None

@@ -5,6 +5,7 @@ from __future__ import annotations
 from html import escape
 from typing import TYPE_CHECKING, Any
 
+from lagscape.app.fit_words import fit_html
 from lagscape.quantities import figure, to_display
 
 if TYPE_CHECKING:
@@ -77,11 +78,17 @@ def _side(view: RecordingView) -> str:
     reasons = "".join(f"<li>{escape(reason)}</li>" for reason in measured.quality_reasons)
     excluded = len(measured.cycles) - used
     window = f"{_clock(measured.window[0])} to {_clock(measured.window[1])}"
-    button = '<button class="main" data-act="prepare">Lay these on the case</button>' if used else ""
+    button = (
+        '<div class="tools"><button class="main" data-act="prepare">Lay these on the case</button>'
+        '<button data-act="fit">Fit the loop to it</button></div>'
+        if used
+        else ""
+    )
+    fit = fit_html(view.fit, view.bench.units) if view.fit is not None else ""
     return (
         f'<div class="rec-side"><h3>{used} cycles used, {excluded} excluded</h3><p class="quiet">Measured from {window}.</p>'
         f'<table class="figures"><tr><th></th><td>median</td><td>quartiles</td></tr>{rows}</table>{meaning}'
-        f"<h3>Quality: {quality}</h3><ul>{reasons}</ul>{_masked(measured)}{_laying(view)}{button}{_table(view, measured)}</div>"
+        f"<h3>Quality: {quality}</h3><ul>{reasons}</ul>{_masked(measured)}{_laying(view)}{button}{fit}{_table(view, measured)}</div>"
     )
 
 
