@@ -30,7 +30,6 @@ MAY_IMPORT = {
     "recordings": {"errors", "units"},
     "questions": {"errors", "units", "quantities", "case", "loops", "engine", "recordings"},
     "handover": {"errors", "units", "quantities", "version", "case", "loops", "engine", "recordings", "questions"},
-    "surface": {"case", "engine", "questions"},
     "cohort": {"errors", "units", "version", "case", "loops", "questions", "handover"},
     "surface": {"errors", "units", "case", "engine", "questions"},
     "command_line": {"errors", "units", "version", "surface", "case", "recordings", "questions", "handover", "cohort"},
