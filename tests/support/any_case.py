@@ -49,7 +49,10 @@ def longest_case(kind: str, seed: int) -> Case:
         value = _long_float(generator, item.minimum, item.maximum)
         numbers[name] = Number(value, list(Basis)[generator.integers(3)], _long_float(generator, 0.0, largest_spread(item)))
     choices = {item.name: max(item.options, key=len) for item in LOOPS[kind].choices}
-    words = ["oxygen", "posture", "lung", "dead_space", "descent", "mass", "velocity", "flow", "reflex", "share", "rate", "volume", "exercise", "waking"]
+    words = [
+        "oxygen", "posture", "lung", "dead_space", "descent", "mass", "velocity", "flow", "reflex",
+        "share", "rate", "volume", "exercise", "waking",
+    ]  # fmt: skip
     levers = tuple(
         LeverSetting(f"{word}_{words[-index - 1]}_{generator.integers(1000, 9999)}_l_min", _long_float(generator, 0.0, 1.0))
         for index, word in enumerate(words[:MOST_LEVERS])
