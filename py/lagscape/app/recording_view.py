@@ -8,14 +8,15 @@ from typing import Any
 import numpy as np
 import panel as pn
 from bokeh.core.properties import value
-from bokeh.events import Tap
-from bokeh.models import ColumnDataSource, FixedTicker, LinearAxis, PanTool, Range1d, RangeTool, ResetTool, WheelZoomTool
+from bokeh.events import DoubleTap, Tap
+from bokeh.models import ColumnDataSource, CustomJS, FixedTicker, LinearAxis, PanTool, Range1d, RangeTool, ResetTool, WheelZoomTool
 from bokeh.plotting import figure
 
 from lagscape.app.components.sheet import Request, Sheet
 from lagscape.app.palette import FONT, PALETTES, dress
 from lagscape.app.recording_words import recording_summary
 from lagscape.app.scipy_loader import ensure_scipy
+from lagscape.app.trace_view import SHOW_ALL
 from lagscape.app.workbench import Workbench
 from lagscape.errors import InvalidInputError, RecordingError
 from lagscape.questions.fit import Fit, fit_recording
@@ -105,6 +106,7 @@ class RecordingView:
         self.strip.yaxis.visible = False
         self.window.xaxis.axis_label = "Time in the recording (min:s)"
         self.window.on_event(Tap, self._tapped)
+        self.window.js_on_event(DoubleTap, CustomJS(args={"time": self._shown}, code=SHOW_ALL))
         self._shown.on_change("end", self._window_moved)
         self.head, self.side = Sheet(self._handle), Sheet(self._handle)
         drawn = pn.Column(

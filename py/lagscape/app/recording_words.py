@@ -88,7 +88,8 @@ def _side(view: RecordingView) -> str:
     return (
         f'<div class="rec-side"><h3>{used} cycles used, {excluded} excluded</h3><p class="quiet">Measured from {window}.</p>'
         f'<table class="figures"><tr><th></th><td>median</td><td>quartiles</td></tr>{rows}</table>{meaning}'
-        f"<h3>Quality: {quality}</h3><ul>{reasons}</ul>{_masked(measured)}{_laying(view)}{button}{fit}{_table(view, measured)}</div>"
+        f"<h3>Quality: {quality}</h3><ul>{reasons}</ul>{_masked(measured)}"
+        f"<div>{_laying(view)}</div>{button}<div>{fit}</div>{_table(view, measured)}</div>"
     )
 
 

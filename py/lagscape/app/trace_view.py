@@ -9,7 +9,8 @@ import numpy as np
 import panel as pn
 from bokeh.core.properties import value
 from bokeh.core.property.validation import validate
-from bokeh.models import ColumnDataSource, Label, PanTool, Range1d, ResetTool, Span, WheelZoomTool
+from bokeh.events import DoubleTap
+from bokeh.models import ColumnDataSource, CustomJS, Label, PanTool, Range1d, ResetTool, Span, WheelZoomTool
 from bokeh.plotting import figure
 
 from lagscape.app.components.sheet import Request, Sheet
@@ -22,7 +23,10 @@ from lagscape.quantities import figure as figures
 from lagscape.quantities import to_display
 from lagscape.questions.response import DISTURBANCES, Response, cycle_bracket, respond, run_length
 
-__all__ = ["TraceView"]
+__all__ = ["SHOW_ALL", "TraceView"]
+
+SHOW_ALL = "time.setv({start: time.reset_start, end: time.reset_end})"
+"""Runs in the page on a double click: the whole time axis again."""
 
 _MOST_SILENCE_LABELS = 14
 """Past this many apnoeas in the run their seconds would overlap."""
@@ -41,6 +45,7 @@ class _Strip:
         )  # fmt: skip
         self.plot.toolbar.active_scroll = wheel
         self.plot.toolbar.active_drag = pan
+        self.plot.js_on_event(DoubleTap, CustomJS(args={"time": time}, code=SHOW_ALL))
         self.lines = {
             "before": self.plot.line("time", "value", source=self.sources["before"], line_width=1.3),
             "after": self.plot.line("time", "value", source=self.sources["after"], line_width=1.8, line_dash=[7, 3]),
