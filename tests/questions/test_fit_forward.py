@@ -12,6 +12,7 @@ from lagscape.questions.standing import judge_loop
 from lagscape.recordings import measure_breathing, measure_saturation_lag
 from questions.fit_truths import ONE_GAS, TWO_GASES, drawn, loop_of, recording_of, run, with_apnoea
 
+
 def test_cycle_and_apnoea_are_those_of_many_harmonics() -> None:
     # Oracle: harmonic balance of one loop with 48 harmonics by its own search. Tolerance: what seven harmonics leave out (ORDER).
     prior, points, shown, _ = drawn(ONE_GAS, 30, 1)

@@ -59,10 +59,11 @@ FAR = 3.0
 
 _MOVED = 0.10
 """Prior standard deviations that the most plausible loop must move a number before the fitted case changes it."""
-_TRADE = 0.7
-"""Correlation of sensitivity and delay in size from which on one stands in for the other."""
+_TRADE, _LOOSE = 0.6, 0.10
+"""Correlation in size from which on sensitivity and delay stand in for each other, where both are looser than this share of themselves."""
 _WORTH_SAYING = 0.1
 """Of posterior probability: a second explanation that has less is not spoken of."""
+_PRIOR_DRAWS = 400
 _FEW_DRAWS = 60.0
 """Effective draws under which the intervals are called rough."""
 
@@ -151,7 +152,7 @@ class Fit:
     explanations: int
     """Separate loops that explain the recording, each with a tenth of the probability or more."""
     warning: str
-    """Not empty where more sensitivity and more delay explain the recording equally."""
+    """Not empty where two explanations fit equally: more sensitivity or more delay, or two separate loops."""
     sentences: tuple[str, ...]
     effective_draws: float
     seed: int
@@ -219,13 +220,14 @@ def fit_recording(case: Case, measured: Measured, seed: int = SEED, draws: int =
     numbers, fitted = _fitted(prior, point, numbers)
     misfits = _misfits(likelihood, point, mode)
     figures = _figures(prior, sample, seed)
-    trade = _trade(prior, sample)
+    trade, loose = _trade(prior, sample)
     shares = [float(sample.weights[sample.mode == index].sum()) for index in range(len(modes))]
-    explanations = max(1, sum(share >= _WORTH_SAYING for share in shares))
+    worth = [mode for mode, share in zip(modes, shares, strict=True) if share >= _WORTH_SAYING]
+    explanations = max(1, len(worth))
     far = _far(prior, point)
     poor = far is not None or any(abs(item.standard_errors) > POOR_MISFIT for item in misfits)
     status = FitStatus.POOR if poor else FitStatus.FITTED
-    warning = warning_sentence(trade if abs(trade) >= _TRADE else 0.0, explanations)
+    warning = warning_sentence(trade if loose and abs(trade) >= _TRADE else 0.0, explanations, _difference(prior, worth))
     rough = sample.effective < _FEW_DRAWS
     sentences = fit_sentences(measured, numbers, figures, misfits, warning, far, rough, bool(case.levers))
     return Fit(status, fitted, numbers, figures, misfits, trade, explanations, warning, sentences, sample.effective, seed)
@@ -324,6 +326,17 @@ def _fitted(prior: Prior, point: Array, numbers: tuple[FittedNumber, ...]) -> tu
     return tuple(changed), case
 
 
+def _difference(prior: Prior, modes: list[Mode]) -> tuple[str, str, float, float] | None:
+    """Label, unit and both values of the number in which two explanations differ most, in prior standard deviations."""
+    if len(modes) < 2:
+        return None
+    index = int(np.argmax(np.abs(prior.factor @ (modes[0].point - modes[1].point))))
+    name = prior.names[index]
+    item = prior.case.specifications[name]
+    both = np.asarray(prior.numbers(np.array([modes[0].point, modes[1].point]))[name])
+    return item.label, item.unit, float(both[0]), float(both[1])
+
+
 def _far(prior: Prior, point: Array) -> str | None:
     """Name of the number that the most plausible loop has furthest from the case, where that is too far."""
     normal = np.abs(prior.factor @ point)
@@ -345,13 +358,12 @@ def _misfit(item: Feature, fitted: float, residual: float) -> Misfit:
 
 def _figures(prior: Prior, sample: Sample, seed: int) -> tuple[FittedFigure, ...]:
     """Sensitivity and loop gain, before and after."""
-    before = np.random.default_rng(seed).standard_normal((sample.points.shape[0], prior.size))
+    before = np.random.default_rng(seed).standard_normal((_PRIOR_DRAWS, prior.size))
     expected = shown_by(prior.builder(before), before.shape[0], oxygen=False, cycles=False)
-    everything = np.arange(before.shape[0])
     found = []
     rows = (
         ("sensitivity_l_min_mmhg", "Chemoreflex sensitivity", "L/min/mmHg", _sensitivity(prior, before), _sensitivity(prior, sample.points)),
-        ("loop_gain", "Loop gain", "", expected.loop_gain[everything], sample.loop_gain),
+        ("loop_gain", "Loop gain", "", expected.loop_gain, sample.loop_gain),
     )
     for name, label, unit, old, new in rows:
         usable, used = old > 0.0, (new > 0.0) & (sample.weights > 0.0)
@@ -369,14 +381,15 @@ def _sensitivity(prior: Prior, points: Array) -> Array:
     return np.broadcast_to(np.asarray(loop.sensitivity, dtype=float), points.shape[0])
 
 
-def _trade(prior: Prior, sample: Sample) -> float:
-    """Correlation of ln(sensitivity) with ln(delay)."""
+def _trade(prior: Prior, sample: Sample) -> tuple[float, bool]:
+    """Correlation of ln(sensitivity) with ln(delay), and whether both are loose."""
     delay = np.broadcast_to(np.asarray(prior.numbers(sample.points)[DELAYS[0]], dtype=float), sample.weights.size)
     a, b = np.log(_sensitivity(prior, sample.points)), np.log(delay)
-    spreads = _deviation(a, sample.weights) * _deviation(b, sample.weights)
-    if spreads < 1e-12:
-        return 0.0
-    return float(sample.weights @ ((a - sample.weights @ a) * (b - sample.weights @ b)) / spreads)
+    wide, long = _deviation(a, sample.weights), _deviation(b, sample.weights)
+    if wide * long < 1e-12:
+        return 0.0, False
+    correlation = sample.weights @ ((a - sample.weights @ a) * (b - sample.weights @ b)) / (wide * long)
+    return float(correlation), min(wide, long) > _LOOSE
 
 
 def _refused(case: Case, measured: Measured, seed: int) -> Fit:

@@ -96,7 +96,7 @@ def climb(evaluate: Evaluate, starts: Array, most: int = 12, free: Mask | None =
         active = np.flatnonzero(~settled)
         if not active.size:
             break
-        base = evaluate(trial[active], _joined([warm[i] for i in active]))
+        base = _with_slopes(evaluate, trial[active], [warm[i] for i in active], moves)
         size = np.sum(trial[active] ** 2, axis=1) + np.sum(base.residuals**2, axis=1)
         size = np.where(base.possible, size, np.inf)
         if residual is None:
@@ -106,11 +106,10 @@ def climb(evaluate: Evaluate, starts: Array, most: int = 12, free: Mask | None =
         damping[active] = np.where(better, damping[active] / 5.0, damping[active] * 8.0 + 0.05)
         settled[active[damping[active] > 1e3]] = True
         took = active[better]
-        point[took], objective[took], residual[took] = trial[took], size[better], base.residuals[better]
+        point[took], objective[took] = trial[took], size[better]
+        residual[took], jacobian[took] = base.residuals[better], base.slopes[better]
         for row, i in zip(np.flatnonzero(better), took, strict=True):
             cycles[i] = base.cycles.member(slice(row, row + 1))
-        if took.size:
-            jacobian[took] = _slopes(evaluate, point[took], residual[took], [cycles[i] for i in took], moves)
         for i in active:
             if not np.isfinite(objective[i]):
                 # Nowhere to stand yet: half way back to the middle of the prior.
@@ -139,17 +138,29 @@ def _step(point: Array, residual: Array, jacobian: Array, damping: float, moves:
     return step * min(1.0, _LONGEST / length) if length > 0.0 else step
 
 
-def _slopes(evaluate: Evaluate, points: Array, residuals: Array, cycles: list[Harmonics | None], moves: Index) -> Array:
+@dataclass(frozen=True)
+class _Local:
+    """Misfits at k points and their derivatives there."""
+
+    residuals: Array
+    slopes: Array
     """d residual / du by forward differences, shape (k, m, d); zero where a neighbour is impossible."""
+    possible: Mask
+    cycles: Harmonics
+
+
+def _with_slopes(evaluate: Evaluate, points: Array, cycles: list[Harmonics | None], moves: Index) -> _Local:
+    """Points and their neighbours in one call: a call costs far more than a few points more in it."""
     k, d = points.shape
     near = np.repeat(points, moves.size, axis=0)
     near[np.arange(k * moves.size), np.tile(moves, k)] += _STEP
-    around = evaluate(near, _joined([item for item in cycles for _ in range(moves.size)]))
-    slope = (around.residuals.reshape(k, moves.size, -1) - residuals[:, None]) / _STEP
-    slope[~around.possible.reshape(k, moves.size)] = 0.0
-    full = np.zeros((k, residuals.shape[1], d))
-    full[:, :, moves] = np.swapaxes(slope, 1, 2)
-    return full
+    found = evaluate(np.concatenate([points, near]), _joined([*cycles, *(item for item in cycles for _ in range(moves.size))]))
+    here, around = found.residuals[:k], found.residuals[k:].reshape(k, moves.size, -1)
+    slope = (around - here[:, None]) / _STEP
+    slope[~found.possible[k:].reshape(k, moves.size)] = 0.0
+    slopes = np.zeros((k, here.shape[1], d))
+    slopes[:, :, moves] = np.swapaxes(slope, 1, 2)
+    return _Local(here, slopes, found.possible[:k], found.cycles.member(slice(0, k)))
 
 
 def _joined(cycles: Sequence[Harmonics | None]) -> Harmonics | None:

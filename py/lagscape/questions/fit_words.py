@@ -61,12 +61,17 @@ def fit_sentences(
     return tuple(said)
 
 
-def warning_sentence(trade: float, explanations: int) -> str:
-    """Where sensitivity and delay stand in for each other (`trade`, their correlation, 0 for none), or separate loops fit; else ''."""
-    if explanations > 1:
+def warning_sentence(trade: float, explanations: int, difference: tuple[str, str, float, float] | None = None) -> str:
+    """Where two explanations fit equally; '' where not.
+
+    `trade` is the correlation of sensitivity and delay, 0 for none; `difference` the label, unit and values of the number in which two
+    separate loops differ most.
+    """
+    if explanations > 1 and difference is not None:
+        label, unit, one, other = difference
         return (
-            f"{_count(explanations)} different loops explain this recording equally: more sensitivity or more delay explain it alike. "
-            "Measure one of the two before acting on the other."
+            f"{_count(explanations)} different loops explain this recording equally: one has {_lower(label)} of {one:.3g}, another of "
+            f"{other:.3g}{' ' + unit if unit else ''}. Measure it before acting on either."
         )
     if trade < 0.0:
         return (
