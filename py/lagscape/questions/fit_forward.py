@@ -35,7 +35,8 @@ from lagscape.units import ALVEOLAR_CONSTANT, SECONDS_PER_MINUTE
 __all__ = ["ORDER", "Shown", "shown_by"]
 
 ORDER = 7
-"""Harmonics kept: period to 1e-3 and duty ratio to 0.01 of those with 64 harmonics, far inside any recording's own error."""
+"""Harmonics kept. Against 24, over 49 loops with CO2 only: cycle length within 0.2 %, duty ratio within 0.003, drop within 0.1 % points. Over
+27 with both gases: 1.8 %, 0.012 and, in the deepest swings, 6 % points at worst; 0.3 %, 0.004 and 0.7 on average."""
 _SAMPLES = 96
 _TOLERANCE = 1e-4
 _EDGE = Thresholds().edge_at
