@@ -3,7 +3,7 @@ import { TO_PAGE, TO_WORKER, checked, message } from "./messages.js";
 import { DocumentLink } from "./link.js";
 import { PageState } from "./page_state.js";
 import { answerCall } from "./calls.js";
-import { loadScripts } from "./scripts.js";
+import { loadScripts, quickenDrawing } from "./scripts.js";
 import { startInput } from "./input.js";
 import { startOffline } from "./offline.js";
 import { site } from "./site.js";
@@ -35,6 +35,7 @@ function slotElement(slot) {
 
 async function draw({ json, roots }) {
   await scripts;
+  quickenDrawing(window.Bokeh);
   const { Document } = window.Bokeh.require("document/document");
   const rootSlots = JSON.parse(roots);
   const jsdoc = Document.from_json(JSON.parse(json));

@@ -73,6 +73,22 @@ def test_arrow_keys_move_the_dot_by_one_and_ten_per_cent(new_context: NewContext
     page.close()
 
 
+def test_a_dot_held_still_before_it_is_dragged_still_follows(new_context: NewContext, site: str) -> None:
+    context, _ = new_context()
+    page = open_ready(context, site)
+    start = dot_on_screen(page)
+    page.mouse.move(*start["dot"])
+    page.mouse.down()
+    page.wait_for_timeout(700)
+    page.mouse.move(start["dot"][0] - 40, start["dot"][1] + 30)
+    page.mouse.move(start["dot"][0] - 80, start["dot"][1] + 60)
+    _until(page, lambda: dot_on_screen(page)["delay"] < start["delay"])
+    page.mouse.up()
+    _until(page, lambda: page.get_by_role("button", name="Undo").is_enabled())
+    assert dot_on_screen(page)["sensitivity"] < start["sensitivity"]
+    page.close()
+
+
 def test_an_impossible_number_is_refused_at_its_place_and_nothing_is_lost(new_context: NewContext, site: str) -> None:
     context, _ = new_context()
     page = open_ready(context, site)

@@ -18,7 +18,7 @@ from lagscape.quantities import figure, from_display, quantity, to_display
 __all__ = ["CaseView"]
 
 _SLIDER_STEPS = 400
-_FOLLOW_EVERY_S = 0.12
+_FOLLOW_EVERY_S = 0.3
 _DISCS = {Basis.MEASURED: "●", Basis.ASSUMED: "◐", Basis.TYPICAL: "○"}
 
 

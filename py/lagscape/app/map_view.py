@@ -7,7 +7,7 @@ from typing import Any
 import numpy as np
 import panel as pn
 from bokeh.core.properties import value
-from bokeh.events import MouseLeave, MouseMove, Pan, PanEnd, PanStart, Tap
+from bokeh.events import MouseLeave, MouseMove, Pan, PanEnd, PanStart, Press, PressUp, Tap
 from bokeh.models import Arrow, ColumnDataSource, CustomJS, CustomJSTickFormatter, Label, NormalHead, Range1d
 from bokeh.plotting import figure
 
@@ -73,6 +73,9 @@ class MapView:
             plot.js_on_event(event, CustomJS(args={"dot": self.dot, "x": self.delay, "y": self.sensitivity}, code=_FOLLOW_POINTER))
             plot.on_event(event, self._dragged)
         plot.on_event(PanEnd, self._dropped)
+        # A finger or button held still for a moment is a press to Bokeh, and no pan follows: the moves that come are taken as the drag.
+        plot.on_event(Press, self._pressed)
+        plot.on_event(PressUp, self._dropped)
         plot.on_event(Tap, self._tapped)
         plot.on_event(MouseMove, self._hovered)
         plot.on_event(MouseLeave, self._left)
@@ -82,7 +85,7 @@ class MapView:
         plot.yaxis.formatter = self.ticks
         self._shape: Any = None
         self._map: BoundaryMap | None = None
-        self._held = False
+        self._held = self._pressing = False
         self._contours_due = False
         bench.listen("moving", self.follow)
         bench.listen("settled", self.draw)
@@ -146,7 +149,7 @@ class MapView:
         """Redraw what follows the hand: the dot and its two arrows."""
         judged = self.bench.judged.judgement
         delay, sensitivity = float(judged.loop.delay), float(judged.loop.sensitivity)
-        if settled or not self._held:
+        if settled or self._pressing or not self._held:
             self.dot.data = {"delay": [delay], "sensitivity": [sensitivity]}
         found = judged.margins
         gain, lag = found.gain_margin, found.delay_margin_s
@@ -238,14 +241,20 @@ class MapView:
         case = self.bench.case
         self.bench.attempt("map", lambda: case.moved_to(sensitivity=point[1], delay=point[0]), moving=True)
 
+    def _pressed(self, _event: Any) -> None:
+        self._pressing = True
+
     def _dropped(self, _event: Any) -> None:
-        self._held = False
+        self._held = self._pressing = False
         self.bench.settle()
 
     def _tapped(self, event: Any) -> None:
         self.bench.page.send("focus", {"place": "slot-map"})
 
     def _hovered(self, event: Any) -> None:
+        if self._pressing:
+            self._dragged(event)
+            return
         point = self._clamped(event)
         if point is None or self._held:
             return

@@ -28,6 +28,9 @@ __all__ = ["SHOW_ALL", "TraceView"]
 SHOW_ALL = "time.setv({start: time.reset_start, end: time.reset_end})"
 """Runs in the page on a double click: the whole time axis again."""
 
+_POINTS, _MOVING_POINTS = 1201, 601
+"""Points of a trace at rest, for zooming, and under the hand, about one a pixel."""
+
 _MOST_SILENCE_LABELS = 14
 """Past this many apnoeas in the run their seconds would overlap."""
 
@@ -145,7 +148,7 @@ class TraceView:
         self._draw_bar(case)
 
     def _run(self, name: str, case: Case, judged: Any, grow_only: bool) -> None:
-        response = respond(case, judged, self.duration)
+        response = respond(case, judged, self.duration, points=_MOVING_POINTS if grow_only else _POINTS)
         upper, *others = response.signals
         self.others = {signal.name: signal.label for signal in others}
         chosen = next((signal for signal in others if signal.name == self.lower), others[0])
