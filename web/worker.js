@@ -82,6 +82,7 @@ async function boot({ address, link, theme, touch }) {
   await stage("runtime", async () => {
     const { loadPyodide } = await import(`${library}pyodide.mjs`);
     pyodide = await loadPyodide({ indexURL: library, stdLibURL: `${library}python_stdlib.zip`, lockFileURL: `${library}pyodide-lock.json` });
+    counted.tell("pyodide.asm.wasm");
   });
   await stage("numbers", async () => {
     unpack(pyodide.FS, await bundles.numpy, SITE_PACKAGES);
@@ -90,6 +91,7 @@ async function boot({ address, link, theme, touch }) {
   await stage("libraries", async () => {
     unpack(pyodide.FS, await bundles.libraries, SITE_PACKAGES);
     unpack(pyodide.FS, await bundles.lagscape, SITE_PACKAGES);
+    counted.tell();
     pyodide.runPython("importlib.invalidate_caches()");
     application = pyodide.pyimport("lagscape.app.boot");
     application.prepare(`${library}panel/dist/`);

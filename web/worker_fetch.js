@@ -6,6 +6,7 @@
  */
 export function countedFetch(plainFetch, sizes, report) {
   const total = Object.values(sizes).reduce((sum, size) => sum + size, 0);
+  const unnoticed = new Map(); // files whose end the browser tells late: name to length
   let bytes = 0;
   let last = 0;
 
@@ -18,16 +19,31 @@ export function countedFetch(plainFetch, sizes, report) {
     }
   }
 
-  function countWhenFetched(address, size) {
+  function notice(name) {
+    const size = unnoticed.get(name);
+    if (size === undefined) return;
+    unnoticed.delete(name);
+    count(size);
+  }
+
+  function countWhenFetched(address, name) {
+    unnoticed.set(name, sizes[name]);
     const observer = new PerformanceObserver((list) => {
       if (!list.getEntriesByName(address).length) return;
       observer.disconnect();
-      count(size);
+      notice(name);
     });
     observer.observe({ type: "resource", buffered: true });
   }
 
-  return async function fetchCounted(resource, options) {
+  /** Tells what has arrived now, whatever was told last; `name` is a file that is known to be there. */
+  fetchCounted.tell = (name) => {
+    notice(name);
+    report(Math.min(bytes, total), total);
+  };
+  return fetchCounted;
+
+  async function fetchCounted(resource, options) {
     const address = typeof resource === "string" ? resource : (resource.url ?? String(resource));
     const name = address.split(/[?#]/)[0].split("/").pop();
     const answer = await plainFetch(resource, options);
@@ -35,7 +51,7 @@ export function countedFetch(plainFetch, sizes, report) {
     if (!(name in sizes) || !answer.body) return answer;
     if (name.endsWith(".wasm")) {
       // The browser keeps compiled WebAssembly with the answer itself: a copy of the answer would be compiled anew at every visit.
-      countWhenFetched(address, sizes[name]);
+      countWhenFetched(address, name);
       if (answer.headers.get("content-type")?.startsWith("application/wasm")) return answer;
       // Under any other type the browser refuses to compile what it loads, and the runtime would wait for ever.
       return new Response(answer.body, { headers: { "content-type": "application/wasm" } });
@@ -47,5 +63,5 @@ export function countedFetch(plainFetch, sizes, report) {
       },
     });
     return new Response(answer.body.pipeThrough(counter), { status: answer.status, headers: answer.headers });
-  };
+  }
 }
