@@ -49,20 +49,20 @@ MODEL_LIMITS: tuple[ModelLimit, ...] = (
     ),
     ModelLimit(
         "acetazolamide_loop_gain",
-        "Loop gain at 1000 mg/day over before, heart failure with periodic breathing", "",
+        "Loop gain on acetazolamide 1000 mg/day over before, heart failure with periodic breathing", "",
         0.588, "0.588 (3.4, quartiles 2.4 to 5.4, to 2.0, quartiles 1.4 to 3.5)", 0.847, "Edwards 2012, J Physiol 590:1199",
         "The line's shift lowers the steady plant gain by 24 %, as published, but at the cycle's frequency only by the fall of PaCO2. The "
         "median fall is larger than any published change of plant gain explains; the model's stays inside the published quartiles.",
     ),
     ModelLimit(
         "acetazolamide_co2_reserve",
-        "Rise of the CO2 reserve at 1000 mg/day, heart failure with periodic breathing", "mmHg",
+        "Rise of the CO2 reserve on acetazolamide 1000 mg/day, heart failure with periodic breathing", "mmHg",
         1.1, "1.0 and 1.2 mmHg (3.0 to 4.0 and 2.2 to 3.4)", 0.344, "PMC7191512",
         "With the slope kept the reserve grows only as ventilation does.",
     ),
     ModelLimit(
         "acetazolamide_plant_gain_able_bodied",
-        "Steady plant gain after over before, from the PETCO2 of the able-bodied group", "",
+        "Steady plant gain on acetazolamide over before, from the PETCO2 of the able-bodied group", "",
         0.759, "0.759 (5.4 +- 1.8 to 4.1 +- 1.7)", 0.649, "PMC7191512",
         "By the alveolar ventilation equation plant gain goes as PCO2 squared, and (32.3 / 40.1)^2 is less than the paper's own ratio; in its "
         "other group both agree (0.81 and 0.80).",
