@@ -5,9 +5,10 @@ import pytest
 
 from lagscape import Case
 from lagscape.case.case import DEFAULT_DISTURBANCES
-from lagscape.case.parts import disturbance_units
+from lagscape.case.parts import LeverSetting, disturbance_units
 from lagscape.loops.register import LOOPS
-from lagscape.questions.boundary_map import cycle_contours, map_of, window_of
+from lagscape.questions.boundary_map import cycle_contours, map_of, standing_point, window_of
+from lagscape.questions.levers import judge_with_levers
 from lagscape.questions.response import DISTURBANCES, cycle_bracket, respond, run_length
 from lagscape.questions.standing import judge
 
@@ -76,3 +77,15 @@ def test_a_contour_lies_where_the_dominant_oscillation_has_its_seconds():
         from lagscape.questions.standing import judge_loop
 
         assert judge_loop(loop).linear_cycle_length == pytest.approx(line.period, rel=2e-3)
+
+
+@pytest.mark.parametrize(("dose", "standing"), [(100.0, "hunts"), (700.0, "rings")])
+def test_a_case_with_levers_stands_on_the_true_side_of_the_drawn_boundary(dose, standing):
+    # Oracle: the judgement of the case with its lever; the drawn line is linear between 161 points, so that 1e-3 of it may be missed.
+    case = Case.from_starting_case("heart-failure-periodic").with_levers(LeverSetting("added_dead_space_ml", dose))
+    judged, drawn = judge_with_levers(case), map_of(case, window_of(case))
+    delay, sensitivity = standing_point(drawn, judged)
+    assert judged.standing == standing
+    critical = float(np.interp(delay, drawn.delays, drawn.critical))
+    assert critical / sensitivity == pytest.approx(judged.margins.gain_margin, rel=1e-3)
+    assert (sensitivity > critical) == (standing == "hunts")

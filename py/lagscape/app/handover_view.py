@@ -15,13 +15,13 @@ from lagscape.handover.report import LeverLine, Picture, Report, Section, report
 from lagscape.handover.svg import Axis
 from lagscape.handover.table import cycles_csv, trace_csv
 from lagscape.quantities import figure
-from lagscape.questions.boundary_map import cycle_contours, map_of, window_of
+from lagscape.questions.boundary_map import cycle_contours, map_of, standing_point, window_of
 from lagscape.questions.cautions import cautions
 from lagscape.questions.certainty import certainty
 from lagscape.questions.levers import LEVERS
 from lagscape.questions.response import DISTURBANCES, respond, run_length
 from lagscape.questions.share import share_of_excess
-from lagscape.questions.standing import Standing, analysis_of, judge_loop
+from lagscape.questions.standing import Standing, analysis_of
 from lagscape.questions.wording import seconds_words, standing_sentence
 
 __all__ = ["HandoverView"]
@@ -133,8 +133,9 @@ class HandoverView:
         case, loop = self.bench.case, self.bench.judged.judgement.loop
         window = window_of(case)
         drawn = map_of(case, window)
-        start = case.start().loop()
+        start = self.bench.start.judgement.loop
         top = window.sensitivity_high
+        changed = self.bench.judged.with_levers
         outline = above(drawn.delays, np.minimum(drawn.critical, top), top)
         contours = tuple(
             Contour(seconds_words(line.period), line.delays, line.sensitivities) for line in cycle_contours(case, window)
@@ -145,6 +146,7 @@ class HandoverView:
                 Axis(loop.sensitivity_name, loop.sensitivity_unit, window.sensitivity_low, top),
                 drawn.delays, np.where(drawn.critical <= top, drawn.critical, np.nan), [outline],
                 (float(loop.delay), float(loop.sensitivity)), (float(start.delay), float(start.sensitivity)), contours=contours,
+                levers=None if changed is None else standing_point(drawn, changed),
             )
         )
 
@@ -154,7 +156,7 @@ class HandoverView:
         now = bench.judged.judgement
         length = run_length(now)
         answer = respond(case, now, length, purpose="release")
-        behind = respond(case, judge_loop(case.start().loop()), length)
+        behind = respond(case, bench.start.judgement, length)
         runs = [("start", behind), ("case", answer)]
         if bench.judged.with_levers is not None:
             runs.append(("levers", respond(case, bench.judged.with_levers, length, purpose="release")))

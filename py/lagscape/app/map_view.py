@@ -16,7 +16,7 @@ from lagscape.app.palette import FONT, PALETTES, dress
 from lagscape.app.workbench import Workbench
 from lagscape.quantities import figure as figures
 from lagscape.quantities import quantity, to_display
-from lagscape.questions.boundary_map import BoundaryMap, cycle_contours, map_of, window_of
+from lagscape.questions.boundary_map import BoundaryMap, cycle_contours, map_of, standing_point, window_of
 from lagscape.questions.standing import judge
 from lagscape.questions.wording import cycle_words, seconds_words
 
@@ -199,26 +199,16 @@ class MapView:
 
     def _draw_levers(self) -> None:
         changed = self.bench.judged.with_levers
-        if changed is None:
+        if changed is None or self._map is None:
             self.diamond.data = {"delay": [], "sensitivity": []}
             self.lever.visible = False
             return
         now = self.bench.judged.judgement
-        point = self._equivalent(changed)
+        point = standing_point(self._map, changed)
         self.diamond.data = {"delay": [point[0]], "sensitivity": [point[1]]}
         self.lever.update(
             x_start=float(now.loop.delay), y_start=float(now.loop.sensitivity), x_end=point[0], y_end=point[1], visible=True
         )
-
-    def _equivalent(self, changed: Any) -> tuple[float, float]:
-        """Where the case with levers stands on this map: at its own delay, as far from this boundary as it is from its own."""
-        delay = float(changed.loop.delay)
-        drawn = self._map
-        gain = changed.margins.gain_margin
-        if drawn is None or gain is None:
-            return delay, float(changed.loop.sensitivity)
-        critical = float(np.interp(delay, drawn.delays, np.minimum(drawn.critical, 1e6)))
-        return delay, critical / gain
 
     def _tick_units(self, unit: str) -> None:
         factor, _ = to_display(1.0, unit, self.bench.units)

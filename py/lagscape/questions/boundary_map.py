@@ -13,9 +13,9 @@ from lagscape.case.case import Case
 from lagscape.engine.boundary import boundary_curve
 from lagscape.engine.margins_batch import margins_batch
 from lagscape.loops.protocol import Array
-from lagscape.questions.standing import SETTLED_SHARE, judge
+from lagscape.questions.standing import SETTLED_SHARE, Judgement, judge
 
-__all__ = ["BoundaryMap", "CycleContour", "MapWindow", "cycle_contours", "map_of", "window_of"]
+__all__ = ["BoundaryMap", "CycleContour", "MapWindow", "cycle_contours", "map_of", "standing_point", "window_of"]
 
 _DELAYS = 161
 _GRID = (44, 36)
@@ -93,6 +93,18 @@ def map_of(case: Case, window: MapWindow) -> BoundaryMap:
     # A little more than the window, so that the boundary reaches both its ends.
     found = boundary_curve(loop, (1e-3 * high, high), (0.9 * window.delay_low, 1.05 * window.delay_high))
     return BoundaryMap(window, delays, _lowest(found, delays))
+
+
+def standing_point(drawn: BoundaryMap, judged: Judgement) -> tuple[float, float]:
+    """Where a loop of another shape, such as the case with levers, stands on this map: delay in s, and sensitivity.
+
+    Its own delay across; up, as far from this boundary as it is from its own, so that the side it lies on is the true one.
+    """
+    delay, gain = float(judged.loop.delay), judged.margins.gain_margin
+    if gain is None:
+        return delay, float(judged.loop.sensitivity)
+    critical = float(np.interp(delay, drawn.delays, np.minimum(drawn.critical, 10.0 * drawn.window.sensitivity_high)))
+    return delay, critical / gain
 
 
 def _lowest(found: Any, delays: Array) -> Array:
