@@ -260,6 +260,20 @@ def test_a_loop_is_fitted_to_the_recording_shown_and_taken(bench):
     assert bench.history.can_undo and "Take this loop" not in view.side.content["html"]
 
 
+def test_quiet_breathing_is_read_weakly_and_says_so(bench):
+    # Half an hour of steady breaths whose size wanders a little; invented.
+    rng, time = np.random.default_rng(8), np.arange(0.0, 1800.0, 0.25)
+    size = 1.0 + 0.1 * np.interp(time, np.arange(0.0, 1805.0, 5.0), rng.standard_normal(361))
+    values = size * np.sin(2.0 * np.pi * 0.27 * time)
+    view = RecordingView(bench)
+    _open(view, ("time_s,effort\n" + "\n".join(f"{t:.2f},{v:.5f}" for t, v in zip(time, values, strict=True))).encode())
+    assert view.measurement.used == () and "No periodic breathing here" in view.side.content["html"]
+    do(Side(view), "quiet", event="click")
+    said = view.side.content["html"]
+    assert ("That is weak" in said and "damping ratio" in said) or "says nothing of the loop" in view.refusal
+    assert view.fit is not None or view.refusal
+
+
 def test_a_table_without_times_asks_for_its_rate_and_then_opens(bench):
     view = RecordingView(bench)
     data = b"\n".join(line.split(b",")[1] for line in _invented_effort().splitlines())

@@ -20,7 +20,8 @@ from lagscape.app.trace_view import SHOW_ALL
 from lagscape.app.workbench import Workbench
 from lagscape.errors import InvalidInputError, RecordingError
 from lagscape.questions.fit import Fit, fit_recording
-from lagscape.questions.fit_measured import measured_from
+from lagscape.questions.fit_measured import Measured, RingDown, measured_from
+from lagscape.questions.fit_ring_down import ring_down_after_events, ring_down_from_variability
 from lagscape.questions.lay import Laying, lay_measurement
 from lagscape.questions.standing import judge
 from lagscape.recordings import BreathingMeasurement, Recording, measure_breathing, measure_saturation_lag, overview, read_recording
@@ -31,6 +32,8 @@ __all__ = ["RecordingView"]
 _STRIP_BINS = 1200
 _WINDOW_BINS = 1600
 _FIRST_WINDOW_S = 300.0
+_SIGH = 2.0
+"""A breath this many times the usual one is taken for a sigh (common practice, no source)."""
 _READABLE_KINDS = ("ventilation", "airflow", "effort")
 
 
@@ -44,6 +47,7 @@ class RecordingView:
         self.measurement: BreathingMeasurement | None = None
         self.laying: Laying | None = None
         self.fit: Fit | None = None
+        self.ring_down: RingDown | None = None
         self.refusal = ""
         self._built = False
         self._waiting: tuple[Any, str] | None = None
@@ -174,7 +178,7 @@ class RecordingView:
     async def open(self, payload: Any) -> None:
         """Read a file that the user chose or dropped, and measure its likeliest channel."""
         page = self.bench.page
-        self.refusal, self.laying, self.fit = "", None, None
+        self.refusal, self.laying, self.fit, self.ring_down = "", None, None, None
         _ = self.root
         page.send("show", {"view": "recording", "open": True})
         page.send("working", {"text": f"reading {payload['name']}"})
@@ -225,7 +229,7 @@ class RecordingView:
 
     def _measure(self, window: tuple[float, float] | None) -> None:
         assert self.recording is not None and self.signal is not None
-        self.refusal, self.laying, self.fit = "", None, None
+        self.refusal, self.laying, self.fit, self.ring_down = "", None, None, None
         kind = self.signal.kind if self.signal.kind in _READABLE_KINDS else "effort"
         try:
             self.measurement = measure_breathing(self.recording, self.signal.name, window=window, kind=kind)
@@ -363,6 +367,8 @@ class RecordingView:
             self._prepare()
         elif request.act == "fit":
             self._fit()
+        elif request.act == "quiet":
+            self._fit_quiet()
         elif request.act == "drop-fit":
             self.fit = None
             self._draw_window()
@@ -407,6 +413,29 @@ class RecordingView:
             self.fit = fit_recording(self.bench.case, measured_from(self.measurement, saturation))
         except (InvalidInputError, RecordingError) as problem:
             self.refusal = str(problem)
+        self._draw_window()
+        self.write()
+
+    def _fit_quiet(self) -> None:
+        """The most plausible loop behind breathing that does not cycle: from what follows sighs, else from its restlessness."""
+        assert self.measurement is not None
+        self.refusal, self.laying, self.ring_down = "", None, None
+        envelope = max(self.measurement.envelopes, key=lambda item: item.values.size)
+        breaths = self.measurement.breaths
+        sighs = breaths.times_s[breaths.sizes > _SIGH * np.median(breaths.sizes)] if breaths.sizes.size else breaths.times_s
+        found = ring_down_after_events(envelope.times_s, envelope.values, sighs) if sighs.size else None
+        found = found if found is not None else ring_down_from_variability(envelope.times_s, envelope.values)
+        if found is None:
+            self.refusal = (
+                "Quiet breathing says nothing of the loop here: there is less than a quarter of an hour of it, or it shows no swing. "
+                "Choose a longer window, or one with sighs."
+            )
+        else:
+            try:
+                self.fit = fit_recording(self.bench.case, Measured(ring_down=found))
+                self.ring_down = found
+            except InvalidInputError as problem:
+                self.refusal = str(problem)
         self._draw_window()
         self.write()
 

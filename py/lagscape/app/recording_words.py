@@ -82,9 +82,15 @@ def _side(view: RecordingView) -> str:
         '<div class="tools"><button class="main" data-act="prepare">Lay these on the case</button>'
         '<button data-act="fit">Fit the loop to it</button></div>'
         if used
-        else ""
+        else '<div class="tools"><button data-act="quiet">Read the loop from quiet breathing</button></div>'
     )
     fit = fit_html(view.fit, view.bench.units) if view.fit is not None else ""
+    if view.ring_down is not None:
+        ring = view.ring_down
+        fit = (
+            f"<p>After a push breathing swings every {figure(ring.period_s.median)} s with a damping ratio of "
+            f"{figure(ring.damping_ratio.median, 2)}. {escape(ring.strength)}</p>{fit}"
+        )
     return (
         f'<div class="rec-side"><h3>{used} cycles used, {excluded} excluded</h3><p class="quiet">Measured from {window}.</p>'
         f'<table class="figures"><tr><th></th><td>median</td><td>quartiles</td></tr>{rows}</table>{meaning}'
