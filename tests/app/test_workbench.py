@@ -260,6 +260,45 @@ def test_a_loop_is_fitted_to_the_recording_shown_and_taken(bench):
     assert bench.history.can_undo and "Take this loop" not in view.side.content["html"]
 
 
+def _invented_night() -> bytes:
+    """Nasal pressure, two efforts in step, and a saturation that falls 30 s after each apnoea's middle; cycles of 60 s; invented."""
+    time = np.arange(0.0, 1800.0, 0.25)
+    wave = np.maximum(0.0, (np.cos(2.0 * np.pi * time / 60.0) + 0.2) / 1.2)
+    breath = wave * np.sin(2.0 * np.pi * 0.27 * time)
+    noise = 0.01 * np.random.default_rng(11).standard_normal(time.size)
+    saturation = np.round(94.0 + 4.0 * np.cos(2.0 * np.pi * (time - 30.0) / 60.0))
+    columns = (time, np.sign(breath) * breath**2 + 0.1 * noise, breath + noise, 0.5 * breath + noise, saturation)
+    rows = "\n".join(",".join(f"{value:.5f}" for value in row) for row in zip(*columns, strict=True))
+    return f"time_s,Nasal Pressure,Chest,Abdomen,SpO2\n{rows}".encode()
+
+
+def test_what_can_be_made_of_the_channels_is_offered_and_the_oximeter_is_read(bench):
+    view = RecordingView(bench)
+    _open(view, _invented_night())
+    names = view.recording.channel_names
+    assert "Nasal Pressure (square root)" in names and "Chest + Abdomen" in names
+    for name in ("Nasal Pressure (square root)", "Chest + Abdomen"):
+        do(Side(view), "channel", value=name)
+        # Oracle: the recording's construction, 60 s.
+        assert view.measurement.cycle_length_s.median == pytest.approx(60.0, rel=0.02), name
+    assert view.lag is not None and view.lag.lag_s is not None
+    said = view.side.content["html"]
+    assert "Oximeter lags by" in said and "Shape: crescendo-decrescendo" in said
+
+
+def test_a_threshold_is_changed_refused_and_set_back(bench):
+    view = RecordingView(bench)
+    _open(view, _invented_effort())
+    used = len(view.measurement.used)
+    do(Side(view), "threshold", "shortest_cycle_s", "60")
+    # Oracle: the recording's cycles last 45 s, so that none is left when a cycle must last 60 s.
+    assert len(view.measurement.used) < 0.2 * used and "Thresholds (1 changed)" in view.head.content["html"]
+    do(Side(view), "threshold", "apnoea_below", "0.9")
+    assert "Apnoea under, of the local peak must be a number from 0.02 to 0.6; got 0.9." in view.refusal
+    do(Side(view), "usual-thresholds", event="click")
+    assert len(view.measurement.used) == used and view.refusal == ""
+
+
 def test_quiet_breathing_is_read_weakly_and_says_so(bench):
     # Half an hour of steady breaths whose size wanders a little; invented.
     rng, time = np.random.default_rng(8), np.arange(0.0, 1800.0, 0.25)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from functools import cached_property
 from typing import Any
 
@@ -16,6 +17,7 @@ from lagscape.app.components.sheet import Request, Sheet
 from lagscape.app.palette import FONT, PALETTES, dress
 from lagscape.app.recording_words import recording_summary
 from lagscape.app.scipy_loader import ensure_scipy
+from lagscape.app.threshold_forms import with_threshold
 from lagscape.app.trace_view import SHOW_ALL
 from lagscape.app.workbench import Workbench
 from lagscape.errors import InvalidInputError, RecordingError
@@ -24,8 +26,19 @@ from lagscape.questions.fit_measured import Measured, RingDown, measured_from
 from lagscape.questions.fit_ring_down import ring_down_after_events, ring_down_from_variability
 from lagscape.questions.lay import Laying, lay_measurement
 from lagscape.questions.standing import judge
-from lagscape.recordings import BreathingMeasurement, Recording, measure_breathing, measure_saturation_lag, overview, read_recording
+from lagscape.recordings import (
+    BreathingMeasurement,
+    Recording,
+    Thresholds,
+    effort_sum,
+    flow_from_nasal_pressure,
+    measure_breathing,
+    measure_saturation_lag,
+    overview,
+    read_recording,
+)
 from lagscape.recordings.recording import Signal
+from lagscape.recordings.saturation_lag import SaturationLag
 
 __all__ = ["RecordingView"]
 
@@ -34,6 +47,7 @@ _WINDOW_BINS = 1600
 _FIRST_WINDOW_S = 300.0
 _SIGH = 2.0
 """A breath this many times the usual one is taken for a sigh (common practice, no source)."""
+_NASAL = re.compile(r"nas|press|ptaf|cannula", re.IGNORECASE)
 _READABLE_KINDS = ("ventilation", "airflow", "effort")
 
 
@@ -48,6 +62,8 @@ class RecordingView:
         self.laying: Laying | None = None
         self.fit: Fit | None = None
         self.ring_down: RingDown | None = None
+        self.thresholds = Thresholds()
+        self.lag: SaturationLag | None = None
         self.refusal = ""
         self._built = False
         self._waiting: tuple[Any, str] | None = None
@@ -208,7 +224,7 @@ class RecordingView:
             self._refuse(str(problem))
             return
         self._waiting = None
-        self.recording = recording
+        self.recording = _with_derived(recording)
         likely = recording.of_kind(*_READABLE_KINDS) or recording.signals
         self._choose(likely[0].name)
 
@@ -232,7 +248,10 @@ class RecordingView:
         self.refusal, self.laying, self.fit, self.ring_down = "", None, None, None
         kind = self.signal.kind if self.signal.kind in _READABLE_KINDS else "effort"
         try:
-            self.measurement = measure_breathing(self.recording, self.signal.name, window=window, kind=kind)
+            self.measurement = measure_breathing(
+                self.recording, self.signal.name, window=window, kind=kind, thresholds=self.thresholds
+            )
+            self.lag = self._saturation()
         except (RecordingError, InvalidInputError) as problem:
             self.measurement = None
             self.refusal = str(problem)
@@ -240,6 +259,13 @@ class RecordingView:
         self._draw_night()
         self._draw_window()
         self.write()
+
+    def _saturation(self) -> SaturationLag | None:
+        """How far the oximeter lags, where the recording has one and the cycles have apnoeas."""
+        assert self.recording is not None and self.measurement is not None
+        if not self.recording.of_kind("SpO2") or self.measurement.duty_ratio is None:
+            return None
+        return measure_saturation_lag(self.recording, self.measurement)
 
     def _refuse(self, sentence: str) -> None:
         self.refusal = sentence
@@ -367,6 +393,8 @@ class RecordingView:
             self._prepare()
         elif request.act == "fit":
             self._fit()
+        elif request.act in ("threshold", "usual-thresholds") and request.event != "escape":
+            self._set_thresholds(request)
         elif request.act == "quiet":
             self._fit_quiet()
         elif request.act == "drop-fit":
@@ -390,6 +418,15 @@ class RecordingView:
             bench.page.send("say", {"place": "case", "text": "The measured numbers are on the case. Undo takes them off.", "tone": "note"})
             self.write()
 
+    def _set_thresholds(self, request: Request) -> None:
+        try:
+            usual = request.act == "usual-thresholds"
+            self.thresholds = Thresholds() if usual else with_threshold(self.thresholds, request.key, request.value)
+        except InvalidInputError as problem:
+            self._refuse(str(problem))
+            return
+        self._measure(self.measurement.window if self.measurement is not None else None)
+
     def _read_with_rate(self, text: str) -> None:
         assert self._waiting is not None
         file, name = self._waiting
@@ -408,9 +445,7 @@ class RecordingView:
         assert self.recording is not None and self.measurement is not None
         self.refusal, self.laying = "", None
         try:
-            oximeter = self.recording.of_kind("SpO2")
-            saturation = measure_saturation_lag(self.recording, self.measurement, oximeter[0].name) if oximeter else None
-            self.fit = fit_recording(self.bench.case, measured_from(self.measurement, saturation))
+            self.fit = fit_recording(self.bench.case, measured_from(self.measurement, self.lag))
         except (InvalidInputError, RecordingError) as problem:
             self.refusal = str(problem)
         self._draw_window()
@@ -447,6 +482,17 @@ class RecordingView:
         except InvalidInputError as problem:
             self.refusal = str(problem)
         self.write()
+
+
+def _with_derived(recording: Recording) -> Recording:
+    """The recording with what can be made of its channels: the square root of nasal pressure, chest and abdomen together."""
+    for signal in recording.of_kind("airflow"):
+        if _NASAL.search(signal.name):
+            recording = recording.with_signal(flow_from_nasal_pressure(signal))
+    efforts = recording.of_kind("effort")
+    if len(efforts) == 2 and efforts[0].segments == efforts[1].segments:
+        recording = recording.with_signal(effort_sum(*efforts))
+    return recording
 
 
 def _band(whole: Any) -> dict[str, Any]:

@@ -6,6 +6,7 @@ from html import escape
 from typing import TYPE_CHECKING, Any
 
 from lagscape.app.fit_words import fit_html
+from lagscape.app.threshold_forms import threshold_html
 from lagscape.quantities import figure, to_display
 
 if TYPE_CHECKING:
@@ -48,7 +49,7 @@ def _head(view: RecordingView) -> str:
         f"dates in a file are neither shown nor kept.</p>"
         f'<div class="tools"><label>Channel <select data-act="channel" aria-label="Channel">{options}</select></label>'
         '<button data-act="measure-window">Measure this window</button><button data-act="measure-whole">Measure the whole</button></div>'
-        f"{repaired}</div>"
+        f"{threshold_html(view.thresholds)}{repaired}</div>"
     )
 
 
@@ -74,6 +75,10 @@ def _side(view: RecordingView) -> str:
             ("Loop gain", gain, ""),
         )
     )
+    if view.lag is not None:
+        rows += _row("Oximeter lags by", view.lag.lag_s, "s") + _row("Drop of SpO2", view.lag.drop, "% points")
+    if measured.shape:
+        meaning += f"<p>Shape: {escape(measured.shape)}.</p>"
     quality = escape(measured.quality.capitalize())
     reasons = "".join(f"<li>{escape(reason)}</li>" for reason in measured.quality_reasons)
     excluded = len(measured.cycles) - used
