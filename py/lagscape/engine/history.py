@@ -10,7 +10,14 @@ import numpy as np
 from lagscape.engine.mesh import points
 from lagscape.loops.protocol import Array
 
-__all__ = ["PiecewiseHistory", "to_chebyshev"]
+__all__ = ["PiecewiseHistory", "distinct_rows", "to_chebyshev"]
+
+
+def distinct_rows(rows: Array) -> tuple[Array, list[int]]:
+    """The rows without repeats, in order of first appearance, and which of them each row is: two delays may sense one signal."""
+    listed = rows.tolist()
+    distinct = [row for i, row in enumerate(listed) if row not in listed[:i]]
+    return np.array(distinct, dtype=float).reshape(len(distinct), rows.shape[1]), [distinct.index(row) for row in listed]
 
 
 @lru_cache(maxsize=16)

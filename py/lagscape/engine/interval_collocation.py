@@ -11,15 +11,17 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from functools import cached_property, partial
 from typing import Any
 
 import numpy as np
 
-from lagscape.engine.mesh import evaluation, gauss_places, nodes, oversampling, points, tail_weights
+from lagscape.engine.history import distinct_rows
+from lagscape.engine.mesh import Kept, evaluation, gauss_places, nodes, oversampling, points, tail_weights
 from lagscape.engine.plant_steps import chained_operator, plant_step
 from lagscape.engine.run import Run
 from lagscape.engine.trace import Trace, find_silences
-from lagscape.loops.protocol import Array
+from lagscape.loops.protocol import Array, DriveForm
 
 __all__ = ["FixedMesh", "holds_every_break", "interval_collocation", "mesh_for"]
 
@@ -28,6 +30,12 @@ _MOST_EXTRA_PIECES = 8
 _MOST_PIECES_A_STEP = 12
 _SAME_PLACE = 1e-6
 """Piece ends closer than this share of a step are one."""
+
+_plans = Kept(8)
+_operators = Kept(8)
+_lookups = Kept(8)
+_MOST_KEPT_TIMES = 5000
+"""Output grids larger than this are an export, not a drag: not worth the memory."""
 
 
 @dataclass(frozen=True)
@@ -42,6 +50,15 @@ class FixedMesh:
     """Shape (m + 1,), s from the start of a step; the last is `step`."""
     degree: int
     """n, the number of Radau nodes a piece."""
+
+    @cached_property
+    def lengths(self) -> Array:
+        return np.diff(self.edges)
+
+    @cached_property
+    def key(self) -> tuple[Any, ...]:
+        """Every number of the mesh but its start."""
+        return (self.step, self.degree, self.edges.tobytes())
 
 
 def mesh_for(run: Run, rate: float, pieces_per_rate: float, degree: int, start: float) -> FixedMesh:
@@ -89,44 +106,39 @@ class _SensedHistory:
     """What is sensed on a step, from the observed signals of former steps by constant matrices."""
 
     def __init__(self, run: Run, mesh: FixedMesh) -> None:
-        form = run.form
-        self.rows, self._row_of = np.unique(form.sensed_rows, axis=0, return_inverse=True)
-        self._row_of = self._row_of.reshape(-1)
-        step, n = mesh.step, mesh.degree
-        lengths = np.diff(mesh.edges)
-        where = (mesh.edges[:-1, None] + lengths[:, None] * points(n)) / step
-        # A point on a piece's edge is looked up from inside its own piece, because the past may have a corner there.
-        inner = (mesh.edges[:-1, None] + lengths[:, None] * np.clip(points(n), 1e-9, 1.0 - 1e-9)) / step
+        self.rows, row_of = distinct_rows(run.form.sensed_rows)
         self._plans: list[tuple[int, int, Array | None]] = []
         deepest = 1
-        for j, delay in enumerate(form.sensed_delays):
-            back = float(delay) / step
+        for row, delay in zip(row_of, run.form.sensed_delays, strict=True):
+            back = float(delay) / mesh.step
             whole = math.floor(back + 1e-9)
             rest = max(back - whole, 0.0)
             if rest < 1e-9:
-                self._plans.append((int(self._row_of[j]), whole, None))
+                self._plans.append((row, whole, None))
                 deepest = max(deepest, whole)
             else:
-                self._plans.append((int(self._row_of[j]), whole, _shift_matrix(mesh, where - rest, inner - rest)))
+                self._plans.append((row, whole, _plans((mesh.key, rest), partial(_shift_matrix, mesh, rest))))
                 deepest = max(deepest, whole + 1)
         self.depth = deepest
-        self._shape = where.shape
 
     def sense(self, observed: Array, k: int, into: Array) -> None:
         """Fills into[:n_sensed], each (m, n + 1), on step k; `observed` holds step k at index k + depth."""
         here = k + self.depth
+        flat = into.reshape(len(into), -1)
         for j, (row, whole, matrix) in enumerate(self._plans):
             if matrix is None:
                 into[j] = observed[here - whole, row]
             else:
-                past = observed[here - whole - 1 : here - whole + 1, row].reshape(-1)
-                into[j] = matrix.dot(past).reshape(self._shape)
+                matrix.dot(observed[here - whole - 1 : here - whole + 1, row].reshape(-1), out=flat[j])
 
 
-def _shift_matrix(mesh: FixedMesh, where: Array, inner: Array) -> Array:
-    """Values on two steps in a row to values at places (-1, 1] steps, 0 being the border between the two."""
+def _shift_matrix(mesh: FixedMesh, back: float) -> Array:
+    """Values on two steps in a row to values at the points of the second, looked up `back` of a step earlier; 0 < back < 1."""
     n, m = mesh.degree, len(mesh.edges) - 1
-    edges = mesh.edges / mesh.step
+    edges, lengths = mesh.edges / mesh.step, mesh.lengths[:, None] / mesh.step
+    where = edges[:-1, None] + lengths * points(n) - back
+    # A point on a piece's edge is looked up from inside its own piece, because the past may have a corner there.
+    inner = edges[:-1, None] + lengths * np.clip(points(n), 1e-9, 1.0 - 1e-9) - back
     both = np.concatenate([edges[:-1] - 1.0, edges])
     piece = np.clip(np.searchsorted(both, inner.reshape(-1), side="right") - 1, 0, 2 * m - 1)
     local = (where.reshape(-1) - both[piece]) / (both[piece + 1] - both[piece])
@@ -144,12 +156,10 @@ class _ControlStep:
         self._shape = (self._size, m, n + 1)
         if not self._size:
             return
-        y0, yw = chained_operator(form.control, np.diff(mesh.edges), n)
-        self._used = np.flatnonzero(np.any(form.control_by_sensed != 0.0, axis=0))
-        by_sensed = np.tensordot(yw, form.control_by_sensed[:, self._used], axes=([3], [0]))
-        by_sensed = np.moveaxis(by_sensed, -1, 3).reshape(int(np.prod(self._shape)), -1)
-        constant = np.einsum("ipqjkl,j->ipq", yw, form.control_constant).reshape(-1, 1)
-        self._operator = np.concatenate([y0.reshape(-1, self._size), by_sensed, constant], axis=1)
+        used = np.flatnonzero(np.any(form.control_by_sensed != 0.0, axis=0)).tolist() or [0]
+        self._used = slice(used[0], used[-1] + 1)
+        key = (mesh.key, *(item.tobytes() for item in (form.control, form.control_by_sensed, form.control_constant)))
+        self._operator = _operators(key, partial(_control_operator, form, mesh, self._used))
         self._input = np.ones(self._operator.shape[1])
 
     def advance(self, start: Array, arguments: Array) -> Array:
@@ -157,10 +167,21 @@ class _ControlStep:
         if not self._size:
             return start
         self._input[: self._size] = start
-        self._input[self._size : -1] = arguments[self._used, :, 1:].reshape(-1)
-        values = self._operator.dot(self._input).reshape(self._shape)
-        arguments[-self._size :] = values
+        self._input[self._size : -1] = arguments[self._used].reshape(-1)
+        values = arguments[-self._size :]
+        self._operator.dot(self._input, out=values.reshape(-1))
         return values[:, -1, -1]
+
+
+def _control_operator(form: DriveForm, mesh: FixedMesh, used: slice) -> Array:
+    """(start, the used sensed signals at the points, 1) to the controller's states at the points; nothing is taken from a piece's start."""
+    m, n, size = len(mesh.edges) - 1, mesh.degree, form.n_control
+    y0, yw = chained_operator(form.control, mesh.lengths, n)
+    gains = form.control_by_sensed[:, used]
+    by_sensed = np.zeros((size * m * (n + 1), gains.shape[1], m, n + 1))
+    by_sensed[..., 1:] = np.moveaxis(np.tensordot(yw, gains, axes=([3], [0])), -1, 3).reshape(*by_sensed.shape[:3], n)
+    constant = np.einsum("ipqjkl,j->ipq", yw, form.control_constant)
+    return np.concatenate([part.reshape(len(by_sensed), -1) for part in (y0, by_sensed, constant)], axis=1)
 
 
 class _Signals:
@@ -193,8 +214,7 @@ class _Signals:
 
 def _step_times(mesh: FixedMesh, count: int, places: Array) -> Array:
     """Times of these places of [0, 1] in every piece of every step, drawn in a little from the piece ends: (count, m, n_places)."""
-    lengths = np.diff(mesh.edges)
-    inner = mesh.edges[:-1, None] + lengths[:, None] * np.clip(places, 1e-7, 1.0 - 1e-7)
+    inner = mesh.edges[:-1, None] + mesh.lengths[:, None] * np.clip(places, 1e-7, 1.0 - 1e-7)
     return mesh.start + mesh.step * np.arange(count)[:, None, None] + inner
 
 
@@ -207,7 +227,7 @@ def interval_collocation(run: Run, times: Array, mesh: FixedMesh, stiff: bool = 
     count = max(1, math.ceil((run.duration - mesh.start) / mesh.step - 1e-9))
     history = _SensedHistory(run, mesh)
     m = len(mesh.edges) - 1
-    plant = plant_step(form, history.rows, np.diff(mesh.edges), n, stiff)
+    plant = plant_step(form, history.rows, mesh.lengths, n, stiff)
     control = _ControlStep(run, mesh)
     blurred = form.drive.has_kink
     up, down = oversampling(n, _OVERSAMPLES)
@@ -227,15 +247,14 @@ def interval_collocation(run: Run, times: Array, mesh: FixedMesh, stiff: bool = 
             here = arguments[k]
             history.sense(observed, k, here)
             c = control.advance(c, here)
-            given = here.dot(up) if blurred else here[..., 1:]
+            given = here.reshape(-1, n + 1).dot(up).reshape(len(here), m, -1) if blurred else here[..., 1:]
             v = drive(given[:sensed_count], given[sensed_count:], 0.0 if signals.drive is None else signals.drive[k])
             if signals.output is not None:
                 v = v + signals.output[k]
             if floored:
                 v = np.maximum(v, run.floor)
-            if blurred:
-                v = v.dot(down)
-            v_all[k], x_all[k] = v, x
+            v_all[k] = v.dot(down) if blurred else v
+            v, x_all[k] = v_all[k], x
             x = plant.advance(x, v, signals.forcing(v, k), observed[k + history.depth])
             if not math.isfinite(x[0]):
                 done = k
@@ -250,20 +269,20 @@ def interval_collocation(run: Run, times: Array, mesh: FixedMesh, stiff: bool = 
 
 def _trace(run: Run, times: Array, mesh: FixedMesh, table: Array, status: str) -> Trace:
     """The trace from the table of plant states, sensed signals and controller states at the points, (count, m, n + 1, n_signals)."""
-    form, n = run.form, mesh.degree
-    count, m = table.shape[:2]
+    form, count = run.form, len(table)
     if status == "diverged":
         times = times[times < mesh.start + count * mesh.step]
-    still = times < mesh.start
-    k = np.clip(((times - mesh.start) / mesh.step).astype(int), 0, max(count - 1, 0))
-    within = times - mesh.start - k * mesh.step
-    piece = np.clip(np.searchsorted(mesh.edges, within, side="right") - 1, 0, m - 1)
-    places = np.clip((within - mesh.edges[piece]) / np.diff(mesh.edges)[piece], 0.0, 1.0)
-    at_rest = np.concatenate([run.initial[: form.n_plant], form.sensed_rows @ run.initial[: form.n_plant], run.initial[form.n_plant :]])
-    values = np.tile(at_rest, (len(times), 1))
+    values = np.empty((len(times), table.shape[-1]))
+    still = int(np.searchsorted(times, mesh.start))
+    values[:still] = np.concatenate(
+        [run.initial[: form.n_plant], form.sensed_rows @ run.initial[: form.n_plant], run.initial[form.n_plant :]]
+    )
     if count:
-        moving = (evaluation(n, places)[:, None, :] @ table[k, piece])[:, 0]
-        values = np.where(still[:, None], values, moving)
+        moving = times[still:]
+        build = partial(_looked_up, mesh, count, moving)
+        small = len(moving) <= _MOST_KEPT_TIMES
+        piece, basis = _lookups((mesh.key, mesh.start, count, moving.tobytes()), build) if small else build()
+        np.matmul(basis, table.reshape(-1, *table.shape[2:]).take(piece, axis=0), out=values[still:, None])
     sensed = values[:, form.n_plant : form.n_plant + form.n_sensed].T
     controller = values[:, form.n_plant + form.n_sensed :]
     output = run.controlled(sensed, controller.T, times)
@@ -275,6 +294,16 @@ def _trace(run: Run, times: Array, mesh: FixedMesh, table: Array, status: str) -
     )  # fmt: skip
 
 
+def _looked_up(mesh: FixedMesh, count: int, times: Array) -> tuple[Array, Array]:
+    """For times from the start of the mesh: the number of the piece among those of all steps, and (n_times, 1, n + 1) weights on its points."""
+    k = np.minimum(((times - mesh.start) / mesh.step).astype(int), count - 1)
+    within = times - mesh.start - k * mesh.step
+    m = len(mesh.lengths)
+    piece = np.clip(np.searchsorted(mesh.edges, within, side="right") - 1, 0, m - 1)
+    places = np.clip((within - mesh.edges[piece]) / mesh.lengths[piece], 0.0, 1.0)
+    return k * m + piece, evaluation(mesh.degree, places)[:, None, :]
+
+
 def _error_estimate(run: Run, table: Array) -> float:
     """The unresolved part of the plant's states: their two highest Legendre coefficients against their size so far.
 
@@ -283,6 +312,6 @@ def _error_estimate(run: Run, table: Array) -> float:
     if not table.size:
         return math.inf
     states = table[..., : run.form.n_plant]
-    tail = np.abs(np.einsum("kmps,pc->kmcs", states, tail_weights(table.shape[2] - 1))).max(axis=(1, 2))
+    tail = np.abs(tail_weights(table.shape[2] - 1).T @ states).max(axis=(1, 2))
     size = np.maximum(np.maximum.accumulate(np.abs(states).max(axis=(1, 2))), 1e-300)
     return float((tail / size).max())

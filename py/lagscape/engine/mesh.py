@@ -7,14 +7,36 @@ right Radau nodes is Radau IIA: order 2n - 1 at the ends and stable for any stif
 
 from __future__ import annotations
 
+from collections.abc import Callable, Hashable
 from functools import lru_cache
+from typing import Any
 
 import numpy as np
 from numpy.polynomial import legendre
 
 from lagscape.loops.protocol import Array
 
-__all__ = ["evaluation", "gauss_places", "integration", "nodes", "oversampling", "points", "tail_weights"]
+__all__ = ["Kept", "evaluation", "gauss_places", "integration", "nodes", "oversampling", "points", "tail_weights"]
+
+
+class Kept:
+    """What was built from the same numbers a moment ago: a drag repeats most of them, and building costs more than the look-up.
+
+    The key holds every number that the building reads (arrays as bytes); what is kept must not be changed afterwards.
+    """
+
+    def __init__(self, most: int) -> None:
+        self._most = most
+        self._built: dict[Hashable, Any] = {}
+
+    def __call__(self, key: Hashable, build: Callable[[], Any]) -> Any:
+        found = self._built.get(key)
+        if found is None:
+            found = build()
+            if len(self._built) >= self._most:
+                del self._built[next(iter(self._built))]
+            self._built[key] = found
+        return found
 
 
 def _frozen(array: Array) -> Array:

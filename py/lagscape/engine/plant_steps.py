@@ -9,14 +9,17 @@ times (x_start, v, v z, w). A linear plant (N = 0) has no z and nothing to solve
 
 from __future__ import annotations
 
+from functools import partial
 from typing import Any
 
 import numpy as np
 
-from lagscape.engine.mesh import integration
+from lagscape.engine.mesh import Kept, integration, nodes
 from lagscape.loops.protocol import Array, DriveForm
 
 __all__ = ["GroupedStep", "ScalarStep", "chained_operator", "plant_step"]
+
+_groups = Kept(32)
 
 _MOST_DECAY = 10.0
 """Largest integral of the decay rate over a piece before the integrating factor swamps the piece's start (numerical experiment)."""
@@ -65,24 +68,33 @@ class ScalarStep:
     def __init__(self, form: DriveForm, rows: Array, lengths: Array, n: int) -> None:
         self._a0, self._a1 = -float(form.plant[0, 0]), -float(form.plant_by_output[0, 0])
         self._b, self._e = float(form.input_vector[0]), float(form.constant[0])
-        # The piece length is folded into the integration: one matrix a piece.
-        self._q = lengths[:, None, None] * integration(n).T
+        self._q = integration(n).T
+        self._lengths = lengths[:, None]
+        self._by_output = self._a1 * self._lengths
+        self._constant = self._a0 * self._lengths * nodes(n)
         self._row = rows[:, 0][:, None, None]
+        self._plain = len(rows) == 1 and float(rows[0, 0]) == 1.0
         self._shape = (len(lengths), n + 1)
 
     def _exponent(self, v: Array) -> Array:
-        rate = self._a1 * v
+        exponent = np.dot(v, self._q)
+        exponent *= self._by_output
         if self._a0 != 0.0:
-            rate += self._a0
-        return (rate[..., None, :] @ self._q)[..., 0, :]
+            exponent += self._constant
+        return exponent
 
     def _gain(self, v: Array, growth: Array, forcing: Array | None) -> Array:
-        source = self._e * growth
-        if self._b != 0.0:
-            source += self._b * v * growth
+        if self._b == 0.0 and forcing is None:
+            gain = np.dot(growth, self._q)
+            gain *= self._e * self._lengths
+            return gain
+        source = self._b * v + self._e
         if forcing is not None:
-            source += forcing * growth
-        return (source[..., None, :] @ self._q)[..., 0, :]
+            source += forcing
+        source *= growth
+        gain = np.dot(source, self._q)
+        gain *= self._lengths
+        return gain
 
     def advance(self, start: Array, v: Array, forcing: Array | None, into: Array) -> Array:
         """Fills `into`, (n_rows, m, n + 1), with the observed signals and returns the end state. `forcing`: (n_plant, m, n) or None."""
@@ -93,11 +105,12 @@ class ScalarStep:
         for gain, factor in zip(gained[:, -1].tolist(), growth[:, -1].tolist(), strict=True):
             starts.append(x)
             x = (x + gain) / factor
-        values = np.empty(self._shape)
+        values = into[0] if self._plain else np.empty(self._shape)
         values[:, 0] = starts
         gained += values[:, :1]
         np.divide(gained, growth, out=values[:, 1:])
-        np.multiply(self._row, values, out=into)
+        if not self._plain:
+            np.multiply(self._row, values, out=into)
         return np.array([x])
 
     def states(self, starts: Array, v: Array, forcing: Array | None) -> Array:
@@ -123,13 +136,13 @@ class _Group:
 
     def __init__(self, form: DriveForm, rows: Array, lengths: Array, n: int, picked: Any) -> None:
         size, m = form.n_plant, len(lengths)
-        nodes, points = m * n, m * (n + 1)
+        unknowns, points = m * n, m * (n + 1)
         y0, yw = chained_operator(form.plant, lengths, n)
-        by_forcing = yw.reshape(size * points, size, nodes)
+        by_forcing = yw.reshape(size * points, size, unknowns)
         columns = [y0.reshape(size * points, size), (by_forcing.sum(axis=2) @ form.constant)[:, None]]
         self.has_b = bool(np.any(form.input_vector))
         if self.has_b:
-            columns.append((form.input_vector @ by_forcing).reshape(size * points, nodes))
+            columns.append((form.input_vector @ by_forcing).reshape(size * points, unknowns))
         known = np.concatenate(columns, axis=1)
         spread = form.plant_by_output[:, picked].T  # R, one row a solved state
         by_product = (spread @ by_forcing).reshape(size * points, -1)
@@ -156,16 +169,19 @@ class GroupedStep:
 
     def __init__(self, form: DriveForm, rows: Array, lengths: Array, n: int) -> None:
         picked = np.flatnonzero(np.any(form.plant_by_output != 0.0, axis=0))
-        self._size, self._n, self._m, self._r, self._n_rows = form.n_plant, n, len(lengths), len(picked), len(rows)
+        size = form.n_plant
+        self._size, self._n, self._m, self._r, self._n_rows = size, n, len(lengths), len(picked), len(rows)
         per_group = max(1, _MOST_UNKNOWNS // (n * max(1, self._r)))
         parts = np.array_split(np.arange(self._m), -(-self._m // per_group))
+        numbers = (form.plant, form.plant_by_output, form.input_vector, form.constant, rows)
+        shared = (n, len(rows), size, *(np.asarray(item).tobytes() for item in numbers))
         groups: dict[bytes, _Group] = {}
         self._groups: list[tuple[int, int, _Group]] = []
         for part in parts:
             own = lengths[part]
             key = np.round(own / lengths.max(), 9).tobytes()
             if key not in groups:
-                groups[key] = _Group(form, rows, own, n, picked)
+                groups[key] = _groups((*shared, own.tobytes()), partial(_Group, form, rows, own, n, picked))
             self._groups.append((int(part[0]), int(part[-1]) + 1, groups[key]))
         self._inputs: list[list[Array]] = [[] for _ in self._groups]
 
