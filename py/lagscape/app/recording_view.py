@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import asyncio
 import re
 from functools import cached_property
 from typing import Any
@@ -45,6 +46,7 @@ __all__ = ["RecordingView"]
 _STRIP_BINS = 1200
 _WINDOW_BINS = 1600
 _FIRST_WINDOW_S = 300.0
+_SHOW_FIRST_S = 0.05
 _SIGH = 2.0
 """A breath this many times the usual one is taken for a sigh (common practice, no source)."""
 _NASAL = re.compile(r"nas|press|ptaf|cannula", re.IGNORECASE)
@@ -200,13 +202,18 @@ class RecordingView:
         page.send("working", {"text": f"reading {payload['name']}"})
         try:
             await ensure_scipy()
-            self._read(payload["file"], payload["name"], None)
+            if self._read(payload["file"], payload["name"], None):
+                # The channels are on the screen before the measuring, which may take seconds, begins.
+                await asyncio.sleep(_SHOW_FIRST_S)
+                page.send("working", {"text": f"measuring {payload['name']}"})
+                self._choose(self._likeliest())
         except ImportError as problem:
             self._refuse(str(problem))
         finally:
             page.send("working", {"text": ""})
 
-    def _read(self, file: Any, name: str, rate: float | None) -> None:
+    def _read(self, file: Any, name: str, rate: float | None) -> bool:
+        """Read the file and show its channels; False where it was refused."""
         page = self.bench.page
         last = [-1]
 
@@ -222,11 +229,17 @@ class RecordingView:
         except RecordingError as problem:
             self._waiting = (file, name)
             self._refuse(str(problem))
-            return
-        self._waiting = None
+            return False
+        self._waiting, self.measurement = None, None
         self.recording = _with_derived(recording)
-        likely = recording.of_kind(*_READABLE_KINDS) or recording.signals
-        self._choose(likely[0].name)
+        self.signal = self.recording.signal(self._likeliest())
+        self.write()
+        return True
+
+    def _likeliest(self) -> str:
+        """The channel that most looks like breathing; the first where none does."""
+        assert self.recording is not None
+        return (self.recording.of_kind(*_READABLE_KINDS) or self.recording.signals)[0].name
 
     def _choose(self, name: str) -> None:
         assert self.recording is not None
@@ -438,7 +451,8 @@ class RecordingView:
             self._refuse(f"The sampling rate must be a positive number of samples a second; got {text.strip()[:30]!r}.")
             return
         file.seek(0)
-        self._read(file, name, rate)
+        if self._read(file, name, rate):
+            self._choose(self._likeliest())
 
     def _fit(self) -> None:
         """The most plausible loop behind the measured cycles, with SpO2 where the recording has it."""
