@@ -12,11 +12,12 @@ import heapq
 import itertools
 import math
 from dataclasses import dataclass
+from operator import mul
 from typing import Any
 
 import numpy as np
 
-from lagscape.engine.history import PiecewiseHistory, to_chebyshev
+from lagscape.engine.history import PiecewiseHistory, distinct_rows, to_chebyshev
 from lagscape.engine.mesh import integration, points, tail_weights
 from lagscape.engine.run import Run
 from lagscape.engine.trace import Trace, find_silences
@@ -86,30 +87,42 @@ class _Breaks:
         return found
 
 
-def _linear_pieces(system: Array, forcing: Array, lengths: Array, start: Array, n: int) -> Array:
-    """x' = M x + w on pieces in a row. M (m, n, s, s) or (s, s) and w (m, s, n) at the nodes; x at the points, (m, s, n + 1)."""
-    m, size = forcing.shape[:2]
-    scaled = lengths[:, None, None] * integration(n)
-    if system.ndim == 2:
-        big = -system[:, None, :, None] * scaled[:, None, :, None, :]
-    else:
-        big = -system.transpose(0, 2, 3, 1)[:, :, None] * scaled[:, None, :, None, :]
-    unknowns = size * n
-    big = big.reshape(m, unknowns, unknowns)
-    big.reshape(m, -1)[:, :: unknowns + 1] += 1.0
-    right = np.zeros((m, size, n, size + 1))
-    for i in range(size):
-        right[:, i, :, i] = 1.0
-    right[..., size] = forcing @ scaled.transpose(0, 2, 1)
-    solved = np.linalg.solve(big, right.reshape(m, unknowns, size + 1)).reshape(m, size, n, size + 1)
-    values = np.empty((m, size, n + 1))
-    ends, gains = solved[:, :, -1, :size], solved[:, :, -1, size]
-    x = start
-    for i in range(m):
-        values[i, :, 0] = x
-        x = ends[i].dot(x) + gains[i]
-    values[:, :, 1:] = (solved[..., :size] @ values[:, None, :, :1])[..., 0] + solved[..., size]
-    return values
+class _LinearPieces:
+    """x' = (A + v N) x + w on pieces in a row, by one batched solve; N is None where v does not multiply the state."""
+
+    def __init__(self, matrix: Array, by_output: Array | None, n: int) -> None:
+        self._size, self._n = len(matrix), n
+        self._q = integration(n).T
+        self._constant = -np.kron(matrix, integration(n))
+        self._by_output = None if by_output is None else -np.kron(by_output, integration(n))
+
+    def solve(self, v: Array | None, forcing: Array, lengths: Array, start: list[float]) -> Array:
+        """v (m, n), if N is there, and w (m, s, n) at the nodes; x at the points, (m, s, n + 1)."""
+        m, size, n = len(lengths), self._size, self._n
+        unknowns = size * n
+        scale = lengths[:, None, None]
+        if self._by_output is None or v is None:
+            system = self._constant * scale
+        else:
+            system = self._by_output * (v if size == 1 else np.concatenate([v] * size, axis=1))[:, None]
+            system += self._constant
+            system *= scale
+        system.reshape(m, -1)[:, :: unknowns + 1] += 1.0
+        right = np.zeros((m, size, n, size + 1))
+        for i in range(size):
+            right[:, i, :, i] = 1.0
+        np.multiply(forcing.reshape(-1, n).dot(self._q).reshape(m, size, n), scale, out=right[..., size])
+        solved = np.linalg.solve(system, right.reshape(m, unknowns, size + 1)).reshape(m, size, n, size + 1)
+        # A chain of tiny products: plain floats are faster than array calls.
+        x, starts = start, []
+        for rows in solved[:, :, -1].tolist():
+            starts.append(x)
+            x = [row[-1] + sum(map(mul, row, x)) for row in rows]
+        values = np.empty((m, size, n + 1))
+        values[:, :, 0] = starts
+        values[:, :, 1:] = (solved[..., :size] @ values[:, None, :, :1])[..., 0]
+        values[:, :, 1:] += solved[..., size]
+        return values
 
 
 class _Path:
@@ -118,12 +131,14 @@ class _Path:
     def __init__(self, run: Run, settings: ExactSettings, start: float, rate: float) -> None:
         form = run.form
         self.run, self.settings, self.n = run, settings, settings.degree
-        self.rows, row_of = np.unique(form.sensed_rows, axis=0, return_inverse=True)
-        self.row_of = row_of.reshape(-1)[:, None, None]
+        self.rows, row_of = distinct_rows(form.sensed_rows)
+        self.row_of = np.array(row_of)[:, None, None]
         self.delays = np.array([float(delay) for delay in form.sensed_delays])[:, None, None]
         self.history = PiecewiseHistory(self.n, start, self.rows @ run.initial[: form.n_plant])
         self.breaks = _Breaks(run, settings, start)
         self.x, self.c = run.initial[: form.n_plant], run.initial[form.n_plant :]
+        self.plant = _LinearPieces(form.plant, form.plant_by_output if np.any(form.plant_by_output) else None, self.n)
+        self.control = _LinearPieces(form.control, None, self.n) if form.n_control else None
         self.size = np.maximum(np.abs(run.initial), 1e-300)
         self.longest = settings.piece / rate
         self.advance_by = form.delays[0]
@@ -169,16 +184,16 @@ class _Path:
     def _arguments(self, edges: Array) -> tuple[Array, Array]:
         """Times (m, n + 1), drawn in from the piece ends, and what the drive takes there: (n_sensed + n_control, m, n + 1)."""
         form, n = self.run.form, self.n
-        lengths = np.diff(edges)[:, None]
-        times = edges[:-1, None] + lengths * points(n)
-        inner = edges[:-1, None] + lengths * self.inner
-        signal = np.broadcast_to(self.row_of, (form.n_sensed, *times.shape))
-        sensed = self.history.at(times - self.delays, signal, inner - self.delays)
+        begins = edges[:-1, None]
+        lengths = edges[1:, None] - begins
+        times = begins + lengths * points(n)
+        inner = begins + lengths * self.inner
         arguments = np.empty((form.n_sensed + form.n_control, *times.shape))
-        arguments[: form.n_sensed] = sensed
-        if form.n_control:
+        sensed = arguments[: form.n_sensed]
+        sensed[:] = self.history.at(times - self.delays, self.row_of, inner - self.delays)
+        if self.control is not None:
             forcing = form.control_by_sensed @ sensed[..., 1:].transpose(1, 0, 2) + form.control_constant[:, None]
-            arguments[form.n_sensed :] = _linear_pieces(form.control, forcing, lengths[:, 0], self.c, n).transpose(1, 0, 2)
+            arguments[form.n_sensed :] = self.control.solve(None, forcing, lengths[:, 0], self.c.tolist()).transpose(1, 0, 2)
         return inner, arguments
 
     def _kinks(self, edges: Array, times: Array, arguments: Array) -> list[float]:
@@ -198,35 +213,44 @@ class _Path:
 
     def _roots(self, edges: Array, values: Array) -> list[float]:
         """Roots well inside the pieces of the polynomials through these values at the points, (m, n + 1)."""
-        dense = values @ self.to_dense
-        lowest, highest = dense.min(axis=1).tolist(), dense.max(axis=1).tolist()
+        dense = values.dot(self.to_dense)
+        lowest, highest = dense.min(axis=1), dense.max(axis=1)
+        near = _GRAZING * (highest - lowest)
+        close = np.flatnonzero((lowest <= near) & (highest >= -near))
         found: list[float] = []
-        for piece, (low, high) in enumerate(zip(lowest, highest, strict=True)):
-            near = _GRAZING * (high - low)
-            if low <= near and high >= -near:
-                series = (to_chebyshev(self.n) @ values[piece]).tolist()
-                for left, right in self._brackets(dense[piece].tolist(), series):
-                    place = _refined(series, left, right)
-                    if _SAME_PLACE < place < 1.0 - _SAME_PLACE:
-                        found.append(float(edges[piece] + place * (edges[piece + 1] - edges[piece])))
+        if not close.size:
+            return found
+        all_series = values[close].dot(to_chebyshev(self.n).T).tolist()
+        for row, left, right in self._brackets(dense[close], all_series):
+            place = _refined(all_series[row], left, right)
+            if _SAME_PLACE < place < 1.0 - _SAME_PLACE:
+                piece = close[row]
+                found.append(float(edges[piece] + place * (edges[piece + 1] - edges[piece])))
         return found
 
-    def _brackets(self, dense: list[float], series: list[float]) -> list[tuple[float, float]]:
-        """Intervals of [0, 1] with one sign change each: between dense samples, or beside a dip that no sample shows (grazing)."""
-        size = max(map(abs, dense))
+    def _brackets(self, dense: Array, all_series: list[list[float]]) -> list[tuple[int, float, float]]:
+        """Row and interval of [0, 1] of each sign change: between dense samples, or beside a dip that no sample shows (grazing)."""
         places = self.places
-        kept = [j for j, value in enumerate(dense) if abs(value) > 1e-9 * size]
-        found = [(places[i], places[j]) for i, j in itertools.pairwise(kept) if (dense[i] > 0.0) != (dense[j] > 0.0)]
-        for j in range(1, len(dense) - 1):
-            before, value, after = dense[j - 1 : j + 2]
-            one_sign = before * value > 0.0 and value * after > 0.0
-            if one_sign and abs(value) < 2.0 * _GRAZING * size and abs(value) < abs(before) and abs(value) < abs(after):
-                left, right = places[j - 1], places[j + 1]
-                fine = [left + (right - left) * i / 32.0 for i in range(1, 32)]
-                heights = [_value_and_slope(series, place)[0] * (1.0 if value > 0.0 else -1.0) for place in fine]
+        height = np.abs(dense)
+        size = height.max(axis=1, keepdims=True)
+        positive = dense > 0.0
+        row, kept = np.nonzero(height > 1e-9 * size)
+        sign = positive[row, kept]
+        change = np.flatnonzero((sign[1:] != sign[:-1]) & (row[1:] == row[:-1]))
+        found = [(i, places[left], places[right]) for i, left, right in zip(*(
+            part.tolist() for part in (row[change], kept[change], kept[change + 1])
+        ), strict=True)]  # fmt: skip
+        inner = height[:, 1:-1]
+        dips = (inner < 2.0 * _GRAZING * size) & (inner < height[:, :-2]) & (inner < height[:, 2:])
+        if dips.any():
+            dips &= (positive[:, 1:-1] == positive[:, :-2]) & (positive[:, 1:-1] == positive[:, 2:]) & (inner > 0.0)
+            for i, j in zip(*(part.tolist() for part in np.nonzero(dips)), strict=True):
+                left, right = places[j], places[j + 2]
+                fine = [left + (right - left) * k / 32.0 for k in range(1, 32)]
+                heights = [_value_and_slope(all_series[i], place)[0] * (1.0 if positive[i, j + 1] else -1.0) for place in fine]
                 deepest = min(range(len(fine)), key=heights.__getitem__)
                 if heights[deepest] < 0.0:
-                    found += [(left, fine[deepest]), (fine[deepest], right)]
+                    found += [(i, left, fine[deepest]), (i, fine[deepest], right)]
         return found
 
     def _plant(self, edges: Array, times: Array, arguments: Array) -> Array:
@@ -238,8 +262,7 @@ class _Path:
         forcing = v[:, None, :] * form.input_vector[:, None] + form.constant[:, None]
         if run.used_channels:
             forcing = forcing + _pieces_first(run.plant_push_by_output(nodes)) * v[:, None, :] + _pieces_first(run.plant_push(nodes))
-        system = form.plant + v[..., None, None] * form.plant_by_output if np.any(form.plant_by_output) else form.plant
-        return _linear_pieces(system, forcing, np.diff(edges), self.x, self.n)
+        return self.plant.solve(v, forcing, edges[1:] - edges[:-1], self.x.tolist())
 
     def _unresolved(self, edges: Array, states: Array, arguments: Array) -> Any:
         """Pieces to halve: those whose two highest coefficients are too large, unless they are already very short."""
@@ -297,6 +320,8 @@ def _refined(series: list[float], low: float, high: float) -> float:
             high = place
         else:
             low = place
+        if abs(value) <= 1e-12 * abs(slope):
+            break  # a step this small may round onto an end of the bracket, and halving would start anew
         following = place - value / slope if slope != 0.0 else low
         if not low < following < high:
             following = 0.5 * (low + high)
