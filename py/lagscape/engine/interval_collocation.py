@@ -9,6 +9,7 @@ corner far less than its values at the nodes would.
 
 from __future__ import annotations
 
+import itertools
 import math
 from dataclasses import dataclass
 from functools import cached_property, partial
@@ -69,23 +70,24 @@ def mesh_for(run: Run, rate: float, pieces_per_rate: float, degree: int, start: 
     """
     step = min(run.form.delays[0], max(run.duration - start, 1e-3 * run.duration))
     step /= math.ceil(step * rate * pieces_per_rate / _MOST_PIECES_A_STEP)
-    breaks = np.concatenate([[start], run.breaks[run.breaks > start]])
+    breaks = [start, *run.breaks[run.breaks > start].tolist()]
     holds = [item.span for item in run.disturbances if item.kind == "noise"]
-    marks = np.array([0.0, 1.0])
+    marks = [0.0, 1.0]
     if holds:
         whole = min(math.floor(step / holds[0] + 1e-9), _MOST_PIECES_A_STEP)
         step = holds[0] * whole if whole else holds[0] / math.ceil(holds[0] / step - 1e-9)
-        marks = np.arange(max(whole, 1) + 1) / max(whole, 1)
+        holds_a_step = np.arange(max(whole, 1) + 1) / max(whole, 1)
         shift = np.mod(min(item.start for item in run.disturbances if item.kind == "noise") - start, step)
-        marks = np.unique(np.concatenate([marks, np.mod(marks + shift / step, 1.0)]))
+        marks = np.unique(np.concatenate([holds_a_step, np.mod(holds_a_step + shift / step, 1.0)])).tolist()
     # First what jumps, then the images under the other delays, which are smoother.
-    images = [breaks[:_MOST_EXTRA_PIECES] + delay for delay in run.form.delays if not _whole(delay / step)]
-    extra = np.concatenate([breaks, *images])
-    for place in np.mod(extra - start, step)[: 4 * _MOST_EXTRA_PIECES if holds else 2 * _MOST_EXTRA_PIECES] / step:
-        if np.abs(marks - place).min() > _SAME_PLACE:
-            marks = np.sort(np.append(marks, place))
+    images = [time + delay for delay in run.form.delays if not _whole(delay / step) for time in breaks[:_MOST_EXTRA_PIECES]]
+    for time in [*breaks, *images][: 4 * _MOST_EXTRA_PIECES if holds else 2 * _MOST_EXTRA_PIECES]:
+        place = (time - start) % step / step
+        if min(abs(mark - place) for mark in marks) > _SAME_PLACE:
+            marks.append(place)
+    marks.sort()
     edges = [0.0]
-    for a, b in zip(marks[:-1].tolist(), marks[1:].tolist(), strict=True):
+    for a, b in itertools.pairwise(marks):
         count = max(1, math.ceil((b - a) * step * rate * pieces_per_rate - 1e-9))
         edges += [step * (a + (b - a) * i / count) for i in range(1, count + 1)]
     return FixedMesh(start, step, np.array(edges), degree)
@@ -124,12 +126,11 @@ class _SensedHistory:
     def sense(self, observed: Array, k: int, into: Array) -> None:
         """Fills into[:n_sensed], each (m, n + 1), on step k; `observed` holds step k at index k + depth."""
         here = k + self.depth
-        flat = into.reshape(len(into), -1)
         for j, (row, whole, matrix) in enumerate(self._plans):
             if matrix is None:
                 into[j] = observed[here - whole, row]
             else:
-                matrix.dot(observed[here - whole - 1 : here - whole + 1, row].reshape(-1), out=flat[j])
+                matrix.dot(observed[here - whole - 1 : here - whole + 1, row].reshape(-1), out=into[j].reshape(-1))
 
 
 def _shift_matrix(mesh: FixedMesh, back: float) -> Array:
@@ -239,14 +240,15 @@ def interval_collocation(run: Run, times: Array, mesh: FixedMesh, stiff: bool = 
     arguments = np.empty((count, form.n_sensed + form.n_control, m, n + 1))
     v_all, x_all = np.empty((count, m, n)), np.empty((count, form.n_plant))
     x, c = run.initial[: form.n_plant], run.initial[form.n_plant :]
-    sensed_count, drive = form.n_sensed, form.drive.value
+    sensed_count, controller_count, drive = form.n_sensed, form.n_control, form.drive.value
     floored = bool(run.used_channels) and math.isfinite(run.floor)
     done = count
     with np.errstate(over="ignore", invalid="ignore", divide="ignore"):  # a loop that leaves every range is a status
         for k in range(count):
             here = arguments[k]
             history.sense(observed, k, here)
-            c = control.advance(c, here)
+            if controller_count:
+                c = control.advance(c, here)
             given = here.reshape(-1, n + 1).dot(up).reshape(len(here), m, -1) if blurred else here[..., 1:]
             v = drive(given[:sensed_count], given[sensed_count:], 0.0 if signals.drive is None else signals.drive[k])
             if signals.output is not None:

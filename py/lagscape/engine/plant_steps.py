@@ -68,32 +68,35 @@ class ScalarStep:
     def __init__(self, form: DriveForm, rows: Array, lengths: Array, n: int) -> None:
         self._a0, self._a1 = -float(form.plant[0, 0]), -float(form.plant_by_output[0, 0])
         self._b, self._e = float(form.input_vector[0]), float(form.constant[0])
-        self._q = integration(n).T
-        self._lengths = lengths[:, None]
-        self._by_output = self._a1 * self._lengths
-        self._constant = self._a0 * self._lengths * nodes(n)
+        # Pieces of one length, the usual case, have that length folded into the matrices: two array calls less a step.
+        longest = float(lengths.max())
+        self._scale = None if lengths.min() > longest * (1.0 - 1e-13) else lengths[:, None] / longest
+        self._q = longest * integration(n).T
+        self._rate_q, self._constant_q = self._a1 * self._q, self._e * self._q
+        self._constant = self._a0 * lengths[:, None] * nodes(n)
         self._row = rows[:, 0][:, None, None]
         self._plain = len(rows) == 1 and float(rows[0, 0]) == 1.0
         self._shape = (len(lengths), n + 1)
 
     def _exponent(self, v: Array) -> Array:
-        exponent = np.dot(v, self._q)
-        exponent *= self._by_output
+        exponent: Array = v.dot(self._rate_q)
+        if self._scale is not None:
+            exponent *= self._scale
         if self._a0 != 0.0:
             exponent += self._constant
         return exponent
 
     def _gain(self, v: Array, growth: Array, forcing: Array | None) -> Array:
         if self._b == 0.0 and forcing is None:
-            gain = np.dot(growth, self._q)
-            gain *= self._e * self._lengths
-            return gain
-        source = self._b * v + self._e
-        if forcing is not None:
-            source += forcing
-        source *= growth
-        gain = np.dot(source, self._q)
-        gain *= self._lengths
+            gain: Array = growth.dot(self._constant_q)
+        else:
+            source = self._b * v + self._e
+            if forcing is not None:
+                source += forcing
+            source *= growth
+            gain = source.dot(self._q)
+        if self._scale is not None:
+            gain *= self._scale
         return gain
 
     def advance(self, start: Array, v: Array, forcing: Array | None, into: Array) -> Array:

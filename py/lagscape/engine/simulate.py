@@ -135,6 +135,8 @@ def _checked_times(duration: float, output_times: Any) -> Array:
     if output_times is not None and np.ndim(output_times) == 0 and not 2 <= int(output_times) <= 10_000_000:
         raise InvalidInputError(f"output_times must be 2 or more points; got {output_times!r}.")
     times = output_grid(duration, output_times)
+    if output_times is None:
+        return times
     ordered = times.ndim == 1 and times.size > 0 and np.all(np.diff(times) > 0.0)
     if not (ordered and times[0] >= 0.0 and times[-1] <= duration * (1.0 + 1e-12)):
         raise InvalidInputError(f"output_times must ascend from 0 or later to the duration {duration:.6g} s or earlier.")
