@@ -170,10 +170,10 @@ class _Path:
                     edges = np.sort(np.concatenate([edges, found]))
                     continue
             states = self._plant(edges, times, arguments)
-            if not np.all(np.isfinite(states)):
+            if not np.isfinite(states).all():
                 return False
             poor = self._unresolved(edges, states, arguments)
-            if not poor.size:
+            if not len(poor):
                 break
             edges = np.sort(np.concatenate([edges, 0.5 * (edges[poor] + edges[poor + 1])]))
         for kink in kinks:
@@ -202,7 +202,7 @@ class _Path:
         functions = []
         if run.form.drive.has_kink:
             functions.append(run.form.drive.switch(arguments[:split], arguments[split:], run.push(times)))
-        if math.isfinite(run.floor):
+        if run.used_channels and math.isfinite(run.floor):
             below = run.output_push(times)
             if np.any(np.asarray(below) < 0.0):
                 functions.append(run.form.drive.value(arguments[:split], arguments[split:], run.push(times)) + below - run.floor)
@@ -271,11 +271,13 @@ class _Path:
         everything = np.concatenate([states, control], axis=1)
         self.size = np.maximum(self.size, np.abs(everything).max(axis=(0, 2)))
         tail = (np.abs(everything @ tail_weights(self.n)).max(axis=2) / self.size).max(axis=1)
-        poor = np.flatnonzero(tail > self.settings.tolerance)
-        poor = poor[np.diff(edges)[poor] > 1e-6 * self.longest]
-        if not poor.size:
-            self.worst_tail = max(self.worst_tail, float(tail.max()))
-        return poor
+        worst = float(tail.max())
+        if worst > self.settings.tolerance:
+            poor = np.flatnonzero((tail > self.settings.tolerance) & (np.diff(edges) > 1e-6 * self.longest))
+            if poor.size:
+                return poor
+        self.worst_tail = max(self.worst_tail, worst)
+        return ()
 
     def _accept(self, edges: Array, states: Array, arguments: Array) -> None:
         form = self.run.form
