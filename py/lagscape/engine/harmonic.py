@@ -254,6 +254,10 @@ class Balance:
         arguments = np.einsum("barK,brK->baK", transfer, force)
         moved = np.einsum("bqrK,brK->bqK", factor, force)
         raw, gradient = self.in_time(arguments, samples)
+        # A drive may ignore some of its arguments, as one that is heard through a lag alone.
+        active = np.flatnonzero(gradient.any(axis=(0, 2)))
+        if 0 < active.size < gradient.shape[1]:
+            gradient, transfer, transfer_slope = gradient[:, active], transfer[:, active], transfer_slope[:, active]
         kappa = self.gain[:, None]
         excess = raw - self.output_rest[:, None]
         output = kappa * excess + self.shift[:, None]
