@@ -28,6 +28,8 @@ _LARGEST_PHASE_STEP = 0.9
 _STEPS_PER_HALF_TURN = 6
 _MOST_FREQUENCIES = 20_000
 _TENTHS = np.arange(1, 10) / 10.0
+_BEYOND = np.geomspace(1.0, 1e6, 60)
+_EVEN_SHARES = np.linspace(0.0, 1.0, 48)
 _POLE_OFFSETS = np.array([-6.0, -2.5, -1.0, -0.4, 0.0, 0.4, 1.0, 2.5, 6.0])
 
 
@@ -94,7 +96,7 @@ def _first_range(opened: OpenLoop, shortest: float) -> float:
 
 def _last_above(opened: OpenLoop, start: float, level: float) -> float:
     """The last frequency, if any, beyond `start` where the envelope is not yet below `level`; `start` where there is none."""
-    beyond = start * np.geomspace(1.0, 1e6, 60)
+    beyond = start * _BEYOND
     above = np.flatnonzero(opened.envelope(beyond) >= level)
     return float(beyond[min(above[-1] + 1, 59)]) if above.size else start
 
@@ -107,7 +109,8 @@ def _sample(opened: OpenLoop, start: float, end: float, longest: float) -> tuple
     if start == 0.0:
         sizes = np.abs(opened.poles)
         slow = min([1.0 / longest, *(size for size in sizes.tolist() if size * longest > 1e-9)])
-        parts.append(np.geomspace(1e-3 * min(slow, end), end, 48))
+        lowest = 1e-3 * min(slow, end)
+        parts.append(lowest * (end / lowest) ** _EVEN_SHARES)
     for pole in opened.poles.tolist():
         if pole.imag > 0.0:
             parts.append(pole.imag + max(abs(pole.real), 1e-9 * pole.imag) * _POLE_OFFSETS)

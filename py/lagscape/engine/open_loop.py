@@ -158,6 +158,23 @@ class OpenLoop:
             size += weight
         return value, slope, size
 
+    def quasi_polynomial_at(self, s: complex) -> tuple[complex, complex]:
+        """F and dF/ds alone, for one loop at one point."""
+        columns = self._columns
+        value, slope = 0j, 0j
+        for coefficient in columns[0]:
+            slope = slope * s + value
+            value = value * s + coefficient
+        for column, delay in zip(columns[1:], self.delays, strict=True):
+            term, term_slope = 0j, 0j
+            for coefficient in column:
+                term_slope = term_slope * s + term
+                term = term * s + coefficient
+            turn = cmath.exp(-s * delay)
+            value += term * turn
+            slope += (term_slope - delay * term) * turn
+        return value, slope
+
     def at(self, s: complex) -> tuple[complex, complex]:
         """L and dL/ds for one loop at one point; s must not be a root of D."""
         columns = self._columns

@@ -127,7 +127,18 @@ def polish_root(opened: OpenLoop, seed: complex) -> tuple[complex, float]:
     s = seed
     farthest = 700.0 / opened.longest_delay
     last = math.inf
+    # While the steps are long the residual decides nothing, so the terms' sizes are left out.
     for _ in range(40):
+        if not abs(s.real) < farthest:
+            return s, 1.0
+        value, slope = opened.quasi_polynomial_at(s)
+        if value == 0.0 or slope == 0.0:
+            break
+        step = value / slope
+        s -= step
+        if abs(step) <= 1e-7 * abs(s):
+            break
+    for _ in range(10):
         if not abs(s.real) < farthest:
             return s, 1.0
         value, slope, size = opened.characteristic_at(s)
@@ -237,10 +248,11 @@ def generator_eigenvalues(form: DriveForm, rest: Rest, nodes: int = _NODES) -> l
         total[n : n + m, n : n + m] = form.control
         rows = 1
     else:
-        distinct, which = np.unique(form.sensed_rows, axis=0, return_inverse=True)
-        which = np.ravel(which)
+        keys = [tuple(row) for row in form.sensed_rows.tolist()]
+        distinct = list(dict.fromkeys(keys))
+        which = [distinct.index(key) for key in keys]
         rows = len(distinct)
-        present = np.concatenate([distinct, np.zeros((rows, m))], axis=1)
+        present = np.concatenate([np.array(distinct), np.zeros((rows, m))], axis=1)
         size = n + m + rows * nodes
         total = np.zeros((size, size))
         total[:n, :n] = plant
