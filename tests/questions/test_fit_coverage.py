@@ -7,7 +7,6 @@ cases has a standard deviation of sqrt(0.09 / n); it is allowed three of them, a
 from __future__ import annotations
 
 import math
-import sys
 from collections import Counter
 
 import numpy as np
@@ -20,9 +19,7 @@ from lagscape.questions.fit_features import Likelihood
 from lagscape.questions.fit_prior import prior_of
 from questions.fit_truths import about
 
-IN_BROWSER = sys.platform == "emscripten"
-# In the browser a fit takes several times as long; the machine is proven natively.
-CASES = 24 if IN_BROWSER else 200
+CASES = 200
 N = 20
 
 
