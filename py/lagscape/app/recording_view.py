@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import asyncio
-import re
 from functools import cached_property
 from typing import Any
 
@@ -11,10 +10,11 @@ import numpy as np
 import panel as pn
 from bokeh.core.properties import value
 from bokeh.events import DoubleTap, Tap
-from bokeh.models import ColumnDataSource, CustomJS, FixedTicker, LinearAxis, PanTool, Range1d, RangeTool, ResetTool, WheelZoomTool
+from bokeh.models import ColumnDataSource, CustomJS, FixedTicker, PanTool, Range1d, RangeTool, ResetTool, WheelZoomTool
 from bokeh.plotting import figure
 
 from lagscape.app.components.sheet import Request, Sheet
+from lagscape.app.night_figure import NightFigure
 from lagscape.app.palette import FONT, PALETTES, dress
 from lagscape.app.recording_words import recording_summary
 from lagscape.app.scipy_loader import ensure_scipy
@@ -31,12 +31,11 @@ from lagscape.recordings import (
     BreathingMeasurement,
     Recording,
     Thresholds,
-    effort_sum,
-    flow_from_nasal_pressure,
     measure_breathing,
     measure_saturation_lag,
     overview,
     read_recording,
+    with_derived_channels,
 )
 from lagscape.recordings.recording import Signal
 from lagscape.recordings.saturation_lag import SaturationLag
@@ -49,7 +48,6 @@ _FIRST_WINDOW_S = 300.0
 _SHOW_FIRST_S = 0.05
 _SIGH = 2.0
 """A breath this many times the usual one is taken for a sigh (common practice, no source)."""
-_NASAL = re.compile(r"nas|press|ptaf|cannula", re.IGNORECASE)
 _READABLE_KINDS = ("ventilation", "airflow", "effort")
 
 
@@ -121,8 +119,8 @@ class RecordingView:
             y=0.45, left="start", right="stop", height=0.88, source=self.masked, y_range_name="lane", fill_alpha=0.08, hatch_pattern="x",
             hatch_alpha=0.35, line_alpha=0.0,
         )  # fmt: skip
-        self._build_night(border)
-        for item in (self.strip, self.night, self.window):
+        self.night = NightFigure(self._whole, border)
+        for item in (self.strip, self.night.plot, self.window):
             item.xaxis.ticker = FixedTicker(ticks=[])
             item.yaxis.ticker.desired_num_ticks = 3
         self.strip.yaxis.visible = False
@@ -134,37 +132,12 @@ class RecordingView:
         drawn = pn.Column(
             self.head,
             pn.pane.Bokeh(self.strip, sizing_mode="stretch_width"),
-            pn.pane.Bokeh(self.night, sizing_mode="stretch_width"),
+            pn.pane.Bokeh(self.night.plot, sizing_mode="stretch_width"),
             pn.pane.Bokeh(self.window, sizing_mode="stretch_width"),
             styles={"flex": "3 1 480px", "min-width": "0", "width": "auto"},
         )
         self.side.styles = {"flex": "1 1 310px", "min-width": "0", "width": "auto"}
         return pn.FlexBox(drawn, self.side, gap="20px", align_items="flex-start", sizing_mode="stretch_width")
-
-    def _build_night(self, border: dict[str, Any]) -> None:
-        """The whole recording in one picture: each cycle's length and duty ratio over the time at which it stands."""
-        self.per_cycle = ColumnDataSource({"time": [], "length": [], "duty": []})
-        self.lengths, self.duties = Range1d(0.0, 1.0), Range1d(0.0, 1.05)
-        self.night = figure(height=120, x_range=self._whole, y_range=self.lengths, tools=[], min_border_bottom=8, **border)
-        self.night.extra_y_ranges = {"duty": self.duties}
-        self.duty_axis = LinearAxis(y_range_name="duty", axis_label="Duty ratio □", ticker=FixedTicker(ticks=[0.0, 0.5, 1.0]))
-        self.night.add_layout(self.duty_axis, "right")
-        self.night.yaxis[0].axis_label = "Cycle (s) ●"
-        self.night.xaxis.visible = False
-        self.length_marks = self.night.scatter("time", "length", source=self.per_cycle, size=5)
-        self.duty_marks = self.night.scatter(
-            "time", "duty", source=self.per_cycle, size=5, marker="square", fill_alpha=0.0, y_range_name="duty"
-        )
-
-    def _draw_night(self) -> None:
-        used = [] if self.measurement is None else [cycle for cycle in self.measurement.cycles if not cycle.excluded]
-        lengths = [cycle.cycle_length_s for cycle in used]
-        self.per_cycle.data = {
-            "time": [0.5 * (cycle.start_s + cycle.stop_s) for cycle in used],
-            "length": lengths,
-            "duty": [np.nan if cycle.duty_ratio is None else cycle.duty_ratio for cycle in used],
-        }
-        self.lengths.update(start=0.0, end=1.15 * max(lengths, default=1.0))
 
     def cycles_on_strip(self) -> ColumnDataSource:
         self.strip_cycles = ColumnDataSource({"start": [], "stop": [], "low": []})
@@ -174,10 +147,9 @@ class RecordingView:
         if not self._built:
             return
         palette = PALETTES[self.bench.theme]
-        for item in (self.strip, self.night, self.window):
+        for item in (self.strip, self.window):
             dress(item, palette)
-        self.length_marks.glyph.fill_color = self.length_marks.glyph.line_color = palette.inside
-        self.duty_marks.glyph.line_color = palette.outside
+        self.night.dress(palette)
         for band in (self.strip_band, self.window_band):
             band.glyph.fill_color = palette.quiet
             band.glyph.fill_alpha = 0.55
@@ -231,7 +203,7 @@ class RecordingView:
             self._refuse(str(problem))
             return False
         self._waiting, self.measurement = None, None
-        self.recording = _with_derived(recording)
+        self.recording = with_derived_channels(recording)
         self.signal = self.recording.signal(self._likeliest())
         self.write()
         return True
@@ -269,7 +241,7 @@ class RecordingView:
             self.measurement = None
             self.refusal = str(problem)
         self._draw_cycles()
-        self._draw_night()
+        self.night.draw(self.measurement)
         self._draw_window()
         self.write()
 
@@ -384,7 +356,7 @@ class RecordingView:
         self.measurement = self.measurement.without(out)
         self.laying = self.fit = None
         self._draw_cycles()
-        self._draw_night()
+        self.night.draw(self.measurement)
         self.write()
 
     def _handle(self, request: Request) -> None:
@@ -496,17 +468,6 @@ class RecordingView:
         except InvalidInputError as problem:
             self.refusal = str(problem)
         self.write()
-
-
-def _with_derived(recording: Recording) -> Recording:
-    """The recording with what can be made of its channels: the square root of nasal pressure, chest and abdomen together."""
-    for signal in recording.of_kind("airflow"):
-        if _NASAL.search(signal.name):
-            recording = recording.with_signal(flow_from_nasal_pressure(signal))
-    efforts = recording.of_kind("effort")
-    if len(efforts) == 2 and efforts[0].segments == efforts[1].segments:
-        recording = recording.with_signal(effort_sum(*efforts))
-    return recording
 
 
 def _band(whole: Any) -> dict[str, Any]:

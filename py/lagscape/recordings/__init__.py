@@ -6,7 +6,7 @@ scipy is imported only when something is measured, so that importing this packag
 from lagscape.recordings.breathing import measure_breathing
 from lagscape.recordings.breathing_result import BreathingCycle, BreathingMeasurement, Spread
 from lagscape.recordings.cycles import Thresholds
-from lagscape.recordings.derived import effort_sum, flow_from_nasal_pressure
+from lagscape.recordings.derived import effort_sum, flow_from_nasal_pressure, with_derived_channels
 from lagscape.recordings.loop_gain import loop_gain_from_duty_ratio
 from lagscape.recordings.overview import Overview, overview
 from lagscape.recordings.reading import read_recording
@@ -41,4 +41,5 @@ __all__ = [
     "overview",
     "read_recording",
     "tremor_summary",
+    "with_derived_channels",
 ]

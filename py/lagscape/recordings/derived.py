@@ -3,14 +3,17 @@
 They are read as they are asked for, like any other signal, so that a whole night costs no memory.
 """
 
+import re
 from dataclasses import dataclass, replace
 
 import numpy as np
 
 from lagscape.errors import InvalidInputError
-from lagscape.recordings.recording import SampleStore, Signal
+from lagscape.recordings.recording import Recording, SampleStore, Signal
 
-__all__ = ["effort_sum", "flow_from_nasal_pressure"]
+__all__ = ["effort_sum", "flow_from_nasal_pressure", "with_derived_channels"]
+
+_NASAL = re.compile(r"nas|press|ptaf|cannula", re.IGNORECASE)
 
 _SAMPLES_LOOKED_AT = 200_000
 
@@ -53,6 +56,17 @@ def effort_sum(chest: Signal, abdomen: Signal, *, calibration: float | None = No
     return replace(
         chest, name=f"{chest.name} + {abdomen.name}", kind="effort", samples=_Sum(chest, abdomen, float(calibration))
     )  # fmt: skip
+
+
+def with_derived_channels(recording: Recording) -> Recording:
+    """The recording with what can be made of its channels: the square root of nasal pressure, chest and abdomen together."""
+    for signal in recording.of_kind("airflow"):
+        if _NASAL.search(signal.name):
+            recording = recording.with_signal(flow_from_nasal_pressure(signal))
+    efforts = recording.of_kind("effort")
+    if len(efforts) == 2 and efforts[0].segments == efforts[1].segments:
+        recording = recording.with_signal(effort_sum(*efforts))
+    return recording
 
 
 def _middle(signal: Signal) -> tuple[float, float]:
