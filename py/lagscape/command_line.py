@@ -16,11 +16,14 @@ import math
 import os
 import sys
 from collections.abc import Sequence
-from typing import Any, NoReturn
+from typing import TYPE_CHECKING, Any, NoReturn
 
 from lagscape.errors import CaseFormatError, InvalidInputError, RecordingError
 from lagscape.handover.plain_values import plain
 from lagscape.version import VERSION
+
+if TYPE_CHECKING:
+    from lagscape.recordings.breathing_result import BreathingMeasurement
 
 __all__ = ["CAUTION", "main"]
 
@@ -75,6 +78,7 @@ def _parser() -> argparse.ArgumentParser:
     measure.add_argument("--kind", choices=("breathing", "tremor"), default="breathing", help="what is looked for (breathing)")
     measure.add_argument("--window", nargs=2, type=_seconds, metavar=("START", "END"), help="seconds from the start (everything)")
     measure.add_argument("--sampling-frequency", type=_seconds, metavar="HZ", help="for a table without a time column")
+    measure.add_argument("--breaths", metavar="FILE.csv", help="also write every single breath to this file")
     measure.set_defaults(run=_measure)
 
     cohort = commands.add_parser("cohort", help="judge a table of cases", description="Judge each row of a table; CSV on standard output.")
@@ -99,6 +103,8 @@ def _analyse(options: argparse.Namespace) -> int:
 def _measure(options: argparse.Namespace) -> int:
     from lagscape.recordings.reading import read_recording
 
+    if options.kind == "tremor" and options.breaths:
+        raise InvalidInputError("--breaths writes the breaths of a breathing signal; a tremor has none.")
     if options.kind == "breathing" and len(options.signal) > 1:
         raise InvalidInputError(f"Breathing is measured on one signal; got {len(options.signal)}.")
     recording = read_recording(options.file, sampling_frequency_hz=options.sampling_frequency)
@@ -113,8 +119,22 @@ def _measure(options: argparse.Namespace) -> int:
         from lagscape.handover.measurement import breathing_document
         from lagscape.recordings.breathing import measure_breathing
 
-        _print_json(breathing_document(measure_breathing(recording, options.signal[0], window=window), notes))
+        measured = measure_breathing(recording, options.signal[0], window=window)
+        if options.breaths:
+            _write_breaths(options.breaths, measured)
+        _print_json(breathing_document(measured, notes))
     return 0
+
+
+def _write_breaths(path: str, measured: BreathingMeasurement) -> None:
+    from lagscape.handover.table import breaths_csv
+
+    text = breaths_csv(measured)
+    try:
+        with open(path, "w", encoding="utf-8", newline="") as file:
+            file.write(text)
+    except OSError as error:
+        raise InvalidInputError(f"{path} cannot be written: {error.strerror or error}.") from error
 
 
 def _cohort(options: argparse.Namespace) -> int:

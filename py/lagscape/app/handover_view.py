@@ -13,7 +13,7 @@ from lagscape.app.workbench import Workbench
 from lagscape.handover.pictures import Contour, Curve, MapPicture, TracePanel, above, boundary_map_svg, traces_svg
 from lagscape.handover.report import LeverLine, Picture, Report, Section, report_html
 from lagscape.handover.svg import Axis
-from lagscape.handover.table import cycles_csv, trace_csv
+from lagscape.handover.table import breaths_csv, cycles_csv, trace_csv
 from lagscape.quantities import figure
 from lagscape.questions.boundary_map import cycle_contours, map_of, standing_point, window_of
 from lagscape.questions.cautions import cautions
@@ -50,6 +50,8 @@ class HandoverView:
         rows = list(_ROWS)
         if self.bench.measurement is not None:
             rows.append(("cycles", "Save the cycles (CSV)", "Every measured cycle of the recording, excluded ones with their reason."))
+            if len(self.bench.measurement.breath_table):
+                rows.append(("breaths", "Save the breaths (CSV)", "Every single breath: start, end, rate, volume, ventilation, all digits."))
         items = "".join(
             f'<li><button class="main" data-act="{act}">{escape(label)}</button><span>{escape(what)}</span></li>' for act, label, what in rows
         )
@@ -77,6 +79,8 @@ class HandoverView:
             self._save("lagscape-traces.svg", "image/svg+xml", self.trace_picture())
         elif request.act == "cycles" and self.bench.measurement is not None:
             self._save("lagscape-cycles.csv", "text/csv", cycles_csv(self.bench.measurement))
+        elif request.act == "breaths" and self.bench.measurement is not None:
+            self._save("lagscape-breaths.csv", "text/csv", breaths_csv(self.bench.measurement))
 
     def _save(self, name: str, kind: str, text: str) -> None:
         self.bench.page.send("download", {"name": name, "type": kind, "data": text.encode()})

@@ -133,6 +133,7 @@ class RecordingView:
             self.head,
             pn.pane.Bokeh(self.strip, sizing_mode="stretch_width"),
             pn.pane.Bokeh(self.night.plot, sizing_mode="stretch_width"),
+            pn.pane.Bokeh(self.night.breaths.plot, sizing_mode="stretch_width"),
             pn.pane.Bokeh(self.window, sizing_mode="stretch_width"),
             styles={"flex": "3 1 480px", "min-width": "0", "width": "auto"},
         )

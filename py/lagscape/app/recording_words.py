@@ -5,6 +5,7 @@ from __future__ import annotations
 from html import escape
 from typing import TYPE_CHECKING, Any
 
+from lagscape.app.breath_words import breaths_html
 from lagscape.app.fit_words import fit_html
 from lagscape.app.threshold_forms import threshold_html
 from lagscape.quantities import figure, to_display
@@ -99,8 +100,8 @@ def _side(view: RecordingView) -> str:
     return (
         f'<div class="rec-side"><h3>{used} cycles used, {excluded} excluded</h3><p class="quiet">Measured from {window}.</p>'
         f'<table class="figures"><tr><th></th><td>median</td><td>quartiles</td></tr>{rows}</table>{meaning}'
-        f"<h3>Quality: {quality}</h3><ul>{reasons}</ul>{_masked(measured)}"
-        f"<div>{_laying(view)}</div>{button}<div>{fit}</div>{_table(view, measured)}</div>"
+        f"<h3>Quality of the cycles: {quality}</h3><ul>{reasons}</ul>{_masked(measured)}"
+        f"<div>{_laying(view)}</div>{button}<div>{fit}</div>{breaths_html(measured)}{_table(view, measured)}</div>"
     )
 
 

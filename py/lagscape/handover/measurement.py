@@ -7,11 +7,12 @@ from __future__ import annotations
 
 from typing import Any
 
-from lagscape.handover.plain_values import plain
+from lagscape.handover.plain_values import plain, unit_suffix
+from lagscape.recordings.breath_result import BreathTable
 from lagscape.recordings.breathing_result import BreathingCycle, BreathingMeasurement, Spread
 from lagscape.recordings.tremor import TremorMeasurement
 
-__all__ = ["breathing_document", "cycle_record", "tremor_document"]
+__all__ = ["breath_records", "breathing_document", "breaths_document", "cycle_record", "tremor_document"]
 
 _MEDIANS = ("cycle_length_s", "ventilatory_duration_s", "apnoeic_duration_s", "duty_ratio", "loop_gain")
 
@@ -51,6 +52,7 @@ def breathing_document(measurement: BreathingMeasurement, reading_notes: tuple[s
         **medians,
         "reasons": reasons,
         "breath_frequency_hz": plain(measurement.breath_frequency_hz),
+        "breaths": breaths_document(measurement.breath_table),
         "recorded_s": float(measurement.recorded_s),
         "periodic_s": float(measurement.periodic_s),
         "masked_s": float(measurement.masked_s),
@@ -81,6 +83,48 @@ def cycle_record(cycle: BreathingCycle) -> dict[str, Any]:
         "reason": cycle.reason,
     }
     return plain(record)
+
+
+def breaths_document(table: BreathTable) -> dict[str, Any]:
+    """The single breaths' medians, what they are worth and why; the breaths themselves are `breath_records`."""
+    quality = table.quality
+    figures = {
+        "rate_per_min": table.rate_per_min,
+        "inspiration_s": table.inspiration_s,
+        "tidal_volume": table.tidal_volume,
+        "ventilation": table.ventilation,
+    }
+    missing = quality.reasons[0] if not len(table) else "No volume may be read from this channel."
+    return {
+        "found": len(table),
+        **{name: plain(spread) for name, spread in figures.items()},
+        "volume_unit": table.volume_unit,
+        "ventilation_unit": table.ventilation_unit,
+        "median_breath": plain(table.median_breath),
+        "own_unit": table.own_unit,
+        "reasons": {name: missing for name, spread in figures.items() if spread is None},
+        "quality": quality.word,
+        "quality_score": float(quality.score),
+        "quality_reasons": list(quality.reasons),
+        "quality_signs": {
+            name: plain(getattr(quality, name)) for name in ("agreement", "signal_share", "plausible", "unclipped", "samples_per_breath")
+        },
+        "quality_stretches": plain(quality.stretches),
+        "notes": list(table.notes),
+    }
+
+
+def breath_records(table: BreathTable) -> list[dict[str, Any]]:
+    """Every breath as a row, units in the names; None where a figure may not be claimed."""
+    volume = "tidal_volume" + unit_suffix(table.volume_unit)
+    ventilation = "ventilation" + unit_suffix(table.ventilation_unit)
+    columns = {
+        "start_s": table.start_s, "inspiration_end_s": table.inspiration_end_s, "end_s": table.end_s, "rate_per_min": table.rates_per_min,
+        volume: table.tidal_volumes, ventilation: table.ventilations,
+    }  # fmt: skip
+    scores = table.quality.scores_at(0.5 * (table.start_s + table.end_s))
+    rows = zip(*(plain(values) for values in columns.values()), table.followed_by, plain(scores), strict=True)
+    return [dict(zip(("number", *columns, "followed_by", "quality"), (i, *row), strict=True)) for i, row in enumerate(rows, start=1)]
 
 
 def tremor_document(measurement: TremorMeasurement, reading_notes: tuple[str, ...] = ()) -> dict[str, Any]:

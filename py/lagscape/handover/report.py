@@ -18,6 +18,7 @@ from lagscape.handover.references import references
 from lagscape.loops.register import LOOPS
 from lagscape.quantities import figure, percent, quantity, to_display
 from lagscape.questions.standing import Analysis
+from lagscape.recordings.breath_result import BreathTable
 from lagscape.recordings.breathing_result import BreathingMeasurement
 from lagscape.version import VERSION
 
@@ -206,7 +207,24 @@ def _measurement(measurement: BreathingMeasurement | None) -> str:
             rows.append((label, words.rstrip()))
     notes = "".join(f"<li>{escape(text)}</li>" for text in (*measurement.quality_reasons, *measurement.notes))
     title = "Recording: medians and quartiles"
-    return _table(title, ("Figure", "Value"), rows) + f"<p>Quality: {escape(measurement.quality)}.</p><ul>{notes}</ul>"
+    cycles = _table(title, ("Figure", "Value"), rows) + f"<p>Quality: {escape(measurement.quality)}.</p><ul>{notes}</ul>"
+    return cycles + _breaths(measurement.breath_table)
+
+
+def _breaths(table: BreathTable) -> str:
+    if not len(table):
+        return f"<p>Single breaths: {escape(table.quality.reasons[0])}</p>"
+    rows = [("Breaths", str(len(table)))]
+    for label, spread, unit in (
+        ("Respiratory rate", table.rate_per_min, "1/min"),
+        ("Tidal volume", table.tidal_volume, table.volume_unit),
+        ("Ventilation while breathing", table.ventilation, table.ventilation_unit),
+    ):
+        if spread is not None:
+            rows.append((label, f"{figure(spread.median)} ({figure(spread.lower_quartile)} to {figure(spread.upper_quartile)}) {unit}"))
+    notes = "".join(f"<li>{escape(text)}</li>" for text in (*table.quality.reasons, *table.notes))
+    worth = f"<p>Quality of the breaths: {table.quality.word} ({figure(table.quality.score, 2)} of 1).</p>"
+    return _table("Single breaths: medians and quartiles", ("Figure", "Value"), rows) + f"{worth}<ul>{notes}</ul>"
 
 
 def _references(report: Report) -> str:

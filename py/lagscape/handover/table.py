@@ -1,4 +1,4 @@
-"""Tables for other programs: CSV (RFC 4180) of a trace and of a measurement's cycles. Units in the headers, every digit kept."""
+"""Tables for other programs: CSV (RFC 4180) of a trace and of a measurement's cycles and breaths. Units in the headers, every digit kept."""
 
 from __future__ import annotations
 
@@ -8,12 +8,12 @@ from collections.abc import Iterable, Sequence
 from typing import Any
 
 from lagscape.errors import InvalidInputError
-from lagscape.handover.measurement import cycle_record
+from lagscape.handover.measurement import breath_records, cycle_record
 from lagscape.handover.plain_values import unit_suffix
 from lagscape.loops.protocol import Signal
 from lagscape.recordings.breathing_result import BreathingMeasurement
 
-__all__ = ["cycles_csv", "table_csv", "trace_csv"]
+__all__ = ["breaths_csv", "cycles_csv", "table_csv", "trace_csv"]
 
 
 def trace_csv(times: Any, signals: Sequence[Signal]) -> str:
@@ -44,6 +44,16 @@ def cycles_csv(measurement: BreathingMeasurement) -> str:
     columns = list(records[0]) if records else ["number", "start_s", "ventilation_end_s", "stop_s", "cycle_length_s"]
     peak = "peak" + unit_suffix(measurement.unit)
     return table_csv([peak if name == "peak" else name for name in columns], (list(record.values()) for record in records))
+
+
+def breaths_csv(measurement: BreathingMeasurement) -> str:
+    """A measurement's single breaths as CSV, one row each in time order; only the header where there are none.
+
+    What may not be claimed of a channel, such as the volume of a thermistor's breaths, is an empty cell.
+    """
+    records = breath_records(measurement.breath_table)
+    columns = list(records[0]) if records else ["number", "start_s", "inspiration_end_s", "end_s", "rate_per_min"]
+    return table_csv(columns, (list(record.values()) for record in records))
 
 
 def table_csv(columns: Sequence[str], rows: Iterable[Sequence[Any]]) -> str:

@@ -3,6 +3,7 @@
 scipy is imported only when something is measured, so that importing this package stays cheap.
 """
 
+from lagscape.recordings.breath_result import BreathQuality, BreathTable, StretchQuality
 from lagscape.recordings.breathing import measure_breathing
 from lagscape.recordings.breathing_result import BreathingCycle, BreathingMeasurement, Spread
 from lagscape.recordings.cycles import Thresholds
@@ -17,6 +18,8 @@ from lagscape.recordings.tremor import TremorComparison, TremorMeasurement, comp
 
 __all__ = [
     "Annotation",
+    "BreathQuality",
+    "BreathTable",
     "BreathingCycle",
     "BreathingMeasurement",
     "Note",
@@ -27,6 +30,7 @@ __all__ = [
     "Segment",
     "Signal",
     "Spread",
+    "StretchQuality",
     "Thresholds",
     "TremorComparison",
     "TremorMeasurement",

@@ -12,6 +12,7 @@ from lagscape.recordings.kinds import BREATHING_KINDS
 from lagscape.recordings.loop_gain import loop_gain_from_duty_ratio
 from lagscape.recordings.masks import MaskedStretch, hidden_samples, masked_stretches
 from lagscape.recordings.recording import Progress, Recording, Signal
+from lagscape.recordings.single_breaths import MaskedPiece, single_breaths
 
 __all__ = ["measure_breathing"]
 
@@ -81,6 +82,7 @@ def measure_breathing(
     masked: list[MaskedStretch] = []
     envelopes: list[Envelope] = []
     breaths: list[Breaths] = []
+    masked_pieces: list[MaskedPiece] = []
     for piece in pieces:
         envelope = envelope_of(piece, smoothing_hz, is_ventilation)
         here = masked_stretches(piece, thresholds, envelope.smoothing_s, is_ventilation)
@@ -90,16 +92,16 @@ def measure_breathing(
         cycles += found
         masked += here
         envelopes.append(envelope)
+        masked_pieces.append(MaskedPiece(piece, here, hidden))
         if not is_ventilation and breath_hz is not None:
             breaths.append(_breaths(envelope, hidden, breath_hz))
     if not is_ventilation and breath_hz is not None and channel.sampling_frequency_hz < _SAMPLES_PER_BREATH * breath_hz:
-        notes.append("The sampling is too coarse to mark single breaths; only their envelope is used.")
         breaths = []
     masked += _gaps(pieces)
     return BreathingMeasurement(
         channel.name, channel.unit, kind, window, channel.sampling_frequency_hz, thresholds, tuple(cycles), tuple(stretches),
         tuple(sorted(masked, key=lambda m: m.start_s)), tuple(envelopes), _all_breaths(breaths),
-        None if is_ventilation else breath_hz, tuple(notes),
+        None if is_ventilation else breath_hz, tuple(notes), single_breaths(channel, kind, masked_pieces, breath_hz, thresholds),
     )  # fmt: skip
 
 

@@ -6,33 +6,16 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from lagscape.errors import InvalidInputError
+from lagscape.recordings.breath_result import BreathTable
 from lagscape.recordings.cycles import Thresholds
 from lagscape.recordings.envelope import Envelope
 from lagscape.recordings.masks import MaskedStretch
 from lagscape.recordings.recording import counted
+from lagscape.recordings.spread import Spread
 
 __all__ = ["BreathingCycle", "BreathingMeasurement", "Breaths", "Spread", "Stretch"]
 
 BY_HAND = "by hand"
-
-
-@dataclass(frozen=True)
-class Spread:
-    """Median and quartiles of n values."""
-
-    median: float
-    lower_quartile: float
-    upper_quartile: float
-    n: int
-
-    @classmethod
-    def of(cls, values: Iterable[float]) -> "Spread | None":
-        """None where there are no values. Quartiles by linear interpolation between order statistics."""
-        known = np.array([v for v in values if np.isfinite(v)], dtype=float)
-        if not known.size:
-            return None
-        low, mid, high = np.percentile(known, [25.0, 50.0, 75.0])
-        return cls(float(mid), float(low), float(high), int(known.size))
 
 
 @dataclass(frozen=True)
@@ -111,6 +94,8 @@ class BreathingMeasurement:
     breaths: Breaths
     breath_frequency_hz: float | None
     notes: tuple[str, ...]
+    breath_table: BreathTable
+    """Every single breath with its rate, volume and ventilation, and how far the marks can be trusted."""
 
     @property
     def used(self) -> tuple[BreathingCycle, ...]:

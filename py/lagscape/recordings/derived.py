@@ -39,7 +39,7 @@ def effort_sum(chest: Signal, abdomen: Signal, *, calibration: float | None = No
         Of one recording; their rates may differ.
     calibration : float, optional
         Chest units per abdomen unit. By default the ratio of the two signals' spreads (middle half), which makes them count
-        alike: what can be had without a calibration manoeuvre (common practice, no source).
+        alike: what can be had without a calibration manoeuvre (common practice, no source). The sum then has no unit.
 
     Raises
     ------
@@ -48,13 +48,14 @@ def effort_sum(chest: Signal, abdomen: Signal, *, calibration: float | None = No
     """
     if chest.segments != abdomen.segments:
         raise InvalidInputError(f"'{chest.name}' and '{abdomen.name}' must come from one recording")
+    unit = "" if calibration is None else chest.unit
     if calibration is None:
         spread = _middle(abdomen)[1]
         calibration = _middle(chest)[1] / spread if spread > 0.0 else 1.0
     if not np.isfinite(calibration):
         raise InvalidInputError(f"calibration must be finite (chest units per abdomen unit), got {calibration!r}")
     return replace(
-        chest, name=f"{chest.name} + {abdomen.name}", kind="effort", samples=_Sum(chest, abdomen, float(calibration))
+        chest, name=f"{chest.name} + {abdomen.name}", unit=unit, kind="effort", samples=_Sum(chest, abdomen, float(calibration))
     )  # fmt: skip
 
 

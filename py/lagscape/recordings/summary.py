@@ -33,6 +33,7 @@ def breathing_summary(measured: BreathingMeasurement) -> dict[str, Any]:
         "shape": measured.shape,
         "quality": measured.quality,
         "quality_reasons": list(measured.quality_reasons),
+        "breaths": _breaths(measured),
         "recorded_s": measured.recorded_s,
         "periodic_s": measured.periodic_s,
         "masked": [asdict(stretch) for stretch in measured.masked],
@@ -54,6 +55,22 @@ def breathing_summary(measured: BreathingMeasurement) -> dict[str, Any]:
         ],
         "thresholds": asdict(measured.thresholds),
         "notes": list(measured.notes),
+    }
+
+
+def _breaths(measured: BreathingMeasurement) -> dict[str, Any]:
+    table = measured.breath_table
+    return {
+        "n": len(table),
+        "rate_per_min": _spread(table.rate_per_min),
+        "tidal_volume": _spread(table.tidal_volume),
+        "volume_unit": table.volume_unit,
+        "ventilation": _spread(table.ventilation),
+        "ventilation_unit": table.ventilation_unit,
+        "quality": table.quality.word,
+        "quality_score": table.quality.score,
+        "quality_reasons": list(table.quality.reasons),
+        "notes": list(table.notes),
     }
 
 
