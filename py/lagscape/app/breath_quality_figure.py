@@ -1,9 +1,10 @@
-"""How far the single breaths can be trusted, minute by minute, over the whole recording."""
+"""The single breaths drawn: how far they can be trusted minute by minute, and a mark for each in the window."""
 
 from __future__ import annotations
 
 from typing import Any
 
+import numpy as np
 from bokeh.models import ColumnDataSource, FixedTicker, Range1d
 from bokeh.plotting import figure
 
@@ -11,7 +12,9 @@ from lagscape.app.palette import Palette, dress
 from lagscape.recordings import BreathingMeasurement
 from lagscape.recordings.breath_result import word_of
 
-__all__ = ["BreathQualityFigure"]
+__all__ = ["BreathMarks", "BreathQualityFigure"]
+
+_LANE_Y = 0.03
 
 
 class BreathQualityFigure:
@@ -43,3 +46,23 @@ class BreathQualityFigure:
             "score": [score for _, score in judged],
             "hatch": ["x" if word_of(score) == "poor" else " " for _, score in judged],
         }
+
+
+class BreathMarks:
+    """A short bar at the foot of the window for each breath: its inspiration or, where that is not known, half of the breath."""
+
+    def __init__(self, window: Any) -> None:
+        self.source = ColumnDataSource({"start": [], "stop": []})
+        self.bars = window.segment("start", _LANE_Y, "stop", _LANE_Y, source=self.source, y_range_name="lane", line_width=4)
+
+    def dress(self, palette: Palette) -> None:
+        self.bars.glyph.line_color = palette.ink
+
+    def draw(self, measurement: BreathingMeasurement | None) -> None:
+        """Show every breath; nothing for no measurement."""
+        if measurement is None:
+            self.source.data = {"start": [], "stop": []}
+            return
+        table = measurement.breath_table
+        half = 0.5 * (table.start_s + table.end_s)
+        self.source.data = {"start": table.start_s, "stop": np.where(np.isnan(table.inspiration_end_s), half, table.inspiration_end_s)}

@@ -8,7 +8,7 @@ import numpy as np
 from bokeh.models import ColumnDataSource, FixedTicker, LinearAxis, Range1d
 from bokeh.plotting import figure
 
-from lagscape.app.breath_quality_figure import BreathQualityFigure
+from lagscape.app.breath_quality_figure import BreathMarks, BreathQualityFigure
 from lagscape.app.palette import Palette, dress
 from lagscape.recordings import BreathingMeasurement
 
@@ -16,10 +16,11 @@ __all__ = ["NightFigure"]
 
 
 class NightFigure:
-    """Filled discs for the length in s, on the left axis; hollow squares for the duty ratio, on the right one; `breaths` under it."""
+    """Filled discs for the length in s, on the left axis; hollow squares for the duty ratio, on the right one; `breaths` under it, `marks` in the window."""
 
-    def __init__(self, time: Range1d, border: dict[str, Any]) -> None:
-        self.breaths = BreathQualityFigure(time, border)
+    def __init__(self, time: Range1d, border: dict[str, Any], window: Any) -> None:
+        """`window` is the figure with a `lane` range in which every breath gets its mark."""
+        self.breaths, self.marks = BreathQualityFigure(time, border), BreathMarks(window)
         self.source = ColumnDataSource({"time": [], "length": [], "duty": []})
         self.lengths = Range1d(0.0, 1.0)
         self.plot = figure(height=120, x_range=time, y_range=self.lengths, tools=[], min_border_bottom=8, **border)
@@ -34,12 +35,14 @@ class NightFigure:
     def dress(self, palette: Palette) -> None:
         dress(self.plot, palette)
         self.breaths.dress(palette)
+        self.marks.dress(palette)
         self.length_marks.glyph.fill_color = self.length_marks.glyph.line_color = palette.inside
         self.duty_marks.glyph.line_color = palette.outside
 
     def draw(self, measurement: BreathingMeasurement | None) -> None:
         """Show the cycles used and the breaths' quality; nothing for no measurement."""
         self.breaths.draw(measurement)
+        self.marks.draw(measurement)
         used = () if measurement is None else measurement.used
         lengths = [cycle.cycle_length_s for cycle in used]
         self.source.data = {

@@ -119,7 +119,7 @@ class RecordingView:
             y=0.45, left="start", right="stop", height=0.88, source=self.masked, y_range_name="lane", fill_alpha=0.08, hatch_pattern="x",
             hatch_alpha=0.35, line_alpha=0.0,
         )  # fmt: skip
-        self.night = NightFigure(self._whole, border)
+        self.night = NightFigure(self._whole, border, self.window)
         for item in (self.strip, self.night.plot, self.window):
             item.xaxis.ticker = FixedTicker(ticks=[])
             item.yaxis.ticker.desired_num_ticks = 3
