@@ -5,7 +5,7 @@ import pytest
 
 from engine.oracle_loops import p2
 from lagscape.engine.margins import margins
-from lagscape.engine.margins_batch import margins_batch
+from lagscape.engine.margins_batch import Multiples, margins_batch, margins_of
 from lagscape.engine.open_loop import open_loop
 from lagscape.engine.roots import rightmost_roots
 from lagscape.loops.breathing import BreathingLoop
@@ -70,3 +70,33 @@ def test_members_without_feedback_and_an_empty_batch():
     empty = p2().with_numbers(peripheral_gain_l_min_mmhg=np.zeros(0))
     opened = open_loop(empty.form(), empty.rest())
     assert margins_batch(empty.form(), empty.rest(), opened).stable.shape == (0,)
+
+
+@pytest.mark.parametrize("base", [p2(1.5, 1.0), BreathingLoop(), ReflexLoop(reflex_gain_per_rad=3.0)])
+def test_families_share_their_sampling_and_change_nothing(base):
+    # Oracle: the same members without the knowledge of their families. Tolerance: rounding of a factor taken in another order.
+    rng = np.random.default_rng(11)
+    families, each = 30, 8
+    delay = np.repeat(base.delay * np.exp(0.5 * rng.standard_normal(families)), each)
+    factor = (1.0 if base.kind == "reflex" else 2.0) * np.exp(0.8 * rng.standard_normal(families * each))
+    batch = base.with_delay(delay)
+    opened = open_loop(batch.form(), batch.rest())
+    opened = opened.scaled(factor)
+    family = np.repeat(np.arange(families), each)
+    mixed = rng.permutation(families * each)
+    alone = margins_of(opened.member(mixed))
+    together = margins_of(opened.member(mixed), multiples=Multiples(family[mixed], factor[mixed]))
+    assert 10 < np.count_nonzero(alone.stable) < 230
+    for name in ("stable", "unstable_roots", "has_phase_crossover", "has_gain_crossover", "has_oscillation"):
+        np.testing.assert_array_equal(getattr(together, name), getattr(alone, name))
+    for name in ("loop_gain", "phase_crossover_frequency", "phase_margin_rad", "delay_margin_s", "growth_rate_per_s", "cycle_length_s"):
+        np.testing.assert_allclose(getattr(together, name), getattr(alone, name), rtol=1e-8, atol=1e-11)
+
+
+def test_a_family_s_factor_is_on_its_first_member():
+    same = Multiples(np.array([4, 4, 7, 4]), np.array([2.0, 6.0, 5.0, 1.0]))
+    first, group, factor = same.shared(np.array([1.0, 1.0, 1.0, 2.0]))
+    # Members 0 and 1 agree in family and value, 3 only in family.
+    assert group[0] == group[1] and len(set(group.tolist())) == 3
+    assert (first[group] == [0, 0, 2, 3]).all()
+    assert factor.tolist() == [1.0, 3.0, 1.0, 1.0]

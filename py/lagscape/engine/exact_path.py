@@ -12,13 +12,14 @@ import heapq
 import itertools
 import math
 from dataclasses import dataclass
-from operator import mul
 from typing import Any
 
 import numpy as np
 
-from lagscape.engine.history import PiecewiseHistory, distinct_rows, to_chebyshev
-from lagscape.engine.mesh import integration, points, tail_weights
+from lagscape.engine.history import PiecewiseHistory, chebyshev_basis, distinct_rows, to_chebyshev
+from lagscape.engine.linear_pieces import linear_pieces
+from lagscape.engine.mesh import points, tail_weights
+from lagscape.engine.piece_roots import roots_inside
 from lagscape.engine.run import Run
 from lagscape.engine.trace import Trace, find_silences
 from lagscape.loops.protocol import Array
@@ -26,11 +27,6 @@ from lagscape.loops.protocol import Array
 __all__ = ["ExactSettings", "exact_path"]
 
 _NUDGE = 1e-9
-_SAME_PLACE = 1e-6
-"""A root closer than this share of a piece to its end is that end: what is cut off there is the square of it."""
-_GRAZING = 0.01
-"""A polynomial that stays further from zero than this share of its range at all samples cannot reach it between two of them."""
-_MOST_KINK_ROUNDS = 6
 _MOST_ROUNDS = 40
 
 
@@ -87,44 +83,6 @@ class _Breaks:
         return found
 
 
-class _LinearPieces:
-    """x' = (A + v N) x + w on pieces in a row, by one batched solve; N is None where v does not multiply the state."""
-
-    def __init__(self, matrix: Array, by_output: Array | None, n: int) -> None:
-        self._size, self._n = len(matrix), n
-        self._q = integration(n).T
-        self._constant = -np.kron(matrix, integration(n))
-        self._by_output = None if by_output is None else -np.kron(by_output, integration(n))
-
-    def solve(self, v: Array | None, forcing: Array, lengths: Array, start: list[float]) -> Array:
-        """v (m, n), if N is there, and w (m, s, n) at the nodes; x at the points, (m, s, n + 1)."""
-        m, size, n = len(lengths), self._size, self._n
-        unknowns = size * n
-        scale = lengths[:, None, None]
-        if self._by_output is None or v is None:
-            system = self._constant * scale
-        else:
-            system = self._by_output * (v if size == 1 else np.concatenate([v] * size, axis=1))[:, None]
-            system += self._constant
-            system *= scale
-        system.reshape(m, -1)[:, :: unknowns + 1] += 1.0
-        right = np.zeros((m, size, n, size + 1))
-        for i in range(size):
-            right[:, i, :, i] = 1.0
-        np.multiply(forcing.reshape(-1, n).dot(self._q).reshape(m, size, n), scale, out=right[..., size])
-        solved = np.linalg.solve(system, right.reshape(m, unknowns, size + 1)).reshape(m, size, n, size + 1)
-        # A chain of tiny products: plain floats are faster than array calls.
-        x, starts = start, []
-        for rows in solved[:, :, -1].tolist():
-            starts.append(x)
-            x = [row[-1] + sum(map(mul, row, x)) for row in rows]
-        values = np.empty((m, size, n + 1))
-        values[:, :, 0] = starts
-        values[:, :, 1:] = (solved[..., :size] @ values[:, None, :, :1])[..., 0]
-        values[:, :, 1:] += solved[..., size]
-        return values
-
-
 class _Path:
     """The state of a run under way."""
 
@@ -137,39 +95,30 @@ class _Path:
         self.history = PiecewiseHistory(self.n, start, self.rows @ run.initial[: form.n_plant])
         self.breaks = _Breaks(run, settings, start)
         self.x, self.c = run.initial[: form.n_plant], run.initial[form.n_plant :]
-        self.plant = _LinearPieces(form.plant, form.plant_by_output if np.any(form.plant_by_output) else None, self.n)
-        self.control = _LinearPieces(form.control, None, self.n) if form.n_control else None
-        self.size = np.maximum(np.abs(run.initial), 1e-300)
         self.longest = settings.piece / rate
         self.advance_by = form.delays[0]
+        widest = min(self.longest, self.advance_by)
+        self.plant = linear_pieces(form.plant, form.plant_by_output, self.n, widest)
+        self.control = linear_pieces(form.control, None, self.n, widest) if form.n_control else None
+        self.size = np.maximum(np.abs(run.initial), 1e-300)
         self.worst_tail = 0.0
         self.edges: list[Array] = []
         self.tables: list[Array] = []
-        self.inner = np.clip(points(self.n), _NUDGE, 1.0 - _NUDGE)
-        dense = np.cos(np.pi * np.arange(4 * self.n + 1)[::-1] / (4 * self.n))
-        self.dense = 0.5 * (1.0 + dense)
-        self.places = self.dense.tolist()
-        self.to_dense = (np.polynomial.chebyshev.chebvander(dense, self.n) @ to_chebyshev(self.n)).T
+        self.points, self.inner = points(self.n), np.clip(points(self.n), _NUDGE, 1.0 - _NUDGE)
 
     def advance(self, end: float) -> bool:
         """One advance to `end`; False if the states left the finite numbers."""
         begin = self.history.end
-        gap = 1e-9 * self.advance_by
-        inside = self.breaks.until(end, begin, gap)
-        marks = [begin, *inside, end]
-        edges = np.array(_subdivided(marks, self.longest))
+        inside = self.breaks.until(end, begin, 1e-9 * self.advance_by)
+        edges = np.array(_subdivided([begin, *inside, end], self.longest))
         kinks: list[float] = []
-        kink_rounds = _MOST_KINK_ROUNDS if self.settings.locate_kinks else 0
         for _ in range(_MOST_ROUNDS):
-            times, arguments = self._arguments(edges)
-            if kink_rounds:
-                kink_rounds -= 1
-                found = self._kinks(edges, times, arguments)
-                if found:
-                    kinks += found
-                    edges = np.sort(np.concatenate([edges, found]))
-                    continue
-            states = self._plant(edges, times, arguments)
+            arguments = self._arguments(edges)
+            cuts = self._kinks(edges, arguments) if self.settings.locate_kinks else {}
+            if cuts:
+                edges, arguments, found = self._cut(edges, arguments, cuts)
+                kinks += found
+            states = self._plant(edges, arguments)
             if not np.isfinite(states).all():
                 return False
             poor = self._unresolved(edges, states, arguments)
@@ -181,82 +130,65 @@ class _Path:
         self._accept(edges, states, arguments)
         return True
 
-    def _arguments(self, edges: Array) -> tuple[Array, Array]:
-        """Times (m, n + 1), drawn in from the piece ends, and what the drive takes there: (n_sensed + n_control, m, n + 1)."""
+    def _times(self, edges: Array) -> Array:
+        """The points of the pieces, drawn in from their ends, so that what jumps there is taken from inside: (m, n + 1)."""
+        begins = edges[:-1, None]
+        return begins + (edges[1:, None] - begins) * self.inner
+
+    def _arguments(self, edges: Array) -> Array:
+        """What the drive takes at the points: (n_sensed + n_control, m, n + 1)."""
         form, n = self.run.form, self.n
         begins = edges[:-1, None]
         lengths = edges[1:, None] - begins
-        times = begins + lengths * points(n)
-        inner = begins + lengths * self.inner
-        arguments = np.empty((form.n_sensed + form.n_control, *times.shape))
+        arguments = np.empty((form.n_sensed + form.n_control, len(begins), n + 1))
         sensed = arguments[: form.n_sensed]
-        sensed[:] = self.history.at(times - self.delays, self.row_of, inner - self.delays)
+        sensed[:] = self.history.at(begins + lengths * self.points - self.delays, self.row_of, begins + lengths * self.inner - self.delays)
         if self.control is not None:
             forcing = form.control_by_sensed @ sensed[..., 1:].transpose(1, 0, 2) + form.control_constant[:, None]
             arguments[form.n_sensed :] = self.control.solve(None, forcing, lengths[:, 0], self.c.tolist()).transpose(1, 0, 2)
-        return inner, arguments
+        return arguments
 
-    def _kinks(self, edges: Array, times: Array, arguments: Array) -> list[float]:
-        """Times inside pieces where the drive's switch or the floor is crossed."""
+    def _kinks(self, edges: Array, arguments: Array) -> dict[int, list[float]]:
+        """Piece to places in it where the drive's switch or the floor is crossed."""
         run, split = self.run, self.run.form.n_sensed
-        functions = []
+        sensed, control = arguments[:split], arguments[split:]
+        times = self._times(edges) if run.used_channels else edges
+        push = run.push(times)
+        found: dict[int, list[float]] = {}
         if run.form.drive.has_kink:
-            functions.append(run.form.drive.switch(arguments[:split], arguments[split:], run.push(times)))
+            found = roots_inside(run.form.drive.switch(sensed, control, push))
         if run.used_channels and math.isfinite(run.floor):
             below = run.output_push(times)
             if np.any(np.asarray(below) < 0.0):
-                functions.append(run.form.drive.value(arguments[:split], arguments[split:], run.push(times)) + below - run.floor)
-        found: list[float] = []
-        for values in functions:
-            found += self._roots(edges, values)
+                for piece, places in roots_inside(run.form.drive.value(sensed, control, push) + below - run.floor).items():
+                    found.setdefault(piece, []).extend(places)
         return found
 
-    def _roots(self, edges: Array, values: Array) -> list[float]:
-        """Roots well inside the pieces of the polynomials through these values at the points, (m, n + 1)."""
-        dense = values.dot(self.to_dense)
-        lowest, highest = dense.min(axis=1), dense.max(axis=1)
-        near = _GRAZING * (highest - lowest)
-        close = np.flatnonzero((lowest <= near) & (highest >= -near))
-        found: list[float] = []
-        if not close.size:
-            return found
-        all_series = values[close].dot(to_chebyshev(self.n).T).tolist()
-        for row, left, right in self._brackets(dense[close], all_series):
-            place = _refined(all_series[row], left, right)
-            if _SAME_PLACE < place < 1.0 - _SAME_PLACE:
-                piece = close[row]
-                found.append(float(edges[piece] + place * (edges[piece + 1] - edges[piece])))
-        return found
+    def _cut(self, edges: Array, arguments: Array, cuts: dict[int, list[float]]) -> tuple[Array, Array, list[float]]:
+        """Pieces cut at places of theirs: the new edges and arguments, and the times of the cuts.
 
-    def _brackets(self, dense: Array, all_series: list[list[float]]) -> list[tuple[int, float, float]]:
-        """Row and interval of [0, 1] of each sign change: between dense samples, or beside a dip that no sample shows (grazing)."""
-        places = self.places
-        height = np.abs(dense)
-        size = height.max(axis=1, keepdims=True)
-        positive = dense > 0.0
-        row, kept = np.nonzero(height > 1e-9 * size)
-        sign = positive[row, kept]
-        change = np.flatnonzero((sign[1:] != sign[:-1]) & (row[1:] == row[:-1]))
-        found = [(i, places[left], places[right]) for i, left, right in zip(*(
-            part.tolist() for part in (row[change], kept[change], kept[change + 1])
-        ), strict=True)]  # fmt: skip
-        inner = height[:, 1:-1]
-        dips = (inner < 2.0 * _GRAZING * size) & (inner < height[:, :-2]) & (inner < height[:, 2:])
-        if dips.any():
-            dips &= (positive[:, 1:-1] == positive[:, :-2]) & (positive[:, 1:-1] == positive[:, 2:]) & (inner > 0.0)
-            for i, j in zip(*(part.tolist() for part in np.nonzero(dips)), strict=True):
-                left, right = places[j], places[j + 2]
-                fine = [left + (right - left) * k / 32.0 for k in range(1, 32)]
-                heights = [_value_and_slope(all_series[i], place)[0] * (1.0 if positive[i, j + 1] else -1.0) for place in fine]
-                deepest = min(range(len(fine)), key=heights.__getitem__)
-                if heights[deepest] < 0.0:
-                    found += [(i, left, fine[deepest]), (i, fine[deepest], right)]
-        return found
+        What the drive takes is smooth across such a place, so the parts of a piece inherit its polynomials.
+        """
+        bounds = edges.tolist()
+        times: list[float] = []
+        parts: list[Array] = []
+        done = 0
+        for piece, places in sorted(cuts.items()):
+            left, length = bounds[piece], bounds[piece + 1] - bounds[piece]
+            inner = sorted(set(places))
+            times += [left + place * length for place in inner]
+            marks = np.array([0.0, *inner, 1.0])
+            where = marks[:-1, None] + (marks[1:] - marks[:-1])[:, None] * self.points
+            series = arguments[:, piece].dot(to_chebyshev(self.n).T)
+            within = series.dot(chebyshev_basis(2.0 * where.reshape(-1) - 1.0, self.n))
+            parts += [arguments[:, done:piece], within.reshape(len(series), len(where), -1)]
+            done = piece + 1
+        return np.array(sorted(bounds + times)), np.concatenate([*parts, arguments[:, done:]], axis=1), times
 
-    def _plant(self, edges: Array, times: Array, arguments: Array) -> Array:
+    def _plant(self, edges: Array, arguments: Array) -> Array:
         """Plant states at the points, (m, n_plant, n + 1)."""
         run, form = self.run, self.run.form
-        nodes = times[:, 1:]
+        nodes = self._times(edges)[:, 1:]
         given = arguments[..., 1:]
         v = run.controlled(given[: form.n_sensed], given[form.n_sensed :], nodes)
         forcing = v[:, None, :] * form.input_vector[:, None] + form.constant[:, None]
@@ -300,37 +232,6 @@ def _subdivided(marks: list[float], longest: float) -> list[float]:
 
 def _pieces_first(signal: Array | float) -> Array | float:
     return np.moveaxis(signal, 0, 1) if isinstance(signal, np.ndarray) else signal
-
-
-def _value_and_slope(series: list[float], place: float) -> tuple[float, float]:
-    """A Chebyshev series and its derivative at a place of [0, 1], by Clenshaw's recurrence in plain floats."""
-    x = 2.0 * place - 1.0
-    b1 = b2 = d1 = d2 = 0.0
-    for coefficient in series[:0:-1]:
-        d1, d2 = 2.0 * (b1 + x * d1) - d2, d1
-        b1, b2 = coefficient + 2.0 * x * b1 - b2, b1
-    return series[0] + x * b1 - b2, 2.0 * (b1 + x * d1 - d2)
-
-
-def _refined(series: list[float], low: float, high: float) -> float:
-    """The root of a Chebyshev series between two places of [0, 1]: Newton steps, halving where a step leaves the bracket."""
-    rising = _value_and_slope(series, high)[0] > 0.0
-    place = 0.5 * (low + high)
-    for _ in range(60):
-        value, slope = _value_and_slope(series, place)
-        if (value > 0.0) == rising:
-            high = place
-        else:
-            low = place
-        if abs(value) <= 1e-12 * abs(slope):
-            break  # a step this small may round onto an end of the bracket, and halving would start anew
-        following = place - value / slope if slope != 0.0 else low
-        if not low < following < high:
-            following = 0.5 * (low + high)
-        moved, place = abs(following - place), following
-        if moved < 1e-11:
-            break
-    return place
 
 
 def exact_path(run: Run, times: Array, rate: float, start: float = 0.0, settings: ExactSettings | None = None) -> Trace:

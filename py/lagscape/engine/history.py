@@ -10,7 +10,7 @@ import numpy as np
 from lagscape.engine.mesh import points
 from lagscape.loops.protocol import Array
 
-__all__ = ["PiecewiseHistory", "distinct_rows", "to_chebyshev"]
+__all__ = ["PiecewiseHistory", "chebyshev_basis", "distinct_rows", "to_chebyshev"]
 
 
 def distinct_rows(rows: Array) -> tuple[Array, list[int]]:
@@ -28,11 +28,23 @@ def to_chebyshev(n: int) -> Array:
     return matrix
 
 
-class PiecewiseHistory:
-    """Signals that are polynomials of degree n between edges; constant before `start`.
+def chebyshev_basis(places: Array, n: int) -> Array:
+    """T_0 .. T_n at places of [-1, 1], shape (n + 1, *places.shape): T_(m+j) = 2 T_m T_j - T_(m-j) doubles the known ones at a time."""
+    basis = np.empty((n + 1, *places.shape))
+    basis[0] = 1.0
+    basis[1] = places
+    known = 1
+    while known < n:
+        more = min(known, n - known)
+        upper = basis[known + 1 : known + more + 1]
+        np.multiply(basis[1 : more + 1], 2.0 * basis[known], out=upper)
+        upper -= basis[known - more : known][::-1]
+        known += more
+    return basis
 
-    Chebyshev coefficients, because T_(m+j) = 2 T_m T_j - T_(m-j) doubles the known ones in three array calls.
-    """
+
+class PiecewiseHistory:
+    """Signals that are polynomials of degree n between edges; constant before `start`. Kept as Chebyshev coefficients."""
 
     def __init__(self, n: int, start: float, constant: Array) -> None:
         self._n = n
@@ -76,14 +88,4 @@ class PiecewiseHistory:
         piece = np.minimum(np.maximum(piece, 0), self._count - 1)
         left = self._edges[piece]
         place = 2.0 * (times - left) / (self._edges[piece + 1] - left) - 1.0
-        basis = np.empty((self._n + 1, *np.shape(times)))
-        basis[0] = 1.0
-        np.minimum(np.maximum(place, -1.0), 1.0, out=basis[1])
-        known = 1
-        while known < self._n:
-            more = min(known, self._n - known)
-            upper = basis[known + 1 : known + more + 1]
-            np.multiply(basis[1 : more + 1], 2.0 * basis[known], out=upper)
-            upper -= basis[known - more : known][::-1]
-            known += more
-        return piece, basis
+        return piece, chebyshev_basis(np.minimum(np.maximum(place, -1.0), 1.0), self._n)

@@ -261,7 +261,7 @@ def _close_phase(
     few, w = opened.member(members[chosen]), guess[decides][chosen]
     low, high = low[decides][chosen], high[decides][chosen]
     for _ in range(8):
-        value, slope = few.with_slope(1j * w)
+        value, slope = few.with_slope_on_axis(w)
         step = -np.angle(-value) / (slope / value).real
         w, done = _inside(w, step, low, high)
         if done:
@@ -350,7 +350,7 @@ def _close_gain(opened: OpenLoop, frequency: Array, response: np.ndarray) -> Gai
     share = level / (level - np.log(size[row + 1, who]))
     w = low * (high / low) ** share
     for _ in range(8):
-        value, slope = few.with_slope(1j * w)
+        value, slope = few.with_slope_on_axis(w)
         w, done = _inside(w, np.log(np.abs(value)) / (slope / value).imag, low, high)
         if done:
             break

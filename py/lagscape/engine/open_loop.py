@@ -84,54 +84,81 @@ class OpenLoop:
     # ---- arrays -------------------------------------------------------------------------------------------------------------
     def response(self, frequency: Array) -> np.ndarray:
         """L(i w), complex. `frequency` in rad/s has shape (n_frequencies, ...) with the batch's axes last."""
-        terms, denominator = self._on_axis(frequency)
-        total = terms[0] * self._turn(0, frequency)
+        square = -(frequency * frequency)
+        total = self._on_axis(1, frequency, square)
+        total *= _turn(frequency * self.delays[0])
         for index in range(1, len(self.delays)):
-            total += terms[index] * self._turn(index, frequency)
-        return total / denominator
+            term = self._on_axis(index + 1, frequency, square)
+            term *= _turn(frequency * self.delays[index])
+            total += term
+        total /= self._on_axis(0, frequency, square)
+        return total
 
     def envelope(self, frequency: Array) -> Array:
         """sum_j |N_j| / |D| at i w: an upper bound of |L(i w)| that no delay changes."""
-        terms, denominator = self._on_axis(frequency)
-        return np.sum(np.abs(terms), axis=0) / np.abs(denominator)
+        square = -(frequency * frequency)
+        above: Any = 0.0
+        for index in range(len(self.delays)):
+            above = above + np.abs(self._on_axis(index + 1, frequency, square))
+        return above / np.abs(self._on_axis(0, frequency, square))
 
-    def _turn(self, index: int, frequency: Array) -> np.ndarray:
-        angle = frequency * self.delays[index]
-        turn = np.empty(np.shape(angle), dtype=complex)
-        np.cos(angle, out=turn.real)
-        np.sin(angle, out=turn.imag)
-        np.negative(turn.imag, out=turn.imag)
-        return turn
+    @cached_property
+    def _polynomials(self) -> list[Array]:
+        """D and each N_j without the leading powers that no member has, shape (degree_j + 1, ...)."""
+        used = self.coefficients != 0.0
+        used = np.any(used.reshape(*used.shape[:2], -1), axis=2)
+        return [self.coefficients[int(np.argmax(column)) if column.any() else -1 :, j] for j, column in enumerate(used.T)]
 
-    def _on_axis(self, frequency: Array) -> tuple[np.ndarray, np.ndarray]:
-        # On the imaginary axis even and odd powers are real and imaginary parts: real Horner, a quarter of the work.
-        coefficients, square = self.coefficients[:, :, None], -(frequency * frequency)
-        degree = self.degree
-        even = coefficients[degree % 2]
-        for power in range(degree % 2 + 2, degree + 1, 2):
-            even = even * square + coefficients[power]
-        odd = coefficients[1 - degree % 2] if degree else np.zeros_like(coefficients[0])
-        for power in range(3 - degree % 2, degree + 1, 2):
-            odd = odd * square + coefficients[power]
-        shape = np.broadcast_shapes(even.shape, odd.shape, (1, *np.shape(frequency)))
-        value = np.empty(shape, dtype=complex)
-        value.real, value.imag = even, odd * frequency
-        return value[1:], value[0]
+    def _on_axis(self, column: int, frequency: Array, square: Array) -> np.ndarray:
+        """D (column 0) or N_j at i w, the square being -w^2: even and odd powers are real and imaginary part, so Horner stays real."""
+        coefficients = self._polynomials[column]
+        degree = len(coefficients) - 1
+        value = np.empty(np.broadcast_shapes(np.shape(frequency), coefficients.shape[1:]), dtype=complex)
+        value.real = _real_horner(coefficients[degree % 2 :: 2], square)
+        if degree:
+            np.multiply(_real_horner(coefficients[1 - degree % 2 :: 2], square), frequency, out=value.imag)
+        else:
+            value.imag = 0.0
+        return value
 
     def with_slope(self, s: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         """L and dL/ds at complex points of the batch's shape (or broadcasting with it)."""
-        value = self.coefficients[0] + 0j * s
-        slope = np.zeros_like(value)
-        for row in self.coefficients[1:]:
-            slope = slope * s + value
-            value = value * s + row
-        total = total_slope = 0.0
+        total: Any = 0.0
+        total_slope: Any = 0.0
+        for coefficients, delay in zip(self._polynomials[1:], self.delays, strict=True):
+            value, slope = _with_derivative(coefficients, s)
+            turn = _turn(s.imag * delay)
+            turn *= np.exp(-s.real * delay)
+            slope = (slope - delay * value) * turn
+            total, total_slope = total + value * turn, total_slope + slope
+        below, below_slope = _with_derivative(self._polynomials[0], s)
+        ratio = total / below
+        return ratio, (total_slope - ratio * below_slope) / below
+
+    def with_slope_on_axis(self, frequency: Array) -> tuple[np.ndarray, np.ndarray]:
+        """L and dL/ds at i w; `frequency` in rad/s has the batch's shape (or broadcasts with it). Real arithmetic, half the work."""
+        total: Any = 0.0
+        total_slope: Any = 0.0
         for index, delay in enumerate(self.delays):
-            turn = np.exp(-s * delay)
-            total = total + value[index + 1] * turn
-            total_slope = total_slope + (slope[index + 1] - delay * value[index + 1]) * turn
-        ratio = total / value[0]
-        return ratio, (total_slope - ratio * slope[0]) / value[0]
+            value, slope = self._with_slope_on_axis(index + 1, frequency)
+            turn = _turn(frequency * delay)
+            slope -= delay * value
+            total, total_slope = total + value * turn, total_slope + slope * turn
+        below, below_slope = self._with_slope_on_axis(0, frequency)
+        ratio = total / below
+        return ratio, (total_slope - ratio * below_slope) / below
+
+    def _with_slope_on_axis(self, column: int, frequency: Array) -> tuple[np.ndarray, np.ndarray]:
+        # P(s) = E(s^2) + s O(s^2): at s = i w, with x = -w^2, P = E + i w O and P' = O + 2 x O' + 2 i w E'.
+        coefficients, square = self._polynomials[column], -(frequency * frequency)
+        degree = len(coefficients) - 1
+        even, even_slope = _with_derivative(coefficients[degree % 2 :: 2], square)
+        odd, odd_slope = _with_derivative(coefficients[1 - degree % 2 :: 2], square) if degree else (0.0, 0.0)
+        value = np.empty(np.broadcast_shapes(np.shape(frequency), coefficients.shape[1:]), dtype=complex)
+        slope = np.empty_like(value)
+        value.real, value.imag = even, odd * frequency
+        slope.real, slope.imag = odd + 2.0 * square * odd_slope, 2.0 * frequency * even_slope
+        return value, slope
 
     # ---- one loop, plain floats -----------------------------------------------------------------------------------------------
     @cached_property
@@ -160,39 +187,26 @@ class OpenLoop:
 
     def quasi_polynomial_at(self, s: complex) -> tuple[complex, complex]:
         """F and dF/ds alone, for one loop at one point."""
-        columns = self._columns
+        below, below_slope = _horner(self._columns[0], s)
+        above, above_slope = self._fed_back(s)
+        return below + above, below_slope + above_slope
+
+    def at(self, s: complex) -> tuple[complex, complex]:
+        """L and dL/ds for one loop at one point; s must not be a root of D."""
+        below, below_slope = _horner(self._columns[0], s)
+        above, above_slope = self._fed_back(s)
+        ratio = above / below
+        return ratio, (above_slope - ratio * below_slope) / below
+
+    def _fed_back(self, s: complex) -> tuple[complex, complex]:
+        """sum_j N_j e^(-s tau_j) and its derivative."""
         value, slope = 0j, 0j
-        for coefficient in columns[0]:
-            slope = slope * s + value
-            value = value * s + coefficient
-        for column, delay in zip(columns[1:], self.delays, strict=True):
-            term, term_slope = 0j, 0j
-            for coefficient in column:
-                term_slope = term_slope * s + term
-                term = term * s + coefficient
+        for column, delay in zip(self._columns[1:], self.delays, strict=True):
+            term, term_slope = _horner(column, s)
             turn = cmath.exp(-s * delay)
             value += term * turn
             slope += (term_slope - delay * term) * turn
         return value, slope
-
-    def at(self, s: complex) -> tuple[complex, complex]:
-        """L and dL/ds for one loop at one point; s must not be a root of D."""
-        columns = self._columns
-        below, below_slope = 0j, 0j
-        for coefficient in columns[0]:
-            below_slope = below_slope * s + below
-            below = below * s + coefficient
-        above, above_slope = 0j, 0j
-        for column, delay in zip(columns[1:], self.delays, strict=True):
-            term, term_slope = 0j, 0j
-            for coefficient in column:
-                term_slope = term_slope * s + term
-                term = term * s + coefficient
-            turn = cmath.exp(-s * delay)
-            above += term * turn
-            above_slope += (term_slope - delay * term) * turn
-        ratio = above / below
-        return ratio, (above_slope - ratio * below_slope) / below
 
     @cached_property
     def poles(self) -> np.ndarray:
@@ -316,6 +330,43 @@ def _polynomial_product(a: list[Any], b: list[Any]) -> list[Any]:
         for j, right in enumerate(b):
             product[i + j] = product[i + j] + _times(left, right)
     return product
+
+
+def _turn(angle: Array) -> np.ndarray:
+    """e^(-i angle)."""
+    turn = np.empty(np.shape(angle), dtype=complex)
+    np.cos(angle, out=turn.real)
+    np.sin(angle, out=turn.imag)
+    np.negative(turn.imag, out=turn.imag)
+    return turn
+
+
+def _real_horner(coefficients: Array, x: Array) -> Array:
+    """A polynomial, its coefficients from the highest power down along the first axis, at real places."""
+    value: Array = coefficients[0]
+    for row in coefficients[1:]:
+        value = value * x
+        value += row
+    return value
+
+
+def _with_derivative(coefficients: Array, x: Array) -> tuple[Any, Any]:
+    """The same and its derivative, at real or complex places."""
+    value: Any = coefficients[0]
+    slope: Any = 0.0
+    for power, row in enumerate(coefficients[1:]):
+        slope = slope * x + value if power else value
+        value = value * x + row
+    return value, slope
+
+
+def _horner(column: list[float], s: complex) -> tuple[complex, complex]:
+    """A polynomial, its coefficients from the highest power down, and its derivative."""
+    value, slope = 0j, 0j
+    for coefficient in column:
+        slope = slope * s + value
+        value = value * s + coefficient
+    return value, slope
 
 
 def resolvent(matrix: list[list[Any]]) -> tuple[list[Any], list[list[list[Any]]]]:
