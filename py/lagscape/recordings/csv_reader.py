@@ -9,9 +9,10 @@ from lagscape.recordings.csv_layout import Layout, read_layout
 from lagscape.recordings.csv_text import Source, open_source, text_blocks
 from lagscape.recordings.kinds import guess_kind
 from lagscape.recordings.recording import ArraySamples, Note, Progress, Recording, Signal, counted
+from lagscape.recordings.stepwise import Steps, finished
 from lagscape.recordings.time_base import TimeBase, even_time_base, time_base_of_rate
 
-__all__ = ["read_csv"]
+__all__ = ["csv_steps", "read_csv"]
 
 _LOOKED_AT = 100_000
 
@@ -34,6 +35,21 @@ def read_csv(
     progress: Progress | None = None,
 ) -> Recording:
     """Read a text table. See `lagscape.recordings.read_recording` for the arguments and what is raised."""
+    steps = csv_steps(
+        source, name=name, sampling_frequency_hz=sampling_frequency_hz, time_column=time_column, time_unit=time_unit
+    )  # fmt: skip
+    return finished(steps, progress)
+
+
+def csv_steps(
+    source: Source,
+    *,
+    name: str | None = None,
+    sampling_frequency_hz: float | None = None,
+    time_column: str | None = None,
+    time_unit: str | None = None,
+) -> Steps[Recording]:
+    """`read_csv`, a block of about 1 MB a step; counts bytes."""
     if sampling_frequency_hz is not None and not 0.0 < sampling_frequency_hz <= 1e5:
         raise RecordingError(f"sampling_frequency_hz must be over 0 and at most 1e5 (Hz), got {sampling_frequency_hz!r}")
     with open_source(source) as (stream, total, source_name):
@@ -42,7 +58,7 @@ def read_csv(
         wanted: list[int] = []
         parts: list[_Column] = []
         read = 0
-        for block in text_blocks(stream, total, progress):
+        for block, done in text_blocks(stream):
             read += len(block)
             if layout is None:
                 layout = read_layout(block, time_column=time_column, time_unit=time_unit)
@@ -51,6 +67,7 @@ def read_csv(
                 parts = [_Column(np.float64 if i == layout.time_column else np.float32) for i in wanted]
             for part, values in zip(parts, columns_of(block, layout, wanted, tally), strict=True):
                 part.add(values, int(1.02 * (part.n + values.size) * max((total or 0) / read, 1.0)))
+            yield done, total
     if layout is None:
         raise RecordingError("the file is empty")
     columns = {column: part.taken() for column, part in zip(wanted, parts, strict=True)}

@@ -13,7 +13,6 @@ from pathlib import Path
 from typing import BinaryIO
 
 from lagscape.errors import RecordingError
-from lagscape.recordings.recording import Progress, report_progress
 
 __all__ = ["BLOCK_BYTES", "Source", "open_source", "text_blocks"]
 
@@ -70,8 +69,8 @@ def _length_of(stream: BinaryIO) -> int | None:
     return end - here
 
 
-def text_blocks(stream: BinaryIO, total: int | None, progress: Progress | None = None) -> Iterator[bytes]:
-    """Blocks of whole lines; each ends with '\\n'. The first block is enough to judge the table's layout.
+def text_blocks(stream: BinaryIO) -> Iterator[tuple[bytes, int]]:
+    """Blocks of whole lines, each ending with '\\n', and the file's bytes read so far. The first is enough to judge the table's layout.
 
     Raises
     ------
@@ -93,17 +92,16 @@ def text_blocks(stream: BinaryIO, total: int | None, progress: Progress | None =
         text = kept[: len(kept) - len(tail)].replace(b"\r\n", b"\n").replace(b"\r", b"\n")
         cut = text.rfind(b"\n") + 1
         if cut:
-            yield text[:cut]
+            yield text[:cut], done
         kept = text[cut:] + tail
         if len(kept) > _LONGEST_LINE:
             raise RecordingError("a line is longer than 16 MB; this is not a table of numbers")
-        report_progress(progress, done, total)
         raw = _read(stream, BLOCK_BYTES)
     if decoder is not None:
         kept += decoder.decode(b"", True).encode()
     kept = kept.replace(b"\r", b"\n").rstrip(b"\n")
     if kept:
-        yield kept + b"\n"
+        yield kept + b"\n", done
 
 
 def _read(stream: BinaryIO, size: int) -> bytes:

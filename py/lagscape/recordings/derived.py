@@ -5,6 +5,7 @@ They are read as they are asked for, like any other signal, so that a whole nigh
 
 import re
 from dataclasses import dataclass, replace
+from functools import cached_property
 
 import numpy as np
 
@@ -24,10 +25,7 @@ def flow_from_nasal_pressure(pressure: Signal) -> Signal:
     Through a prong the pressure drop goes about as the square of the flow (orifice), so that raw pressure makes small
     breaths look smaller than they are. Zero is the median of the signal. The unit is arbitrary.
     """
-    zero = _middle(pressure)[0]
-    return replace(
-        pressure, name=f"{pressure.name} (square root)", unit="", kind="airflow", samples=_SquareRoot(pressure.samples, zero)
-    )  # fmt: skip
+    return replace(pressure, name=f"{pressure.name} (square root)", unit="", kind="airflow", samples=_SquareRoot(pressure))
 
 
 def effort_sum(chest: Signal, abdomen: Signal, *, calibration: float | None = None) -> Signal:
@@ -49,13 +47,10 @@ def effort_sum(chest: Signal, abdomen: Signal, *, calibration: float | None = No
     if chest.segments != abdomen.segments:
         raise InvalidInputError(f"'{chest.name}' and '{abdomen.name}' must come from one recording")
     unit = "" if calibration is None else chest.unit
-    if calibration is None:
-        spread = _middle(abdomen)[1]
-        calibration = _middle(chest)[1] / spread if spread > 0.0 else 1.0
-    if not np.isfinite(calibration):
+    if calibration is not None and not np.isfinite(calibration):
         raise InvalidInputError(f"calibration must be finite (chest units per abdomen unit), got {calibration!r}")
     return replace(
-        chest, name=f"{chest.name} + {abdomen.name}", unit=unit, kind="effort", samples=_Sum(chest, abdomen, float(calibration))
+        chest, name=f"{chest.name} + {abdomen.name}", unit=unit, kind="effort", samples=_Sum(chest, abdomen, calibration)
     )  # fmt: skip
 
 
@@ -84,13 +79,23 @@ def _middle(signal: Signal) -> tuple[float, float]:
     return float(middle), float(high - low)
 
 
+# What a signal is scaled by is worked out when it is first read, so that a night's channels are listed at once.
+
+
 @dataclass(frozen=True, eq=False)
 class _SquareRoot:
-    samples: SampleStore
-    zero: float
+    pressure: Signal
+
+    @property
+    def made_of(self) -> tuple[SampleStore, ...]:
+        return (self.pressure.samples,)
+
+    @cached_property
+    def zero(self) -> float:
+        return _middle(self.pressure)[0]
 
     def read(self, first: int, stop: int) -> np.ndarray:
-        away = self.samples.read(first, stop) - self.zero
+        away = self.pressure.samples.read(first, stop) - self.zero
         return np.sign(away) * np.sqrt(np.abs(away))
 
 
@@ -98,7 +103,19 @@ class _SquareRoot:
 class _Sum:
     chest: Signal
     abdomen: Signal
-    calibration: float
+    stated: float | None
+
+    @property
+    def made_of(self) -> tuple[SampleStore, ...]:
+        return self.chest.samples, self.abdomen.samples
+
+    @cached_property
+    def calibration(self) -> float:
+        """Chest units per abdomen unit."""
+        if self.stated is not None:
+            return float(self.stated)
+        spread = _middle(self.abdomen)[1]
+        return _middle(self.chest)[1] / spread if spread > 0.0 else 1.0
 
     def read(self, first: int, stop: int) -> np.ndarray:
         chest = self.chest.samples.read(first, stop)

@@ -47,16 +47,17 @@ def overview(
     highest = np.full(n_bins, -np.inf)
     done = 0
     for first_s, values in signal.pieces(start, stop, most=_SAMPLES_AT_ONCE):
-        times = first_s + np.arange(values.size) / signal.sampling_frequency_hz
-        bins = np.clip(((times - start) * (n_bins / (stop - start))).astype(np.int64), 0, n_bins - 1)
-        real = np.isfinite(values)
-        bins, values = bins[real], values[real]
-        if values.size:
-            starts = np.flatnonzero(np.r_[True, bins[1:] != bins[:-1]])
-            touched = bins[starts]
-            lowest[touched] = np.minimum(lowest[touched], np.minimum.reduceat(values, starts))
-            highest[touched] = np.maximum(highest[touched], np.maximum.reduceat(values, starts))
-        done += real.size
+        # First sample of each bin, a hair of slack for a sample on an edge.
+        first = np.ceil((edges - first_s) * signal.sampling_frequency_hz - 1e-6).astype(np.int64)
+        first[-1] = values.size  # the last bin takes what rounding leaves over
+        first = np.clip(first, 0, values.size)
+        filled = np.flatnonzero(first[1:] > first[:-1])
+        if filled.size:
+            starts = first[filled]
+            values = values[: first[-1]]
+            lowest[filled] = np.fmin(lowest[filled], np.fmin.reduceat(values, starts))
+            highest[filled] = np.fmax(highest[filled], np.fmax.reduceat(values, starts))
+        done += values.size
         report_progress(progress, done, signal.n_samples)
     empty = lowest > highest
     lowest[empty] = np.nan

@@ -3,13 +3,14 @@
 import os
 from pathlib import Path
 
-from lagscape.recordings.csv_reader import read_csv
+from lagscape.recordings.csv_reader import csv_steps
 from lagscape.recordings.csv_text import Source
-from lagscape.recordings.edf import read_edf
+from lagscape.recordings.edf import edf_steps
 from lagscape.recordings.edf_header import looks_like_edf
 from lagscape.recordings.recording import Progress, Recording
+from lagscape.recordings.stepwise import Steps, finished
 
-__all__ = ["read_recording"]
+__all__ = ["read_recording", "recording_steps"]
 
 
 def read_recording(
@@ -51,16 +52,27 @@ def read_recording(
     ReadCancelled
         If the progress callback returned False.
     """
+    steps = recording_steps(
+        source, name=name, sampling_frequency_hz=sampling_frequency_hz, time_column=time_column, time_unit=time_unit
+    )  # fmt: skip
+    return finished(steps, progress)
+
+
+def recording_steps(
+    source: Source,
+    *,
+    name: str | None = None,
+    sampling_frequency_hz: float | None = None,
+    time_column: str | None = None,
+    time_unit: str | None = None,
+) -> Steps[Recording]:
+    """`read_recording` in steps; counts bytes."""
     if looks_like_edf(_head(source)):
-        return read_edf(source, name=name, progress=progress)
-    return read_csv(
-        source,
-        name=name,
-        sampling_frequency_hz=sampling_frequency_hz,
-        time_column=time_column,
-        time_unit=time_unit,
-        progress=progress,
-    )
+        return (yield from edf_steps(source, name=name))
+    steps = csv_steps(
+        source, name=name, sampling_frequency_hz=sampling_frequency_hz, time_column=time_column, time_unit=time_unit
+    )  # fmt: skip
+    return (yield from steps)
 
 
 def _head(source: Source) -> bytes:
