@@ -27,6 +27,7 @@ from lagscape.loops.protocol import Array
 __all__ = ["ExactSettings", "exact_path"]
 
 _NUDGE = 1e-9
+_NOISE_ORDER = 2
 _MOST_ROUNDS = 40
 
 
@@ -34,8 +35,8 @@ _MOST_ROUNDS = 40
 class ExactSettings:
     """How exact: the defaults give 1e-7 or better on the loops of this project."""
 
-    degree: int = 12
-    highest_order: int = 3
+    degree: int = 10
+    highest_order: int = 4
     """Breaks are piece ends while the lowest derivative of the state that jumps there is of this order or lower; 0 for none at all."""
     tolerance: float = 1e-7
     """Largest unresolved share of a state in a piece."""
@@ -50,8 +51,8 @@ class _Breaks:
     def __init__(self, run: Run, settings: ExactSettings, start: float) -> None:
         self._delays, self._end = run.form.delays, run.duration
         self._highest = settings.highest_order
-        # Noise has a break every hold: the images of its small jumps are kept one order less, or the pieces explode.
-        self._outer = self._highest - 1 if len(run.breaks) > 50 else self._highest
+        # Noise has a break every hold: of its small jumps only the first images are kept, or the pieces explode.
+        self._outer = min(self._highest, _NOISE_ORDER) if len(run.breaks) > 50 else self._highest
         self._queue: list[tuple[float, int]] = []
         for time in [start, *run.breaks.tolist()]:
             self.breed(time, 1, self._outer)
