@@ -101,7 +101,9 @@ class _Path:
         widest = min(self.longest, self.advance_by)
         self.plant = linear_pieces(form.plant, form.plant_by_output, self.n, widest)
         self.control = linear_pieces(form.control, None, self.n, widest) if form.n_control else None
-        self.size = np.maximum(np.abs(run.initial), 1e-300)
+        # What is sensed is a state of a while ago: judged then, and not again.
+        size = np.maximum(np.abs(run.initial), 1e-300)
+        self.size = np.concatenate([size[: form.n_plant], np.full(form.n_sensed, np.inf), size[form.n_plant :]])
         self.worst_tail = 0.0
         self.edges: list[Array] = []
         self.tables: list[Array] = []
@@ -119,16 +121,16 @@ class _Path:
             if cuts:
                 edges, arguments, found = self._cut(edges, arguments, cuts)
                 kinks += found
-            states = self._plant(edges, arguments)
-            if not np.isfinite(states).all():
-                return False
-            poor = self._unresolved(edges, states, arguments)
+            table = self._plant(edges, arguments)
+            if not math.isfinite(table[-1].sum()):
+                return False  # what is not finite stays so to the end
+            poor = self._unresolved(edges, table)
             if not len(poor):
                 break
             edges = np.sort(np.concatenate([edges, 0.5 * (edges[poor] + edges[poor + 1])]))
         for kink in kinks:
             self.breaks.breed(kink, 2)
-        self._accept(edges, states, arguments)
+        self._accept(edges, table)
         return True
 
     def _times(self, edges: Array) -> Array:
@@ -187,23 +189,21 @@ class _Path:
         return np.array(sorted(bounds + times)), np.concatenate([*parts, arguments[:, done:]], axis=1), times
 
     def _plant(self, edges: Array, arguments: Array) -> Array:
-        """Plant states at the points, (m, n_plant, n + 1)."""
+        """Plant states, then what the drive takes, at the points: (m, n_plant + n_sensed + n_control, n + 1)."""
         run, form = self.run, self.run.form
-        nodes = self._times(edges)[:, 1:]
+        nodes = self._times(edges)[:, 1:] if run.used_channels else edges
         given = arguments[..., 1:]
         v = run.controlled(given[: form.n_sensed], given[form.n_sensed :], nodes)
         forcing = v[:, None, :] * form.input_vector[:, None] + form.constant[:, None]
         if run.used_channels:
             forcing = forcing + _pieces_first(run.plant_push_by_output(nodes)) * v[:, None, :] + _pieces_first(run.plant_push(nodes))
-        return self.plant.solve(v, forcing, edges[1:] - edges[:-1], self.x.tolist())
+        states = self.plant.solve(v, forcing, edges[1:] - edges[:-1], self.x.tolist())
+        return np.concatenate([states, arguments.transpose(1, 0, 2)], axis=1)
 
-    def _unresolved(self, edges: Array, states: Array, arguments: Array) -> Any:
+    def _unresolved(self, edges: Array, table: Array) -> Any:
         """Pieces to halve: those whose two highest coefficients are too large, unless they are already very short."""
-        form = self.run.form
-        control = arguments[form.n_sensed :].transpose(1, 0, 2)
-        everything = np.concatenate([states, control], axis=1)
-        self.size = np.maximum(self.size, np.abs(everything).max(axis=(0, 2)))
-        tail = (np.abs(everything @ tail_weights(self.n)).max(axis=2) / self.size).max(axis=1)
+        self.size = np.maximum(self.size, np.abs(table).max(axis=(0, 2)))
+        tail = (np.abs(table @ tail_weights(self.n)).max(axis=2) / self.size).max(axis=1)
         worst = float(tail.max())
         if worst > self.settings.tolerance:
             poor = np.flatnonzero((tail > self.settings.tolerance) & (np.diff(edges) > 1e-6 * self.longest))
@@ -212,13 +212,14 @@ class _Path:
         self.worst_tail = max(self.worst_tail, worst)
         return ()
 
-    def _accept(self, edges: Array, states: Array, arguments: Array) -> None:
+    def _accept(self, edges: Array, table: Array) -> None:
         form = self.run.form
+        states = table[:, : form.n_plant]
         self.history.append(edges, (self.rows @ states).transpose(0, 2, 1))
         self.x = states[-1, :, -1]
-        self.c = arguments[form.n_sensed :, -1, -1]
+        self.c = table[-1, form.n_plant + form.n_sensed :, -1]
         self.edges.append(edges[:-1])
-        self.tables.append(np.concatenate([states, arguments.transpose(1, 0, 2)], axis=1))
+        self.tables.append(table)
 
 
 def _subdivided(marks: list[float], longest: float) -> list[float]:
