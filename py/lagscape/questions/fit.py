@@ -19,10 +19,11 @@ from lagscape.loops.protocol import Array
 from lagscape.questions.fit_features import Feature, Likelihood, features_of
 from lagscape.questions.fit_forward import shown_by
 from lagscape.questions.fit_measured import Measured, RingDown, measured_from
-from lagscape.questions.fit_posterior import Mode, Sample, climb, distinct, draw
+from lagscape.questions.fit_posterior import Mode, Sample, climb, climb_steps, distinct, draw
 from lagscape.questions.fit_prior import DELAYS, GAINS, Prior, prior_of
 from lagscape.questions.fit_words import fit_sentences, warning_sentence
 from lagscape.recordings.breathing_result import Spread
+from lagscape.recordings.stepwise import Steps, finished, part_of
 
 __all__ = [
     "DRAWS",
@@ -38,6 +39,7 @@ __all__ = [
     "RingDown",
     "Spread",
     "fit_recording",
+    "fit_steps",
     "measured_from",
 ]
 
@@ -57,6 +59,10 @@ SHIFTED_BEYOND = 0.5
 FAR = 3.0
 """Prior standard deviations from which on a fitted number does not go with the case: 1 in 370 by chance."""
 
+_ROUNDS = 12
+"""Of the climb, at most."""
+_DRAWN, _ALL_ROUNDS = 15, 18
+"""Drawing takes about as long as three rounds, and the rest as long as three more."""
 _MOVED = 0.10
 """Prior standard deviations that the most plausible loop must move a number before the fitted case changes it."""
 _TRADE, _LOOSE = 0.6, 0.10
@@ -202,6 +208,11 @@ def fit_recording(case: Case, measured: Measured, seed: int = SEED, draws: int =
     InvalidInputError
         If the case is no breathing case or impossible, the measurement cannot be used, or an argument is out of range.
     """
+    return finished(fit_steps(case, measured, seed, draws))
+
+
+def fit_steps(case: Case, measured: Measured, seed: int = SEED, draws: int = DRAWS) -> Steps[Fit]:
+    """`fit_recording` in steps; counts the climb's rounds, with the draws and the tidying as so many more as take their time."""
     if case.kind != "breathing":
         raise InvalidInputError(f"A recording of breathing is fitted to a breathing case; got the {case.kind} loop. Choose the breathing loop.")
     for what, value, low, high in (("seed", seed, 0, 2**32 - 1), ("number of draws", draws, 100, 20_000)):
@@ -211,10 +222,12 @@ def fit_recording(case: Case, measured: Measured, seed: int = SEED, draws: int =
     case.loop().rest()
     prior = prior_of(case, measured)
     likelihood = Likelihood(prior, measured, features_of(measured))
-    modes = distinct(climb(likelihood, _starts(prior)))
+    modes = distinct((yield from part_of(climb_steps(likelihood, _starts(prior), _ROUNDS), 0, _ROUNDS, _ALL_ROUNDS)))
     if not modes or _hopeless(modes[0]):
         return _refused(case, measured, seed)
+    yield _ROUNDS, _ALL_ROUNDS
     sample = draw(likelihood, modes, draws, seed)
+    yield _DRAWN, _ALL_ROUNDS
     numbers = _numbers(prior, sample)
     point, mode = _tidied(likelihood, modes[0], numbers)
     numbers, fitted = _fitted(prior, point, numbers)

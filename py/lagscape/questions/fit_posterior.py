@@ -16,8 +16,9 @@ import numpy as np
 from lagscape.engine.harmonic import Harmonics
 from lagscape.loops.protocol import Array
 from lagscape.questions.many import Index, Mask
+from lagscape.recordings.stepwise import Steps, finished
 
-__all__ = ["Evaluated", "Mode", "Sample", "climb", "distinct", "draw"]
+__all__ = ["Evaluated", "Mode", "Sample", "climb", "climb_steps", "distinct", "draw"]
 
 _STEP = 0.04
 """Of the differences, in prior standard deviations: far above the solver's tolerance, far below a bend."""
@@ -84,6 +85,11 @@ class Sample:
 
 def climb(evaluate: Evaluate, starts: Array, most: int = 12, free: Mask | None = None) -> list[Mode]:
     """The modes that the starts, shape (k, d), lead to; `free` names the coordinates that may move (all by default)."""
+    return finished(climb_steps(evaluate, starts, most, free))
+
+
+def climb_steps(evaluate: Evaluate, starts: Array, most: int = 12, free: Mask | None = None) -> Steps[list[Mode]]:
+    """`climb` in steps; counts rounds, of which it takes `most` or fewer."""
     k, d = starts.shape
     moves = np.flatnonzero(np.ones(d, dtype=bool) if free is None else free)
     point, objective = starts.astype(float).copy(), np.full(k, np.inf)
@@ -92,7 +98,9 @@ def climb(evaluate: Evaluate, starts: Array, most: int = 12, free: Mask | None =
     damping, settled = np.full(k, 1e-3), np.zeros(k, dtype=bool)
     cycles: list[Harmonics | None] = [None] * k
     trial, warm = point.copy(), cycles.copy()
-    for _ in range(most):
+    for round_ in range(most):
+        if round_:
+            yield round_, most
         active = np.flatnonzero(~settled)
         if not active.size:
             break

@@ -7,19 +7,22 @@ import numpy as np
 from lagscape.errors import RecordingError
 from lagscape.recordings.breathing_result import BreathingCycle, BreathingMeasurement, Breaths, Stretch
 from lagscape.recordings.cycles import Burst, Thresholds, bursts_of, local_peak
-from lagscape.recordings.envelope import Envelope, WorkingPiece, breath_frequency, envelope_of, working_pieces
+from lagscape.recordings.envelope import Envelope, WorkingPiece, breath_frequency, envelope_of, working_piece_steps
 from lagscape.recordings.kinds import BREATHING_KINDS
 from lagscape.recordings.loop_gain import loop_gain_from_duty_ratio
 from lagscape.recordings.masks import MaskedStretch, hidden_samples, masked_stretches
 from lagscape.recordings.recording import Progress, Recording, Signal
 from lagscape.recordings.single_breaths import MaskedPiece, single_breaths
+from lagscape.recordings.stepwise import Steps, finished, part_of
 
-__all__ = ["measure_breathing"]
+__all__ = ["breathing_steps", "measure_breathing"]
 
 _SLOWEST_RATE_HZ = 1.5
 _SHORTEST_S = 60.0
 _USUAL_BREATH_HZ = 0.25
 _SAMPLES_PER_BREATH = 6.0
+_REDUCED, _CYCLES, _ALL = 300, 700, 1000
+"""Progress when the samples are reduced, when the cycles are found, and in the end, by the time that each takes."""
 
 
 def measure_breathing(
@@ -44,7 +47,7 @@ def measure_breathing(
         ventilation, airflow or effort, where the guess is wrong.
     thresholds : Thresholds, optional
     progress : callable, optional
-        Called with samples done and samples in all; returning False cancels.
+        Called with thousandths done and 1000; returning False cancels.
 
     Returns
     -------
@@ -61,10 +64,23 @@ def measure_breathing(
     -----
     Deterministic. A pause shorter than about a breath cannot be told from a long breath.
     """
+    return finished(breathing_steps(recording, signal, window=window, kind=kind, thresholds=thresholds), progress)
+
+
+def breathing_steps(
+    recording: Recording,
+    signal: str | None = None,
+    *,
+    window: tuple[float, float] | None = None,
+    kind: str | None = None,
+    thresholds: Thresholds | None = None,
+) -> Steps[BreathingMeasurement]:
+    """`measure_breathing` in steps; counts thousandths of the time that a whole night takes."""
     thresholds = thresholds or Thresholds()
     channel = _channel(recording, signal, kind)
     window = _window(recording, window)
-    pieces = [piece for piece in working_pieces(channel, window, progress) if piece.values.size / piece.rate_hz > 10.0]
+    every_piece = yield from part_of(working_piece_steps(channel, window), 0, _REDUCED, _ALL)
+    pieces = [piece for piece in every_piece if piece.values.size / piece.rate_hz > 10.0]
     if sum(piece.values.size / piece.rate_hz for piece in pieces) < _SHORTEST_S:
         raise RecordingError(f"'{channel.name}' holds less than {_SHORTEST_S:.0f} s of unbroken signal between {window[0]:g} and {window[1]:g} s")
     notes: list[str] = []
@@ -83,10 +99,14 @@ def measure_breathing(
     envelopes: list[Envelope] = []
     breaths: list[Breaths] = []
     masked_pieces: list[MaskedPiece] = []
+    done, n_samples = 0, sum(piece.values.size for piece in pieces)
     for piece in pieces:
+        yield _REDUCED + (_CYCLES - _REDUCED) * done // n_samples, _ALL
         envelope = envelope_of(piece, smoothing_hz, is_ventilation)
         here = masked_stretches(piece, thresholds, envelope.smoothing_s, is_ventilation)
         hidden = hidden_samples(piece, here)
+        yield _REDUCED + (_CYCLES - _REDUCED) * (done + piece.values.size // 2) // n_samples, _ALL
+        done += piece.values.size
         found = _cycles(bursts_of(envelope, hidden, thresholds, is_ventilation), here, thresholds, len(cycles))
         stretches += _stretches(piece, found)
         cycles += found
@@ -95,6 +115,7 @@ def measure_breathing(
         masked_pieces.append(MaskedPiece(piece, here, hidden))
         if not is_ventilation and breath_hz is not None:
             breaths.append(_breaths(envelope, hidden, breath_hz))
+    yield _CYCLES, _ALL
     if not is_ventilation and breath_hz is not None and channel.sampling_frequency_hz < _SAMPLES_PER_BREATH * breath_hz:
         breaths = []
     masked += _gaps(pieces)

@@ -11,9 +11,10 @@ from dataclasses import dataclass
 import numpy as np
 
 from lagscape.recordings.burst_shape import MOTION_SMOOTHING
-from lagscape.recordings.recording import Progress, Signal, report_progress
+from lagscape.recordings.recording import Signal
+from lagscape.recordings.stepwise import Steps
 
-__all__ = ["Envelope", "WorkingPiece", "breath_frequency", "envelope_of", "working_pieces"]
+__all__ = ["Envelope", "WorkingPiece", "breath_frequency", "envelope_of", "working_piece_steps"]
 
 WORKING_RATE_HZ = 8.0
 _BLOCK = 1 << 17
@@ -72,10 +73,8 @@ class Envelope:
         return np.sqrt(np.maximum(gaussian_filter1d(self.values**2, sigma, mode="nearest"), 0.0))
 
 
-def working_pieces(
-    signal: Signal, window: tuple[float, float] | None = None, progress: Progress | None = None
-) -> list[WorkingPiece]:
-    """The signal at about 8 samples a second (as it is where it is slower), by means of neighbouring samples."""
+def working_piece_steps(signal: Signal, window: tuple[float, float] | None = None) -> Steps[list[WorkingPiece]]:
+    """The signal at about 8 samples a second (as it is where it is slower), by means of neighbouring samples. Counts samples."""
     ratio = max(int(signal.sampling_frequency_hz // WORKING_RATE_HZ), 1)
     rate = signal.sampling_frequency_hz / ratio
     start, stop = window or (None, None)
@@ -90,7 +89,7 @@ def working_pieces(
             stretches.append([block])
         expected = first_s + raw.size / signal.sampling_frequency_hz
         done += raw.size
-        report_progress(progress, done, signal.n_samples)
+        yield done, signal.n_samples
     tops = [block.top for stretch in stretches for block in stretch if np.isfinite(block.top)]
     bottoms = [block.bottom for stretch in stretches for block in stretch if np.isfinite(block.bottom)]
     top, bottom = max(tops, default=np.inf), min(bottoms, default=-np.inf)

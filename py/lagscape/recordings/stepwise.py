@@ -9,7 +9,7 @@ from typing import TypeVar
 
 from lagscape.recordings.recording import Progress, report_progress
 
-__all__ = ["Steps", "finished"]
+__all__ = ["Steps", "finished", "part_of"]
 
 Answer = TypeVar("Answer")
 Steps = Generator[tuple[int, int | None], None, Answer]
@@ -27,6 +27,19 @@ def finished(steps: Steps[Answer], progress: Progress | None = None) -> Answer:
         while True:
             done, total = next(steps)
             report_progress(progress, done, total)
+    except StopIteration as end:
+        answer: Answer = end.value
+        return answer
+    finally:
+        steps.close()
+
+
+def part_of(steps: Steps[Answer], first: int, last: int, total: int) -> Steps[Answer]:
+    """The same steps, counted as the part from `first` to `last` of a larger whole."""
+    try:
+        while True:
+            done, own_total = next(steps)
+            yield (first + (last - first) * done // own_total if own_total else first), total
     except StopIteration as end:
         answer: Answer = end.value
         return answer
