@@ -147,8 +147,9 @@ class _Path:
         sensed = arguments[: form.n_sensed]
         sensed[:] = self.history.at(begins + lengths * self.points - self.delays, self.row_of, begins + lengths * self.inner - self.delays)
         if self.control is not None:
-            forcing = form.control_by_sensed @ sensed[..., 1:].transpose(1, 0, 2) + form.control_constant[:, None]
-            arguments[form.n_sensed :] = self.control.solve(None, forcing, lengths[:, 0], self.c.tolist()).transpose(1, 0, 2)
+            forcing = form.control_by_sensed.dot(sensed[..., 1:].reshape(form.n_sensed, -1)) + form.control_constant[:, None]
+            by_piece = forcing.reshape(form.n_control, -1, n).transpose(1, 0, 2)
+            arguments[form.n_sensed :] = self.control.solve(None, by_piece, lengths[:, 0], self.c.tolist()).transpose(1, 0, 2)
         return arguments
 
     def _kinks(self, edges: Array, arguments: Array) -> dict[int, list[float]]:

@@ -49,14 +49,15 @@ class SolvedPieces:
         np.multiply(forcing.reshape(-1, n).dot(self._q).reshape(m, size, n), scale, out=right[..., size])
         solved = np.linalg.solve(system, right.reshape(m, unknowns, size + 1)).reshape(m, size, n, size + 1)
         # A chain of tiny products: plain floats are faster than array calls.
-        x, starts = start, []
+        x, starts = [*start, 1.0], []
         for rows in solved[:, :, -1].tolist():
             starts.append(x)
-            x = [row[-1] + sum(map(mul, row, x)) for row in rows]
+            x = [sum(map(mul, row, x)) for row in rows]
+            x.append(1.0)
+        before = np.array(starts)
         values = np.empty((m, size, n + 1))
-        values[:, :, 0] = starts
-        values[:, :, 1:] = (solved[..., :size] @ values[:, None, :, :1])[..., 0]
-        values[:, :, 1:] += solved[..., size]
+        values[:, :, 0] = before[:, :size]
+        np.einsum("minj,mj->min", solved, before, out=values[:, :, 1:])
         return values
 
 
