@@ -20,13 +20,14 @@ class Known:
 
 def breathe(
     *, rate_hz, duration_s=900.0, breath_s=4.0, inspired=0.4, cycle_s=None, breaths_a_cycle=8, spread=0.1, jitter=0.06, tidal=0.5,
-    smallest=0.3, rest_s=0.0, seed=1, average=False,
+    smallest=0.3, rest_s=0.0, seed=1, average=False, hiss=1e-3,
 ) -> Known:
     """Breaths of half a cosine in and half a cosine out, `inspired` of the breath's length being in.
 
     Without `cycle_s` they follow one another, each after `rest_s` at the resting level. With it, `breaths_a_cycle` of them wax and wane
     (from `smallest` of the largest) in every cycle and the rest of it is apnoea. `spread` and `jitter` are the standard deviations of
-    size and length. With `average` a sample is the mean over its own time, as a slow recorder makes it; else it is the value at its time.
+    size and length. With `average` a sample is the mean over its own time, as a slow recorder makes it; else it is the value at its time. `hiss` is a recorder's own noise, a share of the tidal volume: without
+    it, rest lies exactly at the lowest value there is, as a clipped signal does.
     """
     rng = np.random.default_rng(seed)
     starts, lengths, sizes = [], [], []
@@ -55,6 +56,7 @@ def breathe(
         flow = _volume(fine.ravel(), starts, lengths, sizes, inspired)[1].reshape(fine.shape).mean(axis=1)
     else:
         volume, flow = _volume(t, starts, lengths, sizes, inspired)
+    volume, flow = (values + hiss * tidal * rng.normal(size=t.size) for values in (volume, flow))
     return Known(t, volume, flow, starts, starts + inspired * lengths, starts + lengths, sizes)
 
 
@@ -79,6 +81,27 @@ def noisy(values, noise_db, seed=1, exponent=0.0):
         ramp = np.maximum(np.arange(spectrum.size), 1.0)
         noise = np.fft.irfft(spectrum * ramp ** (-0.5 * exponent), values.size)
     return values + noise / np.std(noise) * np.std(values) * 10.0 ** (-noise_db / 20.0)
+
+
+def in_memory(*channels, rate_hz=8.0, segments=None):
+    """A recording of channels (name, unit, kind, values) of one rate, unbroken or in the `segments` (start, stop in s) given."""
+    from lagscape.recordings.recording import ArraySamples, Recording, Segment, Signal
+
+    size = channels[0][3].size
+    spans = tuple(Segment(*span) for span in segments or [(0.0, size / rate_hz)])
+    firsts = tuple(np.cumsum([0, *(round(span.duration_s * rate_hz) for span in spans[:-1])]).tolist())
+    made = (
+        Signal(name, unit, kind, rate_hz, size, spans, firsts, ArraySamples(values.astype(np.float32)))
+        for name, unit, kind, values in channels
+    )
+    return Recording("invented", tuple(made), spans)
+
+
+def breaths_of(values, rate_hz, *, name="Volume", unit="L", kind="effort", **options):
+    """The table of single breaths that the package makes of one channel."""
+    from lagscape.recordings import measure_breathing
+
+    return measure_breathing(in_memory((name, unit, kind, values), rate_hz=rate_hz), name, kind=kind, **options).breath_table
 
 
 def wrong_share(truth: Known, turn_s: np.ndarray) -> float:

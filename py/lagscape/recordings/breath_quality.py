@@ -19,7 +19,7 @@ __all__ = ["FEWEST_SAMPLES", "JudgedPiece", "breath_quality", "no_breaths"]
 
 FEWEST_SAMPLES = 4.0
 """Samples a breath under which none is marked: a wave and its first overtone need that many."""
-_ENOUGH_SAMPLES = 6.0
+_ENOUGH_SAMPLES = 5.0
 
 _STRETCH_S = 60.0
 _LENGTHS_SPAN_S = 180.0
@@ -29,7 +29,7 @@ _LEAST_WAVE = 0.25
 _NEAR = 0.35
 _NEIGHBOURS = 45
 _DISAGREEMENT_WEIGHT = 0.8
-_UNLIKE_FROM, _UNLIKE_WEIGHT = 0.2, 2.0
+_UNLIKE_FROM, _UNLIKE_WEIGHT = 0.2, 1.5
 """ln of the lengths: a standard deviation of 0.2 is restless breathing (common practice, no source); white noise has about 0.45."""
 _SHORTEST_BREATH_S, _LONGEST_BREATH_S, _LARGEST_BREATH = 1.0, 12.0, 5.0
 
