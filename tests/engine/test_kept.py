@@ -15,7 +15,13 @@ from lagscape.loops.breathing import BreathingLoop
 from lagscape.loops.plain import PlainLoop
 from lagscape.loops.reflex import ReflexLoop
 
-STORES = ((interval_collocation, "_plans"), (interval_collocation, "_operators"), (interval_collocation, "_lookups"), (plant_steps, "_groups"))
+STORES = (
+    (interval_collocation, "_plans"),
+    (interval_collocation, "_operators"),
+    (interval_collocation, "_lookups"),
+    (plant_steps, "_groups"),
+    (plant_steps, "_linear"),
+)
 
 
 @pytest.fixture

@@ -2,9 +2,10 @@
 
     x'(t) = A x + v (N x + b) + e + w(t),        v and w known at the Radau nodes of m pieces
 
-A one-state plant has a closed-form integrating factor. Any other is solved in groups of a few pieces: with N = R S, S picking the few
-states z that v multiplies, z = Z x_start + Z_v v + Z_w w + K (v z) is a small linear system, and everything else is one constant matrix
-times (x_start, v, v z, w). A linear plant (N = 0) has no z and nothing to solve.
+A one-state plant has a closed-form integrating factor. A linear plant (N = 0) is one constant matrix. Any other is solved in groups of a
+few pieces: with N = R S, S picking the few states z that v multiplies, z = Z x_start + Z_v v + Z_w w + K (v z) is a small linear system,
+and everything else is one constant matrix times (x_start, v, v z, w). (One small system a piece and a chain of their ends is no faster:
+the calls cost what the smaller systems save, natively and in the browser.)
 """
 
 from __future__ import annotations
@@ -17,9 +18,10 @@ import numpy as np
 from lagscape.engine.mesh import Kept, integration, nodes
 from lagscape.loops.protocol import Array, DriveForm
 
-__all__ = ["GroupedStep", "ScalarStep", "chained_operator", "plant_step"]
+__all__ = ["GroupedStep", "LinearStep", "ScalarStep", "chained_operator", "plant_step"]
 
 _groups = Kept(32)
+_linear = Kept(4)
 
 _MOST_DECAY = 10.0
 """Largest integral of the decay rate over a piece before the integrating factor swamps the piece's start (numerical experiment)."""
@@ -134,6 +136,56 @@ class ScalarStep:
         return not ends.size or bool(ends.max() <= _MOST_DECAY)
 
 
+class LinearStep:
+    """A plant that v does not multiply: one constant matrix from (start, 1, v) to everything on a step."""
+
+    def __init__(self, form: DriveForm, rows: Array, lengths: Array, n: int) -> None:
+        self._size, self._n, self._m, self._n_rows = form.n_plant, n, len(lengths), len(rows)
+        numbers = (form.plant, form.input_vector, form.constant, rows)
+        key = (n, len(rows), self._size, *(np.asarray(item).tobytes() for item in numbers), lengths.tobytes())
+        self._state, self._state_forcing, self._output, self._output_forcing = _linear(
+            key, partial(self._built, form, rows, lengths, n)
+        )
+        self._input = np.ones(self._output.shape[1])
+
+    @staticmethod
+    def _built(form: DriveForm, rows: Array, lengths: Array, n: int) -> tuple[Array, ...]:
+        size, points, unknowns = form.n_plant, len(lengths) * (n + 1), len(lengths) * n
+        y0, yw = chained_operator(form.plant, lengths, n)
+        by_forcing = yw.reshape(size * points, size, unknowns)
+        constant = (by_forcing.sum(axis=2) @ form.constant)[:, None]
+        state = np.concatenate([y0.reshape(size * points, size), constant, form.input_vector @ by_forcing], axis=1)
+        forced = by_forcing.reshape(size * points, -1)
+        # What is observed at all points, then the state at the end.
+        output, output_forced = (
+            np.concatenate([(rows @ table.reshape(size, -1)).reshape(len(rows) * points, -1), table[points - 1 :: points]])
+            for table in (state, forced)
+        )
+        return state, forced, output, output_forced
+
+    def advance(self, start: Array, v: Array, forcing: Array | None, into: Array) -> Array:
+        """As ScalarStep.advance."""
+        self._input[: self._size] = start
+        self._input[self._size + 1 :] = v.reshape(-1)
+        result = self._output.dot(self._input)
+        if forcing is not None:
+            result += self._output_forcing.dot(forcing.reshape(-1))
+        into[:] = result[: -self._size].reshape(self._n_rows, self._m, self._n + 1)
+        return result[-self._size :]
+
+    def states(self, starts: Array, v: Array, forcing: Array | None) -> Array:
+        """As ScalarStep.states."""
+        count = len(starts)
+        inputs = np.concatenate([starts, np.ones((count, 1)), v.reshape(count, -1)], axis=1)
+        values = inputs @ self._state.T
+        if forcing is not None:
+            values += forcing.reshape(count, -1) @ self._state_forcing.T
+        return np.moveaxis(values.reshape(count, self._size, self._m, self._n + 1), 1, 3)
+
+    def trusted(self, v: Array) -> bool:
+        return True
+
+
 class _Group:
     """A few pieces solved together."""
 
@@ -168,13 +220,13 @@ class _Group:
 
 
 class GroupedStep:
-    """Any plant; see the module."""
+    """Any plant whose states v multiplies; see the module."""
 
     def __init__(self, form: DriveForm, rows: Array, lengths: Array, n: int) -> None:
         picked = np.flatnonzero(np.any(form.plant_by_output != 0.0, axis=0))
         size = form.n_plant
         self._size, self._n, self._m, self._r, self._n_rows = size, n, len(lengths), len(picked), len(rows)
-        per_group = max(1, _MOST_UNKNOWNS // (n * max(1, self._r)))
+        per_group = max(1, _MOST_UNKNOWNS // (n * self._r))
         parts = np.array_split(np.arange(self._m), -(-self._m // per_group))
         numbers = (form.plant, form.plant_by_output, form.input_vector, form.constant, rows)
         shared = (n, len(rows), size, *(np.asarray(item).tobytes() for item in numbers))
@@ -198,13 +250,12 @@ class GroupedStep:
             if group.has_b:
                 inputs[size + 1 : size + 1 + len(own)] = own
             flat = None if forcing is None else forcing[:, first:last].reshape(-1)
-            if self._r:
-                right = group.z_known.dot(inputs[: group.known])
-                if flat is not None:
-                    right += group.z_forcing.dot(flat)
-                repeated = own if self._r == 1 else np.concatenate([own] * self._r)
-                z = np.linalg.solve(group.identity - group.kernel * repeated, right)
-                np.multiply(z, repeated, out=inputs[group.known :])
+            right = group.z_known.dot(inputs[: group.known])
+            if flat is not None:
+                right += group.z_forcing.dot(flat)
+            repeated = own if self._r == 1 else np.concatenate([own] * self._r)
+            z = np.linalg.solve(group.identity - group.kernel * repeated, right)
+            np.multiply(z, repeated, out=inputs[group.known :])
             result = group.output.dot(inputs)
             if flat is not None:
                 result += group.output_forcing.dot(flat)
@@ -229,6 +280,7 @@ class GroupedStep:
 
 
 def plant_step(form: DriveForm, rows: Array, lengths: Array, n: int, stiff: bool = False) -> Any:
-    """The step that fits the form. `stiff` asks for the general one where the integrating factor was not to be trusted."""
-    scalar = form.n_plant == 1 and np.any(form.plant_by_output)
-    return (ScalarStep if scalar and not stiff else GroupedStep)(form, rows, lengths, n)
+    """The step that fits the form. `stiff` forbids the integrating factor where it was not to be trusted."""
+    if not np.any(form.plant_by_output):
+        return LinearStep(form, rows, lengths, n)
+    return (ScalarStep if form.n_plant == 1 and not stiff else GroupedStep)(form, rows, lengths, n)
