@@ -48,9 +48,9 @@ def overview(
     done = 0
     for first_s, values in signal.pieces(start, stop, most=_SAMPLES_AT_ONCE):
         # First sample of each bin, a hair of slack for a sample on an edge.
-        first = np.ceil((edges - first_s) * signal.sampling_frequency_hz - 1e-6).astype(np.int64)
+        # As wide as an index is: the browser's Python has 32 bits and refuses longer ones.
+        first = np.clip(np.ceil((edges - first_s) * signal.sampling_frequency_hz - 1e-6), 0, values.size).astype(np.intp)
         first[-1] = values.size  # the last bin takes what rounding leaves over
-        first = np.clip(first, 0, values.size)
         filled = np.flatnonzero(first[1:] > first[:-1])
         if filled.size:
             starts = first[filled]
