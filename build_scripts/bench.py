@@ -121,7 +121,7 @@ def _libraries(progress: Progress) -> None:
 
     progress.step("against other solvers of delay equations, native")
     _title("600 s traces against ddeint and jitcdde (its compiling not timed), native; error measured against a fine Runge-Kutta run")
-    print(f"{'':4}{'solver':10}{'setting':18}{'ms':>10}{'error':>12}   Lagscape at no larger error", flush=True)
+    print(f"{'':4}{'solver':10}{'setting':24}{'ms':>10}{'error':>12}   Lagscape at no larger error", flush=True)
     ours: list[bench_libraries.Timed] = []
     for run in bench_libraries.compare():
         if isinstance(run, str):
@@ -134,7 +134,7 @@ def _libraries(progress: Progress) -> None:
             rivals = [item for item in ours if item.problem == run.problem and item.error <= run.error]
             best = min(rivals, key=lambda item: item.milliseconds, default=None)
             beside = f"   {best.milliseconds:.1f} ms, {run.milliseconds / best.milliseconds:.3g} times as fast" if best else "   none"
-        print(f"{run.problem:4}{run.solver:10}{run.setting:18}{run.milliseconds:>10.1f}{run.error:>12.1e}{beside}", flush=True)
+        print(f"{run.problem:4}{run.solver:10}{run.setting:24}{run.milliseconds:>10.1f}{run.error:>12.1e}{beside}", flush=True)
 
 
 if __name__ == "__main__":
