@@ -154,7 +154,7 @@ def test_the_map_follows_a_drag_and_settles(bench):
         x, y = 10.0, 1.5
 
     view._dragged(At())
-    assert bench.is_moving and view.across_words.visible
+    assert bench.is_moving and len(view.reach.data["words"]) == 2
     view._dropped(None)
     assert bench.case.loop().delay == pytest.approx(10.0) and bench.case.loop().sensitivity == pytest.approx(1.5)
     assert bench.judged.judgement.standing != "hunts"
@@ -244,6 +244,39 @@ def test_a_recording_is_read_measured_corrected_and_laid(bench):
     assert bench.judged.judgement.cycle_length == pytest.approx(view.measurement.cycle_length_s.median, rel=1e-3)
     assert bench.case.numbers["peripheral_delay_s"].basis is Basis.MEASURED
     assert bench.measurement is view.measurement
+
+
+def test_the_breaths_are_told_drawn_and_handed_on(bench):
+    view = RecordingView(bench)
+    _open(view, _invented_effort())
+    table, said = view.measurement.breath_table, view.side.content["html"]
+    # Oracle: the construction of the recording: breaths of 0.27 Hz, 16.2 a minute; the row shows three figures.
+    assert "Respiratory rate" in said and f"{len(table)} breaths marked" in said and "× median" in said
+    assert table.rate_per_min.median == pytest.approx(16.2, rel=0.03)
+    assert f"Quality of the breaths: {table.quality.word.capitalize()}" in said and "Quality of the cycles:" in said
+    assert "By the minute, as the bars over the window show:" in said and "Two detectors agree on" in said
+    bars, marks = view.night.breaths.source.data, view.night.marks.source.data
+    assert len(bars["score"]) == len(bars["hatch"]) == 20 and max(bars["score"]) <= 1.0
+    assert len(marks["start"]) == len(table) and (np.asarray(marks["stop"]) > np.asarray(marks["start"])).all()
+    handover = HandoverView(bench)
+    do(handover, "breaths", event="click")
+    (file,) = [item["data"].decode() for item in sent(bench, "download") if item["name"] == "lagscape-breaths.csv"]
+    assert len(file.splitlines()) == len(table) + 1
+    # A refused measurement leaves no mark behind.
+    view.night.draw(None)
+    assert len(view.night.marks.source.data["start"]) == len(view.night.breaths.source.data["score"]) == 0
+
+
+def test_a_thermistor_claims_no_volume_on_the_page(bench):
+    time = np.arange(0.0, 600.0, 0.25)
+    values = np.sin(2.0 * np.pi * 0.27 * time)
+    view = RecordingView(bench)
+    _open(view, ("time_s,Thermistor\n" + "\n".join(f"{t:.2f},{v:.5f}" for t, v in zip(time, values, strict=True))).encode())
+    said = view.side.content["html"]
+    assert "No volume is claimed of this channel." in said and "Tidal volume" not in said and "Respiratory rate" in said
+    # Where the end of inspiration is not known, half of each breath is marked.
+    table, marks = view.measurement.breath_table, view.night.marks.source.data
+    assert np.asarray(marks["stop"]) == pytest.approx(0.5 * (table.start_s + table.end_s))
 
 
 def test_a_loop_is_fitted_to_the_recording_shown_and_taken(bench):

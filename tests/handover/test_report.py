@@ -187,6 +187,9 @@ def test_a_measured_recording_stands_with_medians_and_quality_and_without_its_fi
     assert rows["Cycles used"] == f"{len(measured.used)} of {len(measured.cycles)}"
     assert f"Quality: {measured.quality}." in made.text and METHODS["duty_ratio"] in made.text
     assert "Smith" not in made.text
+    table = measured.breath_table
+    assert rows["Breaths"] == str(len(table)) and rows["Respiratory rate"].startswith("15.") and rows["Tidal volume"].endswith("median breath")
+    assert f"Quality of the breaths: {table.quality.word}" in made.text and "in shares of the median breath" in made.text
 
 
 def test_further_answers_and_pictures_stand_in_the_report():

@@ -9,7 +9,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from lagscape.errors import InvalidInputError
-from lagscape.handover.table import cycles_csv, table_csv, trace_csv
+from lagscape.handover.table import breaths_csv, cycles_csv, table_csv, trace_csv
 from lagscape.loops.protocol import Signal
 from lagscape.recordings.breathing import measure_breathing
 from lagscape.recordings.reading import read_recording
@@ -65,3 +65,25 @@ def test_a_recording_without_cycles_is_a_header():
     measured = measure_breathing(read_recording(effort(False), sampling_frequency_hz=10.0), "effort")
     assert measured.cycles == ()
     assert len(rows_of(cycles_csv(measured))) == 1
+
+
+def test_breaths_are_rows_with_units_in_the_headers_and_every_digit():
+    text = effort(True).decode().replace("effort", "volume (L)", 1)
+    measured = measure_breathing(read_recording(text.encode(), sampling_frequency_hz=10.0), "volume")
+    header, *rows = rows_of(breaths_csv(measured))
+    assert header == [
+        "number", "start_s", "inspiration_end_s", "end_s", "rate_per_min", "tidal_volume_l", "ventilation_l_min", "followed_by", "quality",
+    ]  # fmt: skip
+    table = measured.breath_table
+    assert len(rows) == len(table) > 100
+    columns = list(zip(*rows, strict=True))
+    wanted = (table.start_s, table.inspiration_end_s, table.end_s, table.rates_per_min, table.tidal_volumes, table.ventilations)
+    for column, values in zip(columns[1:7], wanted, strict=True):
+        assert [float(cell).hex() for cell in column] == [float(value).hex() for value in values]
+    assert set(columns[7]) == {"breath", "pause", "break"}
+
+
+def test_a_signal_without_single_breaths_is_a_header():
+    text = "ventilation\n" + "\n".join(f"{8.0 + np.sin(k / 20.0):.4f}" for k in range(1200))
+    measured = measure_breathing(read_recording(text.encode(), sampling_frequency_hz=4.0), "ventilation")
+    assert len(rows_of(breaths_csv(measured))) == 1

@@ -26,8 +26,9 @@ def breathe(
 
     Without `cycle_s` they follow one another, each after `rest_s` at the resting level. With it, `breaths_a_cycle` of them wax and wane
     (from `smallest` of the largest) in every cycle and the rest of it is apnoea. `spread` and `jitter` are the standard deviations of
-    size and length. With `average` a sample is the mean over its own time, as a slow recorder makes it; else it is the value at its time. `hiss` is a recorder's own noise, a share of the tidal volume: without
-    it, rest lies exactly at the lowest value there is, as a clipped signal does.
+    size and length. With `average` a sample is the mean over its own time, as a slow recorder makes it; else it is the value at its
+    time. `hiss` is a recorder's own noise, a share of the tidal volume: without it, rest lies exactly at the lowest value there is, as
+    a clipped signal does.
     """
     rng = np.random.default_rng(seed)
     starts, lengths, sizes = [], [], []

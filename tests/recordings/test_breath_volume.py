@@ -22,7 +22,10 @@ def test_volume_in_litres_is_calibrated(unit, litres):
     assert (reading.method, reading.litres, reading.notes) == ("volume", litres, ())
 
 
-@pytest.mark.parametrize(("unit", "kind"), [("uV", "effort"), ("", "effort"), ("V", "airflow"), ("", "airflow"), ("L", "airflow"), ("L/s", "effort"), ("L/h", "airflow")])
+@pytest.mark.parametrize(
+    ("unit", "kind"),
+    [("uV", "effort"), ("", "effort"), ("V", "airflow"), ("", "airflow"), ("L", "airflow"), ("L/s", "effort"), ("L/h", "airflow")],
+)
 def test_any_other_unit_is_no_calibration_and_says_so(unit, kind):
     reading = volume_reading("Channel", unit, kind)
     assert reading.litres is None

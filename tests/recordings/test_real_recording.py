@@ -95,3 +95,17 @@ def test_duty_ratio_agrees_with_a_plain_threshold(measured):
     total = sum(c.ventilatory_duration_s for c in measured.cycles) / sum(c.cycle_length_s for c in measured.cycles)
     # Both count every cycle, hypopnoeas too; a tenth is the spread between observers' rules.
     assert total == pytest.approx(share, abs=0.1)
+
+
+def test_every_clear_breath_seen_by_eye_is_marked_and_no_pause_is_a_breath(measured):
+    # Tops of clear breaths read off the plotted trace, in s; a reading is good to a second, two samples.
+    seen = [83.9, 88.8, 104.9, 111.4, 132.9, 137.8, 141.7, 160.9, 165.9, 184.3, 189.4, 228.4, 249.4, 254.4, 275.3, 302.4, 310.8, 315.4, 319.9,
+            324.4, 328.5, 347.4, 350.1, 385.2, 388.5, 422.4, 426.0]  # fmt: skip
+    table = measured.breath_table
+    nearest = np.array([np.abs(table.inspiration_end_s - top).min() for top in seen])
+    assert (nearest < 1.0).all(), nearest
+    # From 75 to 195 s a person sees these eleven and the pauses between them.
+    assert int(((table.start_s > 75.0) & (table.start_s < 195.0)).sum()) == 11
+    assert np.max(table.end_s - table.start_s) < 12.0 and table.followed_by.count("pause") >= 25
+    assert 10.0 < table.rate_per_min.lower_quartile < table.rate_per_min.upper_quartile < 20.0
+    assert table.quality.word in ("good", "fair") and table.volume_unit == "median breath"

@@ -4,6 +4,7 @@ Tolerances, unless said: smoothing over a twentieth of a breath shifts a turn of
 leaves 1 % of a volume in doubt.
 """
 
+import itertools
 import re
 
 import numpy as np
@@ -109,7 +110,7 @@ def test_peaks_between_the_samples_are_not_lost(rate_hz, breath_hz):
 def _plain_swings(values):
     """Highest sample less the next lowest, breath by breath: no curve between samples."""
     up = np.flatnonzero((values[:-1] <= 0.0) & (values[1:] > 0.0)) + 1
-    return np.array([values[a:b].max() - values[a:b].min() for a, b in zip(up[:-1], up[1:], strict=True)])
+    return np.array([values[a:b].max() - values[a:b].min() for a, b in itertools.pairwise(up)])
 
 
 @pytest.mark.parametrize(("rate_hz", "most"), [(2.0, 0.09), (8.0, 0.03)])

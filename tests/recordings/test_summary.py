@@ -21,6 +21,9 @@ def test_a_measurement_survives_json_to_the_last_digit():
     assert summary["cycle_length_s"]["n"] == summary["n_cycles_used"] == len(measured.cycles) - 1
     assert summary["cycles"][1]["excluded"] and summary["cycles"][1]["reason"] == "by hand"
     assert summary["missing_because"] is None
+    breaths, table = summary["breaths"], measured.breath_table
+    assert breaths["n"] == len(table) and breaths["rate_per_min"]["median"] == table.rate_per_min.median
+    assert breaths["quality"] == table.quality.word and breaths["volume_unit"] == "median breath"
 
 
 def test_what_is_missing_has_its_reason():

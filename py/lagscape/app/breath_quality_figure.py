@@ -23,7 +23,7 @@ class BreathQualityFigure:
     def __init__(self, time: Range1d, border: dict[str, Any]) -> None:
         self.source = ColumnDataSource({"start": [], "stop": [], "score": [], "hatch": []})
         self.plot = figure(height=64, x_range=time, y_range=Range1d(0.0, 1.05), tools=[], min_border_bottom=4, min_border_top=4, **border)
-        self.plot.yaxis.axis_label = "Breaths"
+        self.plot.yaxis.axis_label = "Quality"
         self.plot.yaxis.ticker = FixedTicker(ticks=[0.0, 0.5, 1.0])
         self.plot.xaxis.visible = False
         self.bars = self.plot.quad(

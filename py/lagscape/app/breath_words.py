@@ -21,7 +21,7 @@ def breaths_html(measured: BreathingMeasurement) -> str:
         for label, spread, unit in (
             ("Respiratory rate", table.rate_per_min, "/min"),
             ("Tidal volume", table.tidal_volume, _said(table.volume_unit)),
-            ("Ventilation in it", table.ventilation, _said(table.ventilation_unit)),
+            ("Ventilation", table.ventilation, _said(table.ventilation_unit)),
         )
         if spread is not None
     )
@@ -38,7 +38,7 @@ def breaths_html(measured: BreathingMeasurement) -> str:
 
 
 def _said(unit: str) -> str:
-    return unit.replace("median breaths/min", "× median /min").replace("median breath", "× median")
+    return unit.replace("median breaths/min", "medians/min").replace("median breath", "× median")
 
 
 def _row(label: str, spread: Spread, unit: str) -> str:
@@ -49,11 +49,12 @@ def _row(label: str, spread: Spread, unit: str) -> str:
 
 
 def _stretches(table: BreathTable) -> str:
-    """How the minutes fall into words, and where the worst one is; the strip over the window shows them all."""
+    """How the minutes fall into words, and where the worst one is."""
     judged = [(stretch.score, stretch.start_s) for stretch in table.quality.stretches if stretch.score is not None]
     if len(judged) < 2:
         return ""
     words = [word_of(score) for score, _ in judged]
     said = ", ".join(f"{words.count(word)} {word}" for word in ("good", "fair", "poor") if word in words)
     worst, at = min(judged)
-    return f"<li>By the minute: {said}; the worst, {figure(worst, 2)}, begins at {int(at // 60)}:{int(at % 60):02d}.</li>"
+    begins = f"{int(at // 60)}:{int(at % 60):02d}"
+    return f"<li>By the minute, as the bars over the window show: {said}; the worst, {figure(worst, 2)}, begins at {begins}.</li>"

@@ -16,7 +16,10 @@ __all__ = ["NightFigure"]
 
 
 class NightFigure:
-    """Filled discs for the length in s, on the left axis; hollow squares for the duty ratio, on the right one; `breaths` under it, `marks` in the window."""
+    """Filled discs for the length in s, on the left axis; hollow squares for the duty ratio, on the right one.
+
+    `breaths` goes under it, `marks` stand in the window.
+    """
 
     def __init__(self, time: Range1d, border: dict[str, Any], window: Any) -> None:
         """`window` is the figure with a `lane` range in which every breath gets its mark."""
