@@ -12,7 +12,7 @@ from lagscape.recordings.kinds import BREATHING_KINDS
 from lagscape.recordings.loop_gain import loop_gain_from_duty_ratio
 from lagscape.recordings.masks import MaskedStretch, hidden_samples, masked_stretches
 from lagscape.recordings.recording import Progress, Recording, Signal
-from lagscape.recordings.single_breaths import MaskedPiece, single_breaths
+from lagscape.recordings.single_breaths import MaskedPiece, single_breath_steps
 from lagscape.recordings.stepwise import Steps, finished, part_of
 
 __all__ = ["breathing_steps", "measure_breathing"]
@@ -115,14 +115,14 @@ def breathing_steps(
         masked_pieces.append(MaskedPiece(piece, here, hidden))
         if not is_ventilation and breath_hz is not None:
             breaths.append(_breaths(envelope, hidden, breath_hz))
-    yield _CYCLES, _ALL
+    table = yield from part_of(single_breath_steps(channel, kind, masked_pieces, breath_hz, thresholds), _CYCLES, _ALL, _ALL)
     if not is_ventilation and breath_hz is not None and channel.sampling_frequency_hz < _SAMPLES_PER_BREATH * breath_hz:
         breaths = []
     masked += _gaps(pieces)
     return BreathingMeasurement(
         channel.name, channel.unit, kind, window, channel.sampling_frequency_hz, thresholds, tuple(cycles), tuple(stretches),
         tuple(sorted(masked, key=lambda m: m.start_s)), tuple(envelopes), _all_breaths(breaths),
-        None if is_ventilation else breath_hz, tuple(notes), single_breaths(channel, kind, masked_pieces, breath_hz, thresholds),
+        None if is_ventilation else breath_hz, tuple(notes), table,
     )  # fmt: skip
 
 

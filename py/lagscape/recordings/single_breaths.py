@@ -12,8 +12,9 @@ from lagscape.recordings.cycles import Thresholds
 from lagscape.recordings.envelope import WorkingPiece
 from lagscape.recordings.masks import MaskedStretch
 from lagscape.recordings.recording import Signal
+from lagscape.recordings.stepwise import Steps
 
-__all__ = ["MaskedPiece", "single_breaths"]
+__all__ = ["MaskedPiece", "single_breath_steps"]
 
 _SLOW_HZ = 8.0
 
@@ -27,8 +28,10 @@ class MaskedPiece:
     hidden: np.ndarray
 
 
-def single_breaths(channel: Signal, kind: str, pieces: list[MaskedPiece], breath_hz: float | None, thresholds: Thresholds) -> BreathTable:
-    """Mark and measure every breath.
+def single_breath_steps(
+    channel: Signal, kind: str, pieces: list[MaskedPiece], breath_hz: float | None, thresholds: Thresholds
+) -> Steps[BreathTable]:
+    """Mark and measure every breath, in steps that count thousandths of the time it takes.
 
     Parameters
     ----------
@@ -54,11 +57,16 @@ def single_breaths(channel: Signal, kind: str, pieces: list[MaskedPiece], breath
     per_breath = channel.sampling_frequency_hz / breath_hz
     if per_breath < FEWEST_SAMPLES:
         return _empty(reading, no_breaths(f"{per_breath:.1f} samples a breath are too few to mark single breaths; it takes {FEWEST_SAMPLES:g}."))
-    judged = []
+    judged: list[JudgedPiece] = []
+    done, n_samples = 0, sum(item.piece.values.size for item in pieces)
     for item in pieces:
+        yield 800 * done // n_samples, 1000
         signal = breath_signal(item.piece, item.hidden, breath_hz, reading.method == "flow")
+        yield (800 * done + 200 * item.piece.values.size) // n_samples, 1000
+        done += item.piece.values.size
         spans = [(stretch.start_s, stretch.stop_s) for stretch in item.masked]
         judged.append(JudgedPiece(item.piece, signal, marked_breaths(signal, spans, thresholds.shortest_pause_s), item.masked))
+    yield 800, 1000
     quality = breath_quality(judged, channel.sampling_frequency_hz, reading.method == "flow")
     return _table(judged, reading, quality, _notes(reading, channel.sampling_frequency_hz, breath_hz))
 
