@@ -140,7 +140,10 @@ def _site_module(version: str, library_folder: str, library: Mapping[str, bytes]
     sizes = {name: len(library[name]) for name in ("pyodide.asm.wasm", "python_stdlib.zip", "numpy.zip", "libraries.zip")}
     sizes["lagscape.zip"] = len(app["lagscape.zip"])
     scripts = [*BOKEH_SCRIPTS, "panel.min.js"]
-    site = {"version": version, "library": f"../{library_folder}/", "sizes": sizes, "scripts": scripts}
+    site = {
+        "version": version, "library": f"../{library_folder}/", "sizes": sizes, "scripts": scripts,
+        "scipyBytes": len(library["scipy.bundle"]),
+    }  # fmt: skip
     return f"// Written by the build: what this version is made of.\nexport const site = {json.dumps(site, indent=2)};\n".encode()
 
 

@@ -46,7 +46,7 @@ const answers = {
   units: (page, { pressure }) => {
     for (const radio of document.querySelectorAll("#units input")) radio.checked = radio.value === pressure;
   },
-  working: (page, { text }) => page.state.working(text),
+  progress: (page, payload) => page.state.workBar.show(payload),
   print: (page, payload) => print(payload),
 };
 

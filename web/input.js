@@ -80,6 +80,7 @@ export function startInput(page) {
   joinFileButton(page, "open-case", "case-input", "open_case");
   joinDrop(page);
   joinKeys(page);
+  document.getElementById("stop-work").addEventListener("click", () => page.link.command("stop_work"));
   document.getElementById("save-case").addEventListener("click", () => page.link.command("save_case"));
   document.getElementById("copy-link").addEventListener("click", () => page.link.command("copy_link"));
   document.getElementById("open-handover").addEventListener("click", () => setView(page, "handover", true));

@@ -37,6 +37,7 @@ export const COMMANDS = {
   show: { view: "string", open: "boolean" }, // "recording" or "handover" was opened or closed by the user
   theme: { theme: "string" }, // "light" or "dark"
   restarted: {}, // Python was started again after a failure
+  stop_work: {}, // the user wants the long work under way to stop
   idle: {}, // nothing happened for a while: time to prepare what may be needed
 };
 
@@ -52,7 +53,7 @@ export const CALLS = {
   standing: { text: "string", state: "string" }, // state: settles rings hunts none
   show: { view: "string", open: "boolean" },
   units: { pressure: "string" }, // shows which units are on
-  working: { text: "string" }, // the words beside the working mark; empty: the usual word
+  progress: { title: "string", words: "string", share: "number" }, // of long work, share from 0 to 1; an empty title: it is over
   print: { html: "string" }, // prints a whole HTML page of its own
 };
 

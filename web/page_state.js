@@ -1,5 +1,6 @@
 // What the frame shows: starting, ready, working, refused, failed, and the quiet lines. No knowledge of Python or Bokeh.
 import { copyText } from "./clipboard.js";
+import { WorkBar } from "./work_bar.js";
 
 const STAGES = [
   ["runtime", "Python"],
@@ -27,7 +28,7 @@ export class PageState {
     this.stages = new Map();
     this.readyCallbacks = [];
     this.supportText = "";
-    this.workingOn = false;
+    this.workBar = new WorkBar(root);
     this.byId("dismiss").addEventListener("click", () => this.say("bar", "", "note"));
     this.byId("copy-support").addEventListener("click", (event) => this.copySupport(event.currentTarget));
   }
@@ -45,7 +46,7 @@ export class PageState {
     this.byId("failed").hidden = true;
     this.byId("boot").hidden = false;
     this.byId("boot-bar").value = 0;
-    this.workingOn = false;
+    this.workBar.over();
     this.busy(false);
     const list = this.byId("boot-stages");
     list.replaceChildren();
@@ -104,20 +105,13 @@ export class PageState {
       this.thinkingTimer = setTimeout(() => this.reveal("thinking", true), THINKING_AFTER_MS);
       this.stuckTimer = setTimeout(() => this.reveal("stuck", true), STUCK_AFTER_MS);
     } else {
-      this.reveal("thinking", this.workingOn);
+      this.reveal("thinking", false);
       this.reveal("stuck", false);
     }
   }
 
   reveal(id, on) {
     this.byId(id).hidden = !on;
-  }
-
-  /** Work that goes on between messages: the mark stays, with its own words, until the text is empty. */
-  working(text) {
-    this.workingOn = text !== "";
-    this.byId("thinking-text").textContent = text || "working";
-    this.reveal("thinking", this.workingOn);
   }
 
   standing(text, standing) {
@@ -168,7 +162,7 @@ export class PageState {
 
   failed(sentence, support) {
     this.set("failed");
-    this.workingOn = false;
+    this.workBar.over();
     this.busy(false);
     this.supportText = support;
     this.byId("boot").hidden = true;

@@ -13,6 +13,7 @@ const here = new URL("./", import.meta.url).href;
 let pyodide = null;
 let application = null;
 let scipyLoading = null;
+let scipyFetched = 0; // which share of it has arrived
 
 function post(kind, fields, transfer = []) {
   self.postMessage(message(TO_PAGE, kind, fields), transfer);
@@ -50,11 +51,17 @@ const host = {
     post("trouble", { sentence, support });
   },
   loadScipy() {
-    scipyLoading ??= loadScipy(pyodide, library).catch((error) => {
+    const fetched = (share) => {
+      scipyFetched = share;
+    };
+    scipyLoading ??= loadScipy(pyodide, library, site.scipyBytes, fetched).catch((error) => {
       scipyLoading = null; // the next one who asks tries again
       throw error;
     });
     return scipyLoading;
+  },
+  scipyFetched() {
+    return scipyFetched;
   },
   // Reads part of a file the user opened; only a worker may read it in step with Python.
   readSlice(file, begin, end) {

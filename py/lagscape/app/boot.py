@@ -60,7 +60,7 @@ class _Running:
         from .page_link import PageLink
         from .scipy_loader import use_loader
 
-        use_loader(host.loadScipy)
+        use_loader(host.loadScipy, host.scipyFetched)
         self.host = host
         # Names that differ between restarts, so that the page's index of views never meets the same one twice.
         bokeh_settings.simple_ids.set_value(False)

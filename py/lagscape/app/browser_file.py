@@ -7,7 +7,7 @@ from typing import Any
 
 __all__ = ["BrowserFile", "open_browser_file"]
 
-BUFFER_BYTES = 4 << 20
+BUFFER_BYTES = 1 << 20
 
 
 class BrowserFile(io.RawIOBase):
@@ -46,11 +46,17 @@ class BrowserFile(io.RawIOBase):
         return self._at
 
     def readinto(self, buffer: Any) -> int:
-        """Fills the buffer from the present place; returns how many bytes there were, 0 at the end."""
+        """Fills the buffer from the present place; returns how many bytes there were, 0 at the end.
+
+        Raises OSError where the browser can no longer read the file.
+        """
         end = min(self._at + len(buffer), self._size)
         if end <= self._at:
             return 0
-        part = self._read_slice(self._file, self._at, end)
+        try:
+            part = self._read_slice(self._file, self._at, end)
+        except Exception as error:  # the browser's own error, of which nothing outside the browser knows the type
+            raise OSError("the browser no longer gives it out; it was moved or changed since it was opened, so open it again") from error
         part.assign_to(memoryview(buffer)[: end - self._at])
         count = end - self._at
         self._at = end

@@ -27,7 +27,7 @@ SENDS: dict[str, tuple[str, ...]] = {
     "standing": ("text", "state"),  # the sentence in the largest type; state: settles rings hunts none
     "show": ("view", "open"),  # opens or closes "recording" or "handover" over the middle
     "units": ("pressure",),  # shows which unit of pressure is on: mmHg or kPa
-    "working": ("text",),  # words beside the working mark, "reading 40 %"; "" for the usual word
+    "progress": ("title", "words", "share"),  # of long work, share from 0 to 1; an empty title: it is over
     "print": ("html",),  # prints a whole HTML page of its own
 }
 
@@ -46,6 +46,7 @@ RECEIVES: dict[str, tuple[str, ...]] = {
     "show": ("view", "open"),
     "theme": ("theme",),
     "restarted": (),
+    "stop_work": (),
     "idle": (),
 }
 

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import asyncio
 from functools import cached_property
 from typing import Any
 
@@ -17,25 +16,20 @@ from lagscape.app.components.sheet import Request, Sheet
 from lagscape.app.night_figure import NightFigure
 from lagscape.app.palette import FONT, PALETTES, dress
 from lagscape.app.recording_words import recording_summary
-from lagscape.app.scipy_loader import ensure_scipy
+from lagscape.app.recording_work import READABLE_KINDS, RecordingWork
 from lagscape.app.threshold_forms import with_threshold
 from lagscape.app.trace_view import SHOW_ALL
 from lagscape.app.workbench import Workbench
-from lagscape.errors import InvalidInputError, RecordingError
-from lagscape.questions.fit import Fit, fit_recording
-from lagscape.questions.fit_measured import Measured, RingDown, measured_from
-from lagscape.questions.fit_ring_down import ring_down_after_events, ring_down_from_variability
+from lagscape.errors import InvalidInputError
+from lagscape.questions.fit import Fit
+from lagscape.questions.fit_measured import RingDown
 from lagscape.questions.lay import Laying, lay_measurement
 from lagscape.questions.standing import judge
 from lagscape.recordings import (
     BreathingMeasurement,
     Recording,
     Thresholds,
-    measure_breathing,
-    measure_saturation_lag,
     overview,
-    read_recording,
-    with_derived_channels,
 )
 from lagscape.recordings.recording import Signal
 from lagscape.recordings.saturation_lag import SaturationLag
@@ -45,10 +39,6 @@ __all__ = ["RecordingView"]
 _STRIP_BINS = 1200
 _WINDOW_BINS = 1600
 _FIRST_WINDOW_S = 300.0
-_SHOW_FIRST_S = 0.05
-_SIGH = 2.0
-"""A breath this many times the usual one is taken for a sigh (common practice, no source)."""
-_READABLE_KINDS = ("ventilation", "airflow", "effort")
 
 
 class RecordingView:
@@ -57,6 +47,7 @@ class RecordingView:
     def __init__(self, bench: Workbench) -> None:
         self.bench = bench
         self.recording: Recording | None = None
+        self.drawn: Signal | None = None
         self.signal: Signal | None = None
         self.measurement: BreathingMeasurement | None = None
         self.laying: Laying | None = None
@@ -66,7 +57,8 @@ class RecordingView:
         self.lag: SaturationLag | None = None
         self.refusal = ""
         self._built = False
-        self._waiting: tuple[Any, str] | None = None
+        self.work = RecordingWork(self)
+        self.waiting: tuple[Any, str] | None = None
         self._whole = Range1d(0.0, 1.0)
         self._shown = Range1d(0.0, 1.0)
         bench.listen("theme", self.dress)
@@ -168,58 +160,53 @@ class RecordingView:
 
     async def open(self, payload: Any) -> None:
         """Read a file that the user chose or dropped, and measure its likeliest channel."""
-        page = self.bench.page
-        self.refusal, self.laying, self.fit, self.ring_down = "", None, None, None
         _ = self.root
-        page.send("show", {"view": "recording", "open": True})
-        page.send("working", {"text": f"reading {payload['name']}"})
-        try:
-            await ensure_scipy()
-            if self._read(payload["file"], payload["name"], None):
-                # The channels are on the screen before the measuring, which may take seconds, begins.
-                await asyncio.sleep(_SHOW_FIRST_S)
-                page.send("working", {"text": f"measuring {payload['name']}"})
-                self._choose(self._likeliest())
-        except ImportError as problem:
-            self._refuse(str(problem))
-        finally:
-            page.send("working", {"text": ""})
+        self.bench.page.send("show", {"view": "recording", "open": True})
+        await self.work.open(payload["file"], payload["name"])
 
-    def _read(self, file: Any, name: str, rate: float | None) -> bool:
-        """Read the file and show its channels; False where it was refused."""
-        page = self.bench.page
-        last = [-1]
+    def take(self, recording: Recording) -> None:
+        """A file was opened: its channels are listed; what was drawn of the one before goes."""
+        self.recording, self.signal = recording, self.likeliest(recording)
+        self.measurement = self.lag = self.laying = self.fit = self.ring_down = self.waiting = None
+        self.refusal = ""
+        self.draw_signal(empty=True)
 
-        def progress(done: int, total: int | None) -> bool:
-            share = 100 * done // total if total else -1
-            if share != last[0]:
-                last[0] = share
-                page.send("working", {"text": f"reading {name}, {share} %" if share >= 0 else f"reading {name}"})
-            return True
-
-        try:
-            recording = read_recording(file, name=name, sampling_frequency_hz=rate, progress=progress)
-        except RecordingError as problem:
-            self._waiting = (file, name)
-            self._refuse(str(problem))
-            return False
-        self._waiting, self.measurement = None, None
-        self.recording = with_derived_channels(recording)
-        self.signal = self.recording.signal(self._likeliest())
-        self.write()
-        return True
-
-    def _likeliest(self) -> str:
+    def likeliest(self, recording: Recording | None = None) -> Signal:
         """The channel that most looks like breathing; the first where none does."""
-        assert self.recording is not None
-        return (self.recording.of_kind(*_READABLE_KINDS) or self.recording.signals)[0].name
+        recording = recording or self.recording
+        assert recording is not None
+        return (recording.of_kind(*READABLE_KINDS) or recording.signals)[0]
 
-    def _choose(self, name: str) -> None:
-        assert self.recording is not None
-        self.signal = self.recording.signal(name)
-        start, stop = self.signal.segments[0].start_s, self.signal.segments[-1].stop_s
-        whole = overview(self.signal, _STRIP_BINS)
-        band = _band(whole)
+    def show_measured(self, signal: Signal, measurement: BreathingMeasurement | None, lag: SaturationLag | None, refusal: str) -> None:
+        """A channel was measured, or refused with a sentence."""
+        self.signal, self.measurement, self.lag, self.refusal = signal, measurement, lag, refusal
+        self.laying = self.fit = self.ring_down = None
+        self.draw_signal()
+
+    def show_fit(self) -> None:
+        """A fit came to something."""
+        self._draw_window()
+        self.write()
+
+    def draw_signal(self, empty: bool = False) -> None:
+        """Draw the channel and what was measured in it; nothing for none, or for one that is not read yet."""
+        drawn = None if empty else self.signal
+        if drawn is not self.drawn:
+            self.drawn = drawn
+            self._draw_strip()
+        self._draw_cycles()
+        self.night.draw(self.measurement)
+        self._draw_window()
+        self.write()
+
+    def _draw_strip(self) -> None:
+        """The whole of a channel, and its first minutes in the window."""
+        if self.drawn is None:
+            for source in (self.strip_source, self.window_source, self.envelope, self.modelled):
+                source.data = {name: [] for name in source.data}
+            return
+        start, stop = self.drawn.segments[0].start_s, self.drawn.segments[-1].stop_s
+        band = _band(overview(self.drawn, _STRIP_BINS))
         self.strip_source.data = band
         low, high = float(np.nanmin(band["low"])), float(np.nanmax(band["high"]))
         self.strip.y_range.update(start=low - 0.1 * (high - low), end=high + 0.05 * (high - low))
@@ -227,33 +214,9 @@ class RecordingView:
         self._shown.update(start=start, end=min(stop, start + _FIRST_WINDOW_S), reset_start=start, reset_end=stop)
         for item, span in ((self.strip, stop - start), (self.window, min(stop - start, _FIRST_WINDOW_S))):
             _time_ticks(item, start, start + span)
-        self._measure(None)
 
-    def _measure(self, window: tuple[float, float] | None) -> None:
-        assert self.recording is not None and self.signal is not None
-        self.refusal, self.laying, self.fit, self.ring_down = "", None, None, None
-        kind = self.signal.kind if self.signal.kind in _READABLE_KINDS else "effort"
-        try:
-            self.measurement = measure_breathing(
-                self.recording, self.signal.name, window=window, kind=kind, thresholds=self.thresholds
-            )
-            self.lag = self._saturation()
-        except (RecordingError, InvalidInputError) as problem:
-            self.measurement = None
-            self.refusal = str(problem)
-        self._draw_cycles()
-        self.night.draw(self.measurement)
-        self._draw_window()
-        self.write()
-
-    def _saturation(self) -> SaturationLag | None:
-        """How far the oximeter lags, where the recording has one and the cycles have apnoeas."""
-        assert self.recording is not None and self.measurement is not None
-        if not self.recording.of_kind("SpO2") or self.measurement.duty_ratio is None:
-            return None
-        return measure_saturation_lag(self.recording, self.measurement)
-
-    def _refuse(self, sentence: str) -> None:
+    def refuse(self, sentence: str) -> None:
+        """Say why something was not done; what there was stays."""
         self.refusal = sentence
         self.write()
 
@@ -290,15 +253,15 @@ class RecordingView:
         }  # fmt: skip
 
     def _draw_window(self) -> None:
-        if self.signal is None:
+        if self.drawn is None:
             return
         start, stop = float(self._shown.start), float(self._shown.end)
-        first, last = self.signal.segments[0].start_s, self.signal.segments[-1].stop_s
+        first, last = self.drawn.segments[0].start_s, self.drawn.segments[-1].stop_s
         start, stop = max(first, start), min(last, stop)
         if stop <= start:
             return
-        bins = max(8, min(_WINDOW_BINS, int((stop - start) * self.signal.sampling_frequency_hz)))
-        self.window_source.data = _band(overview(self.signal, bins, window=(start, stop)))
+        bins = max(8, min(_WINDOW_BINS, int((stop - start) * self.drawn.sampling_frequency_hz)))
+        self.window_source.data = _band(overview(self.drawn, bins, window=(start, stop)))
         times: list[Any] = [np.empty(0)]
         values: list[Any] = [np.empty(0)]
         if self.measurement is not None:
@@ -309,7 +272,7 @@ class RecordingView:
         time, value = np.concatenate(times), np.concatenate(values)
         band = self.window_source.data
         middle = float(np.nanmedian(np.asarray(band["low"]))) if len(band["low"]) else 0.0
-        if self.signal.kind == "ventilation":
+        if self.drawn.kind == "ventilation":
             middle = 0.0
         self.envelope.data = {"time": time, "value": value + middle}
         self._draw_model(middle)
@@ -361,28 +324,28 @@ class RecordingView:
         self.write()
 
     def _handle(self, request: Request) -> None:
-        bench = self.bench
+        bench, begin = self.bench, self.work.place.start
         if request.act == "channel":
-            self._choose(request.value)
+            begin(self.work.choose(request.value))
         elif request.act == "measure-window":
-            self._measure(self.shown_window())
+            begin(self.work.measure(self.shown_window()))
         elif request.act == "measure-whole":
-            self._measure(None)
+            begin(self.work.measure(None))
         elif request.act == "use":
             self._toggle(int(request.key), request.value == "true")
         elif request.act == "go":
             middle, half = float(request.key), 0.5 * (float(self._shown.end) - float(self._shown.start))
             self._shown.update(start=middle - half, end=middle + half)
-        elif request.act == "rate" and self._waiting is not None:
+        elif request.act == "rate" and self.waiting is not None:
             self._read_with_rate(request.value)
         elif request.act == "prepare":
             self._prepare()
         elif request.act == "fit":
-            self._fit()
+            begin(self.work.fit())
         elif request.act in ("threshold", "usual-thresholds") and request.event != "escape":
             self._set_thresholds(request)
         elif request.act == "quiet":
-            self._fit_quiet()
+            begin(self.work.fit_quiet())
         elif request.act == "drop-fit":
             self.fit = None
             self._draw_window()
@@ -407,59 +370,24 @@ class RecordingView:
     def _set_thresholds(self, request: Request) -> None:
         try:
             usual = request.act == "usual-thresholds"
-            self.thresholds = Thresholds() if usual else with_threshold(self.thresholds, request.key, request.value)
+            thresholds = Thresholds() if usual else with_threshold(self.thresholds, request.key, request.value)
         except InvalidInputError as problem:
-            self._refuse(str(problem))
+            self.refuse(str(problem))
             return
-        self._measure(self.measurement.window if self.measurement is not None else None)
+        window = self.measurement.window if self.measurement is not None else None
+        self.work.place.start(self.work.measure(window, thresholds))
 
     def _read_with_rate(self, text: str) -> None:
-        assert self._waiting is not None
-        file, name = self._waiting
+        assert self.waiting is not None
+        file, name = self.waiting
         try:
             rate = float(text.strip().replace(",", "."))
             if not 0.0 < rate < 1e6:
                 raise ValueError
         except ValueError:
-            self._refuse(f"The sampling rate must be a positive number of samples a second; got {text.strip()[:30]!r}.")
+            self.refuse(f"The sampling rate must be a positive number of samples a second; got {text.strip()[:30]!r}.")
             return
-        file.seek(0)
-        if self._read(file, name, rate):
-            self._choose(self._likeliest())
-
-    def _fit(self) -> None:
-        """The most plausible loop behind the measured cycles, with SpO2 where the recording has it."""
-        assert self.recording is not None and self.measurement is not None
-        self.refusal, self.laying = "", None
-        try:
-            self.fit = fit_recording(self.bench.case, measured_from(self.measurement, self.lag))
-        except (InvalidInputError, RecordingError) as problem:
-            self.refusal = str(problem)
-        self._draw_window()
-        self.write()
-
-    def _fit_quiet(self) -> None:
-        """The most plausible loop behind breathing that does not cycle: from what follows sighs, else from its restlessness."""
-        assert self.measurement is not None
-        self.refusal, self.laying, self.ring_down = "", None, None
-        envelope = max(self.measurement.envelopes, key=lambda item: item.values.size)
-        breaths = self.measurement.breaths
-        sighs = breaths.times_s[breaths.sizes > _SIGH * np.median(breaths.sizes)] if breaths.sizes.size else breaths.times_s
-        found = ring_down_after_events(envelope.times_s, envelope.values, sighs) if sighs.size else None
-        found = found if found is not None else ring_down_from_variability(envelope.times_s, envelope.values)
-        if found is None:
-            self.refusal = (
-                "Quiet breathing says nothing of the loop here: there is less than a quarter of an hour of it, or it shows no swing. "
-                "Choose a longer window, or one with sighs."
-            )
-        else:
-            try:
-                self.fit = fit_recording(self.bench.case, Measured(ring_down=found))
-                self.ring_down = found
-            except InvalidInputError as problem:
-                self.refusal = str(problem)
-        self._draw_window()
-        self.write()
+        self.work.place.start(self.work.open(file, name, rate))
 
     def _prepare(self) -> None:
         assert self.measurement is not None

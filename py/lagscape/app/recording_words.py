@@ -27,7 +27,7 @@ def _head(view: RecordingView) -> str:
     refusal = f'<p class="refusal" role="alert">{escape(view.refusal)}</p>' if view.refusal else ""
     if view.recording is None or view.signal is None:
         rate = ""
-        if view._waiting is not None and "sampl" in view.refusal.lower():
+        if view.waiting is not None and "sampl" in view.refusal.lower():
             rate = (
                 '<label class="pick"><span>Samples a second</span><input class="box" type="text" inputmode="decimal" data-act="rate" value=""'
                 ' aria-label="Samples a second"></label>'

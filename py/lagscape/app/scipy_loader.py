@@ -6,24 +6,37 @@ import asyncio
 import importlib
 import sys
 from collections.abc import Awaitable, Callable
+from types import ModuleType
+from zipimport import zipimporter
 
-__all__ = ["ensure_scipy", "prepare_scipy", "use_loader"]
+from lagscape.recordings.stepwise import Steps
+
+__all__ = ["fetch_scipy", "prepare_scipy", "scipy_is_ready", "scipy_steps", "use_loader"]
 
 # What scipy.signal and scipy.ndimage import, in an order in which each step adds a part of its own.
-PARTS = ("special", "linalg", "sparse.linalg", "fft", "spatial", "optimize", "interpolate", "ndimage", "stats", "signal")
+PARTS = ("special", "linalg", "sparse.linalg", "ndimage", "fft", "spatial", "optimize", "interpolate", "signal")
 PAUSE_S = 0.05
+_LOOK_EVERY_S = 0.1
 
 _load: Callable[[], Awaitable[object]] | None = None
+_fetched: Callable[[], float] | None = None
 
 
-def use_loader(load: Callable[[], Awaitable[object]]) -> None:
-    """Used by `boot` alone: how the browser fetches scipy."""
-    global _load
-    _load = load
+def use_loader(load: Callable[[], Awaitable[object]], fetched: Callable[[], float]) -> None:
+    """Used by `boot` alone: how the browser fetches scipy, and which share of it has arrived, from 0 to 1."""
+    global _load, _fetched
+    _load, _fetched = load, fetched
 
 
-async def ensure_scipy() -> None:
+def scipy_is_ready() -> bool:
+    """Whether all that a recording needs is imported."""
+    return all(f"scipy.{part}" in sys.modules for part in PARTS)
+
+
+async def fetch_scipy(tell: Callable[[float], None] = lambda share: None) -> None:
     """Returns when `import scipy` works; at once where it already does, as it always does outside the browser.
+
+    `tell` hears the share fetched, from 0 to 1; what it raises ends the waiting, not the fetching.
 
     Raises
     ------
@@ -33,14 +46,28 @@ async def ensure_scipy() -> None:
     if "scipy" in sys.modules:
         return
     if _load is not None:
+        _let_go_of_zip_finders()
+        fetching = asyncio.ensure_future(_load())
+        while not fetching.done():
+            tell(_fetched() if _fetched is not None else 0.0)
+            await asyncio.wait({fetching}, timeout=_LOOK_EVERY_S)
         try:
-            await _load()
+            await fetching
         except Exception as error:
             raise ImportError(
                 "The part that reads recordings and fits could not be fetched; check the connection to the server and try again."
             ) from error
+        _let_go_of_zip_finders()
         importlib.invalidate_caches()
+        _leave_out_statistics()
     importlib.import_module("scipy")
+
+
+def scipy_steps() -> Steps[None]:
+    """Import what a recording needs of scipy, a part a step. `fetch_scipy` comes first."""
+    for done, part in enumerate(PARTS, start=1):
+        importlib.import_module(f"scipy.{part}")
+        yield done, len(PARTS)
 
 
 async def prepare_scipy() -> None:
@@ -49,9 +76,23 @@ async def prepare_scipy() -> None:
     Raises
     ------
     ImportError
-        As `ensure_scipy`.
+        As `fetch_scipy`.
     """
-    await ensure_scipy()
-    for part in PARTS:
+    await fetch_scipy()
+    for _ in scipy_steps():
         await asyncio.sleep(PAUSE_S)
-        importlib.import_module(f"scipy.{part}")
+
+
+def _let_go_of_zip_finders() -> None:
+    """The standard library lies in a zip that never changes, yet each of its finders would read the zip's list anew, a second in all."""
+    for path, finder in list(sys.path_importer_cache.items()):
+        if isinstance(finder, zipimporter):
+            del sys.path_importer_cache[path]
+
+
+def _leave_out_statistics() -> None:
+    """scipy.signal takes one function of scipy.stats, for a finder of peaks that nothing here uses; importing the rest takes a second."""
+    if "scipy.stats" not in sys.modules:
+        module = ModuleType("scipy.stats")
+        module.__dict__["scoreatpercentile"] = None
+        sys.modules["scipy.stats"] = module
