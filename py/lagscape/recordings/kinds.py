@@ -6,15 +6,18 @@ practice, no source.
 
 import re
 
-__all__ = ["BREATHING_KINDS", "KINDS", "guess_kind"]
+__all__ = ["BREATHING_KINDS", "KINDS", "TREMOR_KINDS", "guess_kind"]
 
-KINDS = ("ventilation", "airflow", "effort", "SpO2", "CO2", "acceleration", "unknown")
+KINDS = ("ventilation", "airflow", "effort", "SpO2", "CO2", "acceleration", "rotation", "EMG", "unknown")
 BREATHING_KINDS = ("ventilation", "airflow", "effort")
+TREMOR_KINDS = ("acceleration", "rotation", "EMG")
 
 _BY_NAME = (
     ("CO2", r"co2|capno"),
     ("SpO2", r"spo2|sao2|\bso2\b|sat(uration)?\b|oxim|pulse ?ox"),
-    ("acceleration", r"accel|\bacc\b|\bacc[ -]?[xyz]\b|tremor|\bgyro"),
+    ("rotation", r"gyro|\bgyr\b|\bgyr ?[xyz]\b|angular (velocity|rate)|\bang ?vel"),
+    ("acceleration", r"accel|\bacc\b|\bacc ?[xyz]\b|tremor|^[xyz]$|^axis ?[xyz]$"),
+    ("EMG", r"emg|electromyo|tibialis|\b[lr]at\b|soleus|gastrocn|extensor|flexor|biceps|triceps|masseter|mentalis|\bchin"),
     ("ventilation", r"ventilation|\bve\b|\bv e\b|minute ?vol|\bmv\b|\bvdot"),
     ("effort", r"effort|thor|chest|abdo|\babd\b|belt|\brip\b|rib ?cage|\btho\b|torax|bauch|brust"),
     ("airflow", r"flow|nasal|cannula|pneumo|therm|naso|\bnp\b|mask ?pres|atem"),
@@ -24,7 +27,8 @@ _BY_NAME = (
 _BY_UNIT = (
     ("ventilation", r"l ?/ ?min|lpm|l min"),
     ("airflow", r"l ?/ ?s|ml ?/ ?s"),
-    ("acceleration", r"g|mg|m ?/ ?s(2|²|\^2)|m ?/ ?s ?/ ?s"),
+    ("acceleration", r"g|mg|mm? ?/ ?s(2|²|\^2)|m ?/ ?s ?/ ?s"),
+    ("rotation", r"(deg|degrees?|°|m?rad) ?/ ?s|m?dps"),
     ("CO2", r"mmhg|kpa|torr"),
     ("effort", r"l|ml|litre|liter"),
 )

@@ -6,60 +6,27 @@ to the mechanical-reflex loop; one that stays points to a source elsewhere, whic
 
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass
 
 import numpy as np
 
 from lagscape.errors import InvalidInputError, RecordingError
+from lagscape.recordings.envelope import runs_of
+from lagscape.recordings.kinds import TREMOR_KINDS
+from lagscape.recordings.masks import MaskedStretch
 from lagscape.recordings.recording import Recording, Signal
+from lagscape.recordings.stepwise import Steps, finished
+from lagscape.recordings.tremor_movement import movement_in
+from lagscape.recordings.tremor_peak import SEGMENT_S, PeakFound, background_of, find_peak, power_interval
+from lagscape.recordings.tremor_quality import FEW_SEGMENTS, folded_rise, quality_of
+from lagscape.recordings.tremor_result import TremorComparison, TremorMeasurement
+from lagscape.recordings.tremor_sensor import channels_of, rectified, to_degrees_per_s, to_m_per_s2
 
-__all__ = ["TremorComparison", "TremorMeasurement", "compare_tremor", "measure_tremor"]
+__all__ = ["TremorComparison", "TremorMeasurement", "compare_tremor", "measure_tremor", "tremor_steps"]
 
-STANDARD_GRAVITY = 9.80665
-_SEGMENT_S = 8.0
+BAND_HZ = (2.0, 20.0)
 _FEWEST_SEGMENTS = 4
-_FEW_SEGMENTS = 12
-_STAND_OUT = 4.0
-_SMOOTHING_HZ = 0.1
-_HANN_HALF_POWER = 1.44
-"""Half-power width of a Hann window in units of 1 / its length."""
-_TO_M_PER_S2 = {"g": STANDARD_GRAVITY, "mg": 1e-3 * STANDARD_GRAVITY, "m/s2": 1.0, "m/s²": 1.0, "m/s^2": 1.0, "m/s/s": 1.0}
-
-
-@dataclass(frozen=True, eq=False)
-class TremorMeasurement:
-    """One recording of a tremor.
-
-    `peak_frequency_hz` is None where no peak stands out. `peak_error_hz` is its standard error, `width_hz` the half-power
-    width with the analysis window's own taken out, `rms` the size between the half-power points widened to twice their distance,
-    in the signal's unit; `displacement_mm` the amplitude of the movement where the unit is an acceleration.
-    `frequency_hz` and `power` (unit^2/Hz, summed over the axes) are the spectrum for drawing, shape (n,).
-    """
-
-    signals: tuple[str, ...]
-    unit: str
-    window: tuple[float, float]
-    peak_frequency_hz: float | None
-    peak_error_hz: float | None
-    width_hz: float | None
-    rms: float | None
-    displacement_mm: float | None
-    stands_out: float
-    frequency_hz: np.ndarray
-    power: np.ndarray
-    n_segments: int
-    notes: tuple[str, ...]
-
-
-@dataclass(frozen=True)
-class TremorComparison:
-    """Unloaded against loaded: change of the peak in Hz with its 95 % interval, and what that says."""
-
-    shift_hz: float
-    low_hz: float
-    high_hz: float
-    moves: bool | None
-    sentence: str
+_SHOWN = 1.5
+"""The drawn spectrum goes this many times as high as the band."""
 
 
 def measure_tremor(
@@ -67,28 +34,46 @@ def measure_tremor(
     signal: str | Sequence[str] | None = None,
     *,
     window: tuple[float, float] | None = None,
-    band_hz: tuple[float, float] = (2.0, 20.0),
+    band_hz: tuple[float, float] = BAND_HZ,
+    kind: str | None = None,
 ) -> TremorMeasurement:
-    """Find the tremor's peak in one channel, or in the axes of one accelerometer taken together.
+    """Find the tremor's peak in one channel, or in the axes of one sensor taken together (the sum of their spectra).
 
     Parameters
     ----------
     recording : Recording
     signal : str or several, optional
-        Channel, or the axes of one sensor; by default all that look like acceleration.
+        Channel, or the axes of one sensor; by default all that look like acceleration, else like rotation, else the first EMG.
     window : (start, stop), optional
         In s; the whole recording by default.
     band_hz : (low, high)
         Where the peak is looked for, Hz.
+    kind : "acceleration", "rotation" or "EMG", optional
+        What the channel is, where its guess is wrong. Raw EMG is rectified.
 
     Raises
     ------
     RecordingError
         If there is no such channel, the axes differ in rate, the sampling cannot show the band, or there is less than 20 s.
     """
+    return finished(tremor_steps(recording, signal, window=window, band_hz=band_hz, kind=kind))
+
+
+def tremor_steps(
+    recording: Recording,
+    signal: str | Sequence[str] | None = None,
+    *,
+    window: tuple[float, float] | None = None,
+    band_hz: tuple[float, float] = BAND_HZ,
+    kind: str | None = None,
+) -> Steps[TremorMeasurement]:
+    """As `measure_tremor`, in steps; counts samples."""
     from scipy.signal import welch
 
-    channels = _channels(recording, signal)
+    channels = channels_of(recording, signal)
+    if kind is not None and kind not in TREMOR_KINDS:
+        raise InvalidInputError(f"kind must be one of {', '.join(TREMOR_KINDS)}; got {kind!r}")
+    kind = kind or channels[0].kind
     rate = channels[0].sampling_frequency_hz
     if band_hz[0] <= 0.0 or band_hz[0] >= band_hz[1]:
         raise InvalidInputError(f"band_hz must be (low, high) with 0 < low < high (Hz), got {band_hz}")
@@ -96,19 +81,34 @@ def measure_tremor(
     if top < band_hz[0] + 2.0:
         needed = 2.5 * (band_hz[0] + 2.0)
         raise RecordingError(f"'{channels[0].name}' has {rate:g} samples a second; to see a tremor it takes at least {needed:g}")
-    n = round(_SEGMENT_S * rate)
-    spectra, weights = [], []
-    frequency = np.empty(0)
-    for parts in _stretches(channels, window):
-        for at in range(0, parts.shape[1] - n + 1, n // 2):
-            piece = parts[:, at : at + n]
-            frequency, power = welch(piece, rate, nperseg=n, nfft=4 * n, detrend="linear", axis=1)
-            spectra.append(power.sum(axis=0))
-            weights.append(1.0)
-    if len(spectra) < _FEWEST_SEGMENTS:
-        raise RecordingError(f"the window holds less than {_SEGMENT_S * (_FEWEST_SEGMENTS + 1) / 2:.0f} s of unbroken signal; a spectrum needs more")
+    n = round(SEGMENT_S * rate)
     start, stop = window or (recording.segments[0].start_s, recording.segments[-1].stop_s)
-    return _judged(tuple(c.name for c in channels), channels[0].unit, (start, stop), frequency, np.array(spectra), (band_hz[0], top))
+    spectra: list[np.ndarray] = []
+    masked: list[MaskedStretch] = []
+    frequency, used, resting = np.empty(0), 0, np.zeros(len(channels))
+    for first_s, values in _stretches(channels, window):
+        moved = movement_in(values, rate) if kind in ("acceleration", "rotation") else np.zeros(values.shape[1], dtype=bool)
+        masked += [MaskedStretch(first_s + a / rate, first_s + b / rate, "movement") for a, b in runs_of(moved)]
+        for a, b in runs_of(~moved):
+            part = rectified(values[:, a:b]) if kind == "EMG" else values[:, a:b]
+            pieces = range(0, part.shape[1] - n + 1, n // 2)
+            for at in pieces:
+                frequency, power = welch(part[:, at : at + n], rate, nperseg=n, nfft=4 * n, detrend="linear", axis=1)
+                spectra.append(power.sum(axis=0))
+                yield round((first_s - start) * rate) + a + at, round((stop - start) * rate)
+            if pieces:
+                length = pieces[-1] + n
+                used += length
+                resting += part[:, :length].sum(axis=1)
+    if len(spectra) < _FEWEST_SEGMENTS:
+        least = f"{SEGMENT_S * (_FEWEST_SEGMENTS + 1) / 2:.0f} s"
+        if masked:
+            raise RecordingError(
+                f"movement was masked and leaves less than {least} of unbroken signal; a spectrum needs more. Choose a quieter window."
+            )
+        raise RecordingError(f"the window holds less than {least} of unbroken signal; a spectrum needs more")
+    resting /= used
+    return _judged(channels, kind, (start, stop), (band_hz[0], top), frequency, np.array(spectra), used / rate, tuple(masked), resting)
 
 
 def compare_tremor(unloaded: TremorMeasurement, loaded: TremorMeasurement) -> TremorComparison:
@@ -142,117 +142,77 @@ def compare_tremor(unloaded: TremorMeasurement, loaded: TremorMeasurement) -> Tr
     return TremorComparison(shift, low, high, None, told + ": too uncertain to say whether it moves by more than 1 Hz; record longer.")
 
 
-def _channels(recording: Recording, signal: str | Sequence[str] | None) -> list[Signal]:
-    if signal is None:
-        channels = list(recording.of_kind("acceleration"))
-        if not channels:
-            raise RecordingError("no channel looks like acceleration; the file has: " + ", ".join(f"'{n}'" for n in recording.channel_names))
-    else:
-        channels = [recording.signal(name) for name in ([signal] if isinstance(signal, str) else signal)]
-    if not channels:
-        raise RecordingError("no channel was named")
-    if len({(c.sampling_frequency_hz, c.n_samples) for c in channels}) > 1:
-        raise RecordingError("the axes must have one sampling rate: " + ", ".join(f"'{c.name}' {c.sampling_frequency_hz:g} Hz" for c in channels))
-    return channels
-
-
-def _stretches(channels: list[Signal], window: tuple[float, float] | None) -> list[np.ndarray]:
-    """Unbroken stretches, each of shape (n_axes, n_samples); short missing parts are filled, long ones cut out."""
+def _stretches(channels: list[Signal], window: tuple[float, float] | None) -> list[tuple[float, np.ndarray]]:
+    """Unbroken stretches, each with its start in s and its values of shape (n_axes, n_samples); what is missing is cut out."""
     start, stop = window or (None, None)
+    rate = channels[0].sampling_frequency_hz
     result = []
     for pieces in zip(*(channel.pieces(start, stop) for channel in channels), strict=True):
         values = np.array([piece[1] for piece in pieces])
-        missing = np.isnan(values).any(axis=0)
-        if not missing.any():
-            result.append(values)
-            continue
-        edges = np.flatnonzero(np.diff(np.concatenate(([True], missing, [True])).astype(np.int8)))
-        result += [values[:, a:b] for a, b in zip(edges[0::2], edges[1::2], strict=True) if b > a]
+        known = ~np.isnan(values).any(axis=0)
+        result += [(pieces[0][0] + a / rate, values[:, a:b]) for a, b in runs_of(known)]
     return result
 
 
 def _judged(
-    names: tuple[str, ...], unit: str, window: tuple[float, float], frequency: np.ndarray, spectra: np.ndarray, band: tuple[float, float]
-) -> TremorMeasurement:
+    channels: list[Signal], kind: str, window: tuple[float, float], band: tuple[float, float], frequency: np.ndarray, spectra: np.ndarray,
+    used_s: float, masked: tuple[MaskedStretch, ...], resting: np.ndarray,
+) -> TremorMeasurement:  # fmt: skip
     power = spectra.mean(axis=0)
     inside = (frequency >= band[0]) & (frequency <= band[1])
+    shown = frequency <= min(_SHOWN * band[1], 0.5 * channels[0].sampling_frequency_hz)
     f, p = frequency[inside], power[inside]
-    top = int(p.argmax())
-    background = float(np.median(p))
-    stands_out = float(p[top] / background) if background > 0.0 else (math.inf if p[top] > 0.0 else 0.0)
-    notes: list[str] = []
-    shown = frequency <= 1.5 * band[1]
-    empty = TremorMeasurement(
-        names, unit, window, None, None, None, None, None, stands_out, frequency[shown], power[shown], len(spectra),
-        ("No peak stands out of the spectrum.",),
-    )  # fmt: skip
-    if stands_out < _STAND_OUT or top in (0, p.size - 1):
-        return empty
-    peak, low, high = _peak(f, p, background)
-    blur = math.hypot(_HANN_HALF_POWER / _SEGMENT_S, 2.355 * _SMOOTHING_HZ)
-    width = math.sqrt(max((high - low) ** 2 - blur**2, 0.0))
-    reach = high - low
-    near = (frequency >= low - 0.5 * reach) & (frequency <= high + 0.5 * reach)
-    rms = math.sqrt(max(float(np.sum(power[near] - background)) * float(frequency[1]), 0.0))
-    harmonic = _harmonic_of(f, p, peak)
-    if harmonic is not None:
-        notes.append(f"There is a smaller peak at half that frequency ({harmonic:.2f} Hz): this one may be its harmonic.")
-    if len(spectra) < _FEW_SEGMENTS:
-        notes.append("The recording is short; the standard error of a broad peak is a lower bound. A minute or more is better.")
-    scale = _TO_M_PER_S2.get(unit.strip().casefold())
-    displacement = None if scale is None else 1000.0 * math.sqrt(2.0) * rms * scale / (2.0 * math.pi * peak) ** 2
-    if scale is None:
-        notes.append("The unit is no known acceleration, so no displacement is given.")
-    error = _peak_error(f, spectra[:, inside], background)
+    background = background_of(p)
+    peak = find_peak(f, spectra[:, inside], frequency[shown], power[shown])
+    unit = channels[0].unit
+    scale = to_m_per_s2(unit)
+    gravity = float(np.linalg.norm(resting)) * scale if scale is not None and len(channels) == 3 else None
+    folded = folded_rise(frequency, power, channels[0].sampling_frequency_hz)
+    quality, reasons = quality_of(peak, channels, kind, len(spectra), masked, folded, gravity)
+    highest = float(p.max()) if peak is None else float(p[int(np.abs(f - peak.frequency_hz).argmin())])
+    stands_out = highest / background if background > 0.0 else (math.inf if highest > 0.0 else 0.0)
+    rms = displacement = angle = share = None
+    if peak is not None:
+        rms, share = _size(f, p, background, peak)
+        swing = math.sqrt(2.0) * rms / (2.0 * math.pi * peak.frequency_hz)
+        if kind not in ("rotation", "EMG") and scale is not None:
+            displacement = 1000.0 * swing * scale / (2.0 * math.pi * peak.frequency_hz)
+        turn = to_degrees_per_s(unit)
+        if kind == "rotation" and turn is not None:
+            angle = swing * turn
+    low, high = power_interval(power[shown], len(spectra))
     return TremorMeasurement(
-        names, unit, window, peak, error, width, rms, displacement, stands_out, frequency[shown], power[shown], len(spectra), tuple(notes)
+        signals=tuple(channel.name for channel in channels), unit=unit, kind=kind, sampling_frequency_hz=channels[0].sampling_frequency_hz,
+        window=window, band_hz=band, peak_frequency_hz=None if peak is None else peak.frequency_hz,
+        peak_error_hz=None if peak is None else peak.error_hz, width_hz=None if peak is None else peak.width_hz,
+        half_power_hz=None if peak is None else peak.half_power_hz, rms=rms, displacement_mm=displacement, angle_deg=angle, peak_share=share,
+        stands_out=stands_out, harmonics_hz=() if peak is None else peak.harmonics_hz,
+        other_peaks_hz=() if peak is None else peak.other_peaks_hz, frequency_hz=frequency[shown], power=power[shown], power_low=low,
+        power_high=high, n_segments=len(spectra), used_s=used_s, masked=masked, quality=quality, quality_reasons=reasons,
+        notes=_notes(peak, kind, scale, len(spectra)),
     )  # fmt: skip
 
 
-def _peak(f: np.ndarray, p: np.ndarray, background: float) -> tuple[float, float, float]:
-    """Peak and half-power points, Hz: centre of gravity of what rises over half of the smoothed spectrum's height.
-
-    The highest bin itself jumps about within a broad peak; its neighbourhood does not.
-    """
-    from scipy.ndimage import gaussian_filter1d
-
-    smooth = gaussian_filter1d(p, _SMOOTHING_HZ / (f[1] - f[0]), mode="nearest")
-    top = int(smooth.argmax())
-    low, high = _half_power(f, smooth, top, background)
-    level = background + 0.5 * (smooth[top] - background)
-    weight = np.where((f >= low) & (f <= high), np.maximum(smooth - level, 0.0), 0.0)
-    total = float(weight.sum())
-    return (float((f * weight).sum()) / total if total > 0.0 else float(f[top])), low, high
+def _size(f: np.ndarray, p: np.ndarray, background: float, peak: PeakFound) -> tuple[float, float]:
+    """Size of what rises over the background about the peak, and its share of all power in the band."""
+    low, high = peak.half_power_hz
+    reach = high - low
+    near = (f >= low - 0.5 * reach) & (f <= high + 0.5 * reach)
+    power = max(float(np.sum(p[near] - background)), 0.0)
+    step = float(f[1] - f[0])
+    return math.sqrt(power * step), min(power / float(np.sum(p)), 1.0)
 
 
-def _half_power(f: np.ndarray, p: np.ndarray, top: int, background: float) -> tuple[float, float]:
-    level = background + 0.5 * (p[top] - background)
-    low, high = top, top
-    while low > 0 and p[low] > level:
-        low -= 1
-    while high < p.size - 1 and p[high] > level:
-        high += 1
-
-    def between(i: int, j: int) -> float:
-        return float(f[i] + (f[j] - f[i]) * (level - p[i]) / (p[j] - p[i])) if p[j] != p[i] else float(f[i])
-
-    return between(low, low + 1), between(high, high - 1)
-
-
-def _harmonic_of(f: np.ndarray, p: np.ndarray, peak: float) -> float | None:
-    near = np.abs(f - 0.5 * peak) < 0.4
-    if not near.any():
-        return None
-    i = int(np.flatnonzero(near)[p[near].argmax()])
-    inside = 0 < i < p.size - 1 and p[i] > p[i - 1] and p[i] > p[i + 1]
-    return float(f[i]) if inside and p[i] > 6.0 * np.median(p) else None
-
-
-def _peak_error(f: np.ndarray, spectra: np.ndarray, background: float) -> float:
-    """Standard error of the peak, by leaving out one tenth of the recording at a time (jackknife).
-
-    Neighbouring spectra share half of their samples, so blocks are left out, not single spectra.
-    """
-    blocks = np.array_split(np.arange(len(spectra)), min(10, len(spectra)))
-    peaks = np.array([_peak(f, np.delete(spectra, block, axis=0).mean(axis=0), background)[0] for block in blocks])
-    return float(math.sqrt((peaks.size - 1) / peaks.size * np.sum((peaks - peaks.mean()) ** 2)))
+def _notes(peak: PeakFound | None, kind: str, scale: float | None, n_segments: int) -> tuple[str, ...]:
+    if peak is None:
+        return ("No peak stands out of the spectrum.",)
+    notes = []
+    if peak.half_frequency_hz is not None:
+        notes.append(f"There is a smaller peak at half that frequency ({peak.half_frequency_hz:.2f} Hz): this one may be its harmonic.")
+    if peak.other_peaks_hz:
+        notes.append("Another peak stands out at " + ", ".join(f"{at:.2f}" for at in peak.other_peaks_hz) + " Hz.")
+    if n_segments < FEW_SEGMENTS:
+        notes.append("The recording is short; the standard error of a broad peak is a lower bound. A minute or more is better.")
+    if kind not in ("rotation", "EMG") and scale is None:
+        notes.append("The unit is no known acceleration, so no displacement is given.")
+    return tuple(notes)
