@@ -26,8 +26,8 @@ _PROBE = """() => {
     }));
     const { link } = window.lagscape.page;
     const done = link.done.bind(link);
-    link.done = (serial, milliseconds) => {
-        done(serial, milliseconds);
+    link.done = (serial, milliseconds, ...patch) => {
+        done(serial, milliseconds, ...patch);
         if (probe.waiting && link.underWay === null) {
             const settle = probe.waiting;
             probe.waiting = null;

@@ -43,10 +43,14 @@ function plainValue(key, value) {
 }
 
 export class DocumentLink {
-  /** post: sends a message to the worker. onBusy: told true when a message is sent, false when nothing is under way any more. */
-  constructor(post, onBusy = () => {}) {
+  /**
+   * post: sends a message to the worker. onBusy: told true when a message is sent, false when nothing is under way any more.
+   * onLaid: called when a patch of the worker has been laid on the document.
+   */
+  constructor(post, onBusy = () => {}, onLaid = () => {}) {
     this.post = post;
     this.onBusy = onBusy;
+    this.onLaid = onLaid;
     this.queue = new NewestWinsQueue();
     this.document = null;
     this.serial = 0;
@@ -54,6 +58,7 @@ export class DocumentLink {
     this.applying = 0;
     this.ready = false;
     this.lastMilliseconds = 0;
+    this.sendingSoon = false;
   }
 
   /** Changes of this Bokeh document go to the worker from now on. */
@@ -72,9 +77,15 @@ export class DocumentLink {
     this.add(commandItem(name, payload, file));
   }
 
+  /** What one event of the hand sets off, a moved dot and the event itself, goes in one message: it is sent when the event is over. */
   add(item) {
     this.queue.add(item);
-    this.sendNext();
+    if (this.sendingSoon) return;
+    this.sendingSoon = true;
+    queueMicrotask(() => {
+      this.sendingSoon = false;
+      this.sendNext();
+    });
   }
 
   /** A patch from the worker: laid on the page's document without being sent back. */
@@ -85,15 +96,19 @@ export class DocumentLink {
     } finally {
       this.applying -= 1;
     }
+    this.onLaid();
   }
 
-  /** The worker has worked through a message: the next may go. */
-  done(serial, milliseconds) {
-    if (serial !== this.underWay) return;
-    this.underWay = null;
-    this.lastMilliseconds = milliseconds;
-    this.sendNext();
-    if (this.underWay === null) this.onBusy(false);
+  /** The worker has worked through a message: the next goes first, so that the worker calculates while the page draws the answer. */
+  done(serial, milliseconds, patch = null, buffers = null) {
+    const expected = serial === this.underWay;
+    if (expected) {
+      this.underWay = null;
+      this.lastMilliseconds = milliseconds;
+      this.sendNext();
+    }
+    if (patch !== null) this.apply(patch, buffers);
+    if (expected && this.underWay === null) this.onBusy(false);
   }
 
   sendNext() {

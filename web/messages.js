@@ -16,7 +16,7 @@ export const TO_PAGE = {
   document: { json: "string", roots: "string" }, // the Bokeh document and which root goes in which slot, JSON texts
   patch: { patch: "string", buffers: "map" }, // a Bokeh patch, JSON text with binary parts beside it
   root: { id: "string", slot: "string" }, // the root of that id, about to arrive in a patch, goes in this slot
-  done: { serial: "number", milliseconds: "number" }, // a change or command was worked through
+  done: { serial: "number", milliseconds: "number", patch: "string?", buffers: "map?" }, // a change or command was worked through; its last patch
   call: { name: "string", payload: "object" }, // the application asks the page for something
   trouble: { sentence: "string", support: "string" }, // an unexpected error; the application still runs
   failed: { sentence: "string", support: "string" }, // Python cannot start or has stopped

@@ -3,7 +3,8 @@ import { TO_PAGE, TO_WORKER, checked, message } from "./messages.js";
 import { DocumentLink } from "./link.js";
 import { PageState } from "./page_state.js";
 import { answerCall } from "./calls.js";
-import { loadScripts, quickenDrawing } from "./scripts.js";
+import { paintWaiting, quickenDrawing } from "./drawing.js";
+import { loadScripts } from "./scripts.js";
 import { startInput } from "./input.js";
 import { startOffline } from "./offline.js";
 import { site } from "./site.js";
@@ -58,7 +59,7 @@ const handlers = {
     element.replaceChildren();
     page.roots.push(element);
   },
-  done: (msg) => page.link.done(msg.serial, msg.milliseconds),
+  done: (msg) => page.link.done(msg.serial, msg.milliseconds, msg.patch, msg.buffers),
   call: (msg) => answerCall(page, msg.name, msg.payload),
   trouble: (msg) => state.trouble(msg.sentence, msg.support),
   failed: (msg) => fail(msg.sentence, msg.support),
@@ -74,7 +75,7 @@ function fail(sentence, support) {
 function boot(link, again = false) {
   state.booting();
   page.worker?.terminate();
-  page.link = new DocumentLink(post, (busy) => state.busy(busy));
+  page.link = new DocumentLink(post, (busy) => state.busy(busy), paintSoon);
   const worker = makeWorker();
   page.worker = worker;
   worker.onmessage = (event) => {
@@ -91,6 +92,11 @@ function boot(link, again = false) {
   post(message(TO_WORKER, "boot", { address, link, theme: theme(), touch }));
   if (again) page.link.command("restarted");
 }
+
+// In a task of its own: what Bokeh does with new data goes on for some steps after the patch.
+const { port1: whenLaid, port2: laid } = new MessageChannel();
+whenLaid.onmessage = paintWaiting;
+const paintSoon = () => laid.postMessage(null);
 
 const linkInAddress = () => location.hash.slice(1);
 const restart = () => {

@@ -116,14 +116,16 @@ export class PageState {
 
   standing(text, standing) {
     const place = this.byId("standing");
-    place.dataset.standing = standing;
     this.byId("standing-text").textContent = text;
-    const mark = this.byId("standing-mark");
-    mark.replaceChildren();
-    if (MARKS[standing]) {
-      const path = this.root.createElementNS("http://www.w3.org/2000/svg", "path");
-      path.setAttribute("d", MARKS[standing]);
-      mark.append(path);
+    if (place.dataset.standing !== standing) {
+      place.dataset.standing = standing;
+      const mark = this.byId("standing-mark");
+      mark.replaceChildren();
+      if (MARKS[standing]) {
+        const path = this.root.createElementNS("http://www.w3.org/2000/svg", "path");
+        path.setAttribute("d", MARKS[standing]);
+        mark.append(path);
+      }
     }
     // A screen reader hears the sentence when the hand has stopped, not each one on the way.
     clearTimeout(this.liveTimer);

@@ -18,12 +18,3 @@ export function loadScripts(addresses) {
   loaded.catch(() => {}); // reported where it is waited for
   return loaded;
 }
-
-/**
- * Spares Bokeh a look at the page's styles for every colour and font of every figure in every frame: it asks for custom properties
- * "--bk-...", which no style sheet here sets, and each question makes the browser work out its styles anew. A third of a drag's time.
- */
-export function quickenDrawing(Bokeh) {
-  const visual = Bokeh.require("core/visuals/visual");
-  if (visual?.VisualProperties?.prototype._get_css_value) visual.VisualProperties.prototype._get_css_value = () => "";
-}

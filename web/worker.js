@@ -14,9 +14,30 @@ let pyodide = null;
 let application = null;
 let scipyLoading = null;
 let scipyFetched = 0; // which share of it has arrived
+let working = false;
+let lastPatch = null;
+let lastStanding = null;
 
 function post(kind, fields, transfer = []) {
+  sendLastPatch();
   self.postMessage(message(TO_PAGE, kind, fields), transfer);
+}
+
+/** The last patch of a message goes with the word that it is done, one message instead of two; an earlier one goes before what follows it. */
+function sendLastPatch() {
+  if (lastPatch === null) return;
+  const { patch, buffers } = lastPatch;
+  lastPatch = null;
+  self.postMessage(message(TO_PAGE, "patch", { patch, buffers }), [...buffers.values()]);
+}
+
+function postDone(serial, milliseconds) {
+  const { patch, buffers } = lastPatch ?? { patch: null, buffers: null };
+  lastPatch = null;
+  // The word and the picture it belongs to leave together, so that one frame shows both.
+  if (lastStanding !== null) post("call", { name: "standing", payload: lastStanding });
+  lastStanding = null;
+  self.postMessage(message(TO_PAGE, "done", { serial, milliseconds, patch, buffers }), buffers ? [...buffers.values()] : []);
 }
 
 /** The last line of a Python traceback is the sentence; the rest helps support. */
@@ -37,12 +58,17 @@ async function stage(name, work) {
 const host = {
   call(name, payloadJson, data) {
     const payload = JSON.parse(payloadJson);
+    if (working && name === "standing") {
+      lastStanding = payload;
+      return;
+    }
     if (data) payload.data = data;
     post("call", { name, payload }, data ? [data.buffer] : []);
   },
   patch(patch, names, parts) {
-    const buffers = new Map(names.map((name, i) => [name, parts[i]]));
-    post("patch", { patch, buffers }, parts);
+    sendLastPatch();
+    lastPatch = { patch, buffers: new Map(names.map((name, i) => [name, parts[i]])) };
+    if (!working) sendLastPatch();
   },
   root(id, slot) {
     post("root", { id, slot });
@@ -115,6 +141,7 @@ async function boot({ address, link, theme, touch }) {
 
 function handle(msg) {
   const begun = performance.now();
+  working = msg.serial !== undefined;
   try {
     if (msg.kind === "drawn") application.drawn();
     else if (msg.kind === "change") application.change(msg.patch);
@@ -123,8 +150,10 @@ function handle(msg) {
     // Python code reports its own errors; what arrives here has broken the runtime itself.
     post("failed", { ...describe(error), sentence: "The calculation stopped and cannot go on." });
     return;
+  } finally {
+    working = false;
   }
-  if (msg.serial !== undefined) post("done", { serial: msg.serial, milliseconds: performance.now() - begun });
+  if (msg.serial !== undefined) postDone(msg.serial, performance.now() - begun);
 }
 
 self.onmessage = (event) => {

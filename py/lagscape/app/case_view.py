@@ -38,9 +38,13 @@ class CaseView:
         self.draw()
 
     def follow(self) -> None:
-        """While the hand moves the numbers follow a few times a second: the dot and the traces go first."""
-        if monotonic() - self._drawn_at > _FOLLOW_EVERY_S:
-            self.draw()
+        """While the hand moves the numbers that move follow a few times a second: the dot and the traces go first."""
+        if monotonic() - self._drawn_at < _FOLLOW_EVERY_S:
+            return
+        self._drawn_at = monotonic()
+        now, before, items = self.bench.case, self.bench.history.present, self.bench.case.specifications
+        moved = [name for name in items if name in self.root.adjusted or now.value(name) != before.value(name)]
+        self.root.adjust({name: {"number": self._text(now, items[name]), "slide": str(_position(items[name], now.value(name)))} for name in moved})
 
     def draw(self) -> None:
         case = self.bench.case
@@ -93,7 +97,7 @@ class CaseView:
         open_ = self.opened == item.name
         refusal = self._refusal(item.name)
         label, name = escape(item.label), item.name
-        text = figure(shown).replace("−", "-")
+        text = self._text(case, item)
         invalid = ' aria-invalid="true"' if refusal else ""
         more = self._more(case, item) if open_ else ""
         return (
@@ -107,6 +111,10 @@ class CaseView:
             f'<button class="disc" data-act="basis" data-key="{name}" title="{number.basis}: press to change"'
             f' aria-label="Basis of {label}: {number.basis}">{_DISCS[number.basis]}</button>{refusal}</div>{more}'
         )
+
+    def _text(self, case: Case, item: ParameterSpecification) -> str:
+        """What stands in the number's box."""
+        return figure(to_display(case.value(item.name), item.unit, self.bench.units)[0]).replace("−", "-")
 
     def _more(self, case: Case, item: ParameterSpecification) -> str:
         units = self.bench.units

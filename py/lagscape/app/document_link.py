@@ -7,10 +7,12 @@ import json
 from collections.abc import Callable
 from typing import Any
 
-from bokeh.core.serialization import Buffer, Serializer
+from bokeh.core.serialization import Buffer, Ref, Serializer
 from bokeh.document import Document
 from bokeh.document.events import DocumentPatchedEvent
 from bokeh.document.json import PatchJson
+from bokeh.document.models import DocumentModelManager
+from bokeh.model import Model
 
 __all__ = ["DocumentLink"]
 
@@ -69,7 +71,7 @@ class DocumentLink:
         if not events:
             return
         models = self._document.models
-        serializer = Serializer(references=models.synced_references)
+        serializer = _PatchSerializer(models)
         patch = PatchJson(events=serializer.encode(events))
         models.flush_synced(lambda model: not serializer.has_ref(model))
         parts = {buffer.id: buffer.to_bytes() for buffer in serializer.buffers}
@@ -84,6 +86,22 @@ class DocumentLink:
         if not self._inside and not self._scheduled:
             self._scheduled = True
             asyncio.get_running_loop().call_soon(self.flush)
+
+
+class _PatchSerializer(Serializer):
+    """Asks of a model whether the page has it already when it meets one; Bokeh's own lists all models of the document for every patch."""
+
+    def __init__(self, models: DocumentModelManager) -> None:
+        super().__init__()
+        self._models = models
+
+    def get_ref(self, obj: Any) -> Ref | None:
+        if isinstance(obj, Model) and obj.id in self._models and obj not in self._models._new_models:
+            return obj.ref
+        return super().get_ref(obj)
+
+    def has_ref(self, obj: Any) -> bool:
+        return self.get_ref(obj) is not None
 
 
 def _reference(value: Any) -> Any:

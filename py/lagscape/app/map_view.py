@@ -25,11 +25,17 @@ __all__ = ["MapView"]
 _FOLLOW_POINTER = """
 const {start, end} = x, across = Math.min(end, Math.max(start, cb_obj.x))
 const up = Math.min(y.end, Math.max(y.start, cb_obj.y))
-dot.data = {delay: [across], sensitivity: [up]}
+dot.setv({data: {delay: [across], sensitivity: [up]}}, {sync: false})
 """
-"""Runs in the page, so that the dot is under the pointer before Python has answered."""
+"""Runs in the page, so that the dot is under the pointer before Python has answered; the event itself tells Python where it is."""
 
 _STEP = {"fine": 0.01, "coarse": 0.10}
+
+_UNDER_HAND = "overlay"
+"""Level of what follows the hand: a canvas of its own, so that boundary, contours and axes need not be painted anew."""
+
+_REACH = ("from_delay", "from_sensitivity", "to_delay", "to_sensitivity", "words_delay", "words_sensitivity", "words", "align", "right", "down")
+"""Columns of the arrows to the boundary: both ends, where the words stand, their alignment and their distance from there in px."""
 
 
 class MapView:
@@ -47,6 +53,7 @@ class MapView:
         self.contours = ColumnDataSource({"delay": [], "sensitivity": []})
         self.contour_texts = ColumnDataSource({"delay": [], "sensitivity": [], "text": []})
         self.dot, self.hollow, self.diamond = (ColumnDataSource(dict(one)) for _ in range(3))
+        self.reach = ColumnDataSource({name: [] for name in _REACH})
         plot = self.plot
         self.outside = plot.varea("delay", "critical", "top", source=self.edge, fill_alpha=0.10, hatch_pattern="/", hatch_scale=16, hatch_weight=0.8)
         self.inside = plot.varea("delay", 0, "critical", source=self.edge, fill_alpha=0.06)
@@ -57,18 +64,22 @@ class MapView:
         )  # fmt: skip
         self.edge_line = plot.line("delay", "critical", source=self.edge, line_width=2.6)
         text = {"text_font": FONT, "text_font_size": "12px"}
-        self.across = Arrow(end=NormalHead(size=7), x_start=0, x_end=0, y_start=0, y_end=0, visible=False)
-        self.upward = Arrow(end=NormalHead(size=7), x_start=0, x_end=0, y_start=0, y_end=0, visible=False)
-        self.lever = Arrow(end=NormalHead(size=9), x_start=0, x_end=0, y_start=0, y_end=0, visible=False)
-        self.across_words = Label(x=0, y=0, text="", text_align="center", y_offset=5, **text)
-        self.upward_words = Label(x=0, y=0, text="", text_align="left", x_offset=7, text_baseline="middle", **text)
+        self.arrows = Arrow(
+            end=NormalHead(size=7), x_start="from_delay", y_start="from_sensitivity", x_end="to_delay", y_end="to_sensitivity",
+            source=self.reach, level=_UNDER_HAND,
+        )  # fmt: skip
+        self.lever = Arrow(end=NormalHead(size=9), x_start=0, x_end=0, y_start=0, y_end=0, visible=False, level=_UNDER_HAND)
         self.hunts_words = Label(x=0, y=0, text="hunts", text_align="right", text_baseline="top", x_offset=-8, y_offset=-6, **text)
         self.quiet_words = Label(x=0, y=0, text="settles or rings", text_align="left", x_offset=8, y_offset=6, **text)
-        for item in (self.across, self.upward, self.lever, self.across_words, self.upward_words, self.hunts_words, self.quiet_words):
+        for item in (self.arrows, self.lever, self.hunts_words, self.quiet_words):
             plot.add_layout(item)
         self.hollow_mark = plot.scatter("delay", "sensitivity", source=self.hollow, size=13, fill_alpha=0.0, line_width=2)
         self.diamond_mark = plot.scatter("delay", "sensitivity", source=self.diamond, size=16, marker="diamond")
-        self.dot_mark = plot.scatter("delay", "sensitivity", source=self.dot, size=17, line_width=2)
+        self.dot_mark = plot.scatter("delay", "sensitivity", source=self.dot, size=17, line_width=2, level=_UNDER_HAND)
+        self.reach_words = plot.text(
+            "words_delay", "words_sensitivity", "words", source=self.reach, text_align="align", x_offset="right", y_offset="down",
+            text_baseline="middle", text_font=value(FONT), text_font_size="12px", background_fill_alpha=0.8, level=_UNDER_HAND,
+        )  # fmt: skip
         for event in (PanStart, Pan):
             plot.js_on_event(event, CustomJS(args={"dot": self.dot, "x": self.delay, "y": self.sensitivity}, code=_FOLLOW_POINTER))
             plot.on_event(event, self._dragged)
@@ -105,13 +116,11 @@ class MapView:
         self.edge_line.glyph.line_color = palette.ink
         self.contour_lines.glyph.line_color = palette.quiet
         self.contour_words.glyph.text_color = palette.quiet
-        for arrow in (self.across, self.upward, self.lever):
+        for arrow in (self.arrows, self.lever):
             arrow.line_color = palette.ink
             arrow.end.fill_color = arrow.end.line_color = palette.ink
-        for label in (self.across_words, self.upward_words):
-            label.text_color = palette.ink
-            label.background_fill_color = palette.paper
-            label.background_fill_alpha = 0.8
+        self.reach_words.glyph.text_color = palette.ink
+        self.reach_words.glyph.background_fill_color = palette.paper
         self.hunts_words.text_color = palette.outside
         self.quiet_words.text_color = palette.inside
         self.hollow_mark.glyph.line_color = palette.ink
@@ -149,32 +158,24 @@ class MapView:
         """Redraw what follows the hand: the dot and its two arrows."""
         judged = self.bench.judged.judgement
         delay, sensitivity = float(judged.loop.delay), float(judged.loop.sensitivity)
+        if settled:
+            # Where the page moved the dot is not known here: it is put in its place even if nothing changed on this side.
+            self.dot.data = {"delay": [], "sensitivity": []}
         if settled or self._pressing or not self._held:
             self.dot.data = {"delay": [delay], "sensitivity": [sensitivity]}
-        found = judged.margins
-        gain, lag = found.gain_margin, found.delay_margin_s
-        top = None if gain is None else sensitivity * gain
-        self._arrow(
-            self.upward, self.upward_words, (delay, sensitivity), None if top is None else (delay, top),
-            "" if gain is None else _share_words(gain - 1.0),
-        )  # fmt: skip
-        self._arrow(
-            self.across, self.across_words, (delay, sensitivity), None if lag is None else (delay + lag, sensitivity),
-            "" if lag is None else _delay_words(lag),
-        )  # fmt: skip
-
-    def _arrow(self, arrow: Arrow, label: Label, start: Any, end: Any, words: str) -> None:
-        if end is None:
-            arrow.visible = label.visible = False
-            return
-        x = min(max(end[0], self.delay.start), self.delay.end)
-        y = min(max(end[1], self.sensitivity.start), self.sensitivity.end)
-        arrow.update(x_start=start[0], y_start=start[1], x_end=x, y_end=y, visible=True)
-        across = self.delay.end - self.delay.start
-        middle = 0.5 * (start[0] + x)
-        if label is self.across_words:
-            middle = min(max(middle, self.delay.start + 0.13 * across), self.delay.end - 0.13 * across)
-        label.update(x=middle, y=0.5 * (start[1] + y), text=words, visible=True)
+        found, rows = judged.margins, []
+        rises = found.gain_margin is not None and found.gain_margin > 1.0
+        if found.gain_margin is not None:
+            top = _between(sensitivity * found.gain_margin, self.sensitivity)
+            rows.append((delay, sensitivity, delay, top, delay, 0.5 * (sensitivity + top), _share_words(found.gain_margin - 1.0), "left", 7, 0))
+        if found.delay_margin_s is not None:
+            end = _between(delay + found.delay_margin_s, self.delay)
+            middle = _between(0.5 * (delay + end), self.delay, 0.13)
+            # On the other side of the line than the upright arrow, so that the two never write over each other.
+            side = 13 if rises else -13
+            rows.append((delay, sensitivity, end, sensitivity, middle, sensitivity, _delay_words(found.delay_margin_s), "center", 0, side))
+        # One source for both arrows and their words: one change to send, however much of it moved.
+        self.reach.data = {name: [row[place] for row in rows] for place, name in enumerate(_REACH)}
 
     def _draw_boundary(self, drawn: BoundaryMap) -> None:
         window = drawn.window
@@ -273,6 +274,12 @@ class MapView:
         sensitivity = float(loop.sensitivity) * up if payload["up"] else None
         delay = float(loop.delay) * across if payload["right"] else None
         self.bench.attempt("map", lambda: case.moved_to(sensitivity=sensitivity, delay=delay))
+
+
+def _between(number: float, window: Range1d, inset: float = 0.0) -> float:
+    """The number, kept inside the window less a share of it on both sides."""
+    kept = inset * (window.end - window.start)
+    return float(min(max(number, window.start + kept), window.end - kept))
 
 
 def _share_words(change: float) -> str:

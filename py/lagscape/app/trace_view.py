@@ -31,6 +31,12 @@ SHOW_ALL = "time.setv({start: time.reset_start, end: time.reset_end})"
 _POINTS, _MOVING_POINTS = 1201, 601
 """Points of a trace at rest, for zooming, and under the hand, about one a pixel."""
 
+_UNDER_HAND = "overlay"
+"""Level of what follows the hand: a canvas of its own, so that axes and the lines behind need not be painted anew."""
+
+_ROOM = 0.25
+"""What an axis that must grow under the hand takes beyond what is drawn, as a share of it."""
+
 _MOST_SILENCE_LABELS = 14
 """Past this many apnoeas in the run their seconds would overlap."""
 
@@ -52,26 +58,35 @@ class _Strip:
         self.lines = {
             "before": self.plot.line("time", "value", source=self.sources["before"], line_width=1.3),
             "after": self.plot.line("time", "value", source=self.sources["after"], line_width=1.8, line_dash=[7, 3]),
-            "now": self.plot.line("time", "value", source=self.sources["now"], line_width=1.8),
+            "now": self.plot.line("time", "value", source=self.sources["now"], line_width=1.8, level=_UNDER_HAND),
         }
-        self.mark = Span(dimension="height", line_dash="dotted", line_width=1)
+        self.mark = Span(dimension="height", line_dash="dotted", line_width=1, level=_UNDER_HAND)
         self.plot.add_layout(self.mark)
         self.plot.xaxis.visible = last
         self.plot.yaxis.ticker.desired_num_ticks = 4
 
     def show(self, name: str, times: Any, values: Any) -> None:
-        self.sources[name].data = {"time": times, "value": values}
+        source = self.sources[name]
+        if np.array_equal(source.data["time"], times):
+            source.data["value"] = values  # sent without the times
+        else:
+            source.data = {"time": times, "value": values}
 
-    def fit(self, grow_only: bool, floor: float | None) -> None:
-        """Set the value axis round what is drawn; while the hand moves it only grows."""
+    def fit(self, grow_only: bool, floor: float | None) -> bool:
+        """Set the value axis round what is drawn; while the hand moves it only grows. True where it changed."""
         drawn = [np.asarray(source.data["value"]) for source in self.sources.values() if len(source.data["value"])]
         low, high = min(float(values.min()) for values in drawn), max(float(values.max()) for values in drawn)
         margin = 0.08 * max(high - low, 1e-9, 0.01 * abs(high))
         low, high = (low - margin if floor is None else floor), high + 2.0 * margin
         if grow_only:
-            low, high = min(low, self.range.start), max(high, self.range.end)
-        if (low, high) != (self.range.start, self.range.end):
-            self.range.update(start=low, end=high, reset_start=low, reset_end=high)
+            # A new axis is painted whole: it grows in few large steps rather than with every move.
+            room = _ROOM * (high - low)
+            low = self.range.start if low >= self.range.start else low - room if floor is None else floor
+            high = self.range.end if high <= self.range.end else high + room
+        if (low, high) == (self.range.start, self.range.end):
+            return False
+        self.range.update(start=low, end=high, reset_start=low, reset_end=high)
+        return True
 
 
 class TraceView:
@@ -84,17 +99,18 @@ class TraceView:
         upper, lower = self.strips
         lower.plot.xaxis.axis_label = "Time (s)"
         self.silences = ColumnDataSource({"start": [], "end": [], "middle": [], "text": []})
-        self.silence_bars = upper.plot.segment("start", 0, "end", 0, source=self.silences, line_width=8)
+        self.silence_bars = upper.plot.segment("start", 0, "end", 0, source=self.silences, line_width=8, level=_UNDER_HAND)
         self.silence_texts = upper.plot.text(
             "middle", 0, "text", source=self.silences, text_align="center", text_baseline="bottom", y_offset=-6, text_font=value(FONT),
-            text_font_size="12px", background_fill_alpha=0.85,
+            text_font_size="12px", background_fill_alpha=0.85, level=_UNDER_HAND,
         )  # fmt: skip
-        self.bracket = ColumnDataSource({"x": [], "y": []})
-        self.bracket_line = upper.plot.line("x", "y", source=self.bracket, line_width=1.2)
-        label = {"text_font": FONT, "text_font_size": "12px"}
-        self.bracket_label = Label(x=0, y=0, text="", text_align="center", y_offset=2, **label)
-        self.mark_label = Label(x=0, y=0, text="", x_offset=4, y_offset=-16, **label)
-        upper.plot.add_layout(self.bracket_label)
+        self.bracket = ColumnDataSource({"x": [], "y": [], "middle": [], "top": [], "text": []})
+        self.bracket_line = upper.plot.multi_line("x", "y", source=self.bracket, line_width=1.2, level=_UNDER_HAND)
+        self.bracket_text = upper.plot.text(
+            "middle", "top", "text", source=self.bracket, text_align="center", text_baseline="bottom", y_offset=-2, text_font=value(FONT),
+            text_font_size="12px", level=_UNDER_HAND,
+        )  # fmt: skip
+        self.mark_label = Label(x=0, y=0, text="", x_offset=4, y_offset=-16, text_font=FONT, text_font_size="12px", level=_UNDER_HAND)
         upper.plot.add_layout(self.mark_label)
         self.bar = Sheet(self._handle)
         panes = [pn.pane.Bokeh(strip.plot, sizing_mode="stretch_both", min_height=110) for strip in self.strips]
@@ -121,7 +137,7 @@ class TraceView:
         self.silence_texts.glyph.text_color = palette.outside
         self.silence_texts.glyph.background_fill_color = palette.paper
         self.bracket_line.glyph.line_color = palette.quiet
-        self.bracket_label.text_color = palette.ink
+        self.bracket_text.glyph.text_color = palette.ink
         self.mark_label.text_color = palette.quiet
 
     def follow(self) -> None:
@@ -157,15 +173,16 @@ class TraceView:
             unit = signal.unit
             factor, shown_unit = to_display(1.0, unit, self.bench.units)
             strip.show(name, response.times, values * factor)
-            title = f"{signal.label} ({shown_unit})" if shown_unit else signal.label
-            if strip.plot.yaxis.axis_label != title:
+            if not grow_only:
+                title = f"{signal.label} ({shown_unit})" if shown_unit else signal.label
                 strip.plot.yaxis.axis_label = title
         if name == "now":
-            for number, strip in enumerate(self.strips):
-                strip.fit(grow_only, 0.0 if number == 0 and case.kind != "reflex" else None)
+            floors = (None if case.kind == "reflex" else 0.0, None)
+            grown = [strip.fit(grow_only, floor) for strip, floor in zip(self.strips, floors, strict=True)]
             self._mark_silences(response)
             self._mark_cycle(response, judged.linear_cycle_length if grow_only else judged.cycle_length)
-            self._mark_disturbance(case, response)
+            if any(grown) or not grow_only:
+                self._mark_disturbance(case, response)
 
     def _mark_silences(self, response: Response) -> None:
         silences = response.trace.silences
@@ -183,15 +200,19 @@ class TraceView:
         pair = cycle_bracket(response, length)
         top = self.strips[0].range.end
         if pair is None:
-            self.bracket.data = {"x": [], "y": []}
-            self.bracket_label.text = ""
+            self.bracket.data = {name: [] for name in self.bracket.data}
             return
         bottom = self.strips[0].range.start
         level, foot = bottom + 0.90 * (top - bottom), bottom + 0.86 * (top - bottom)
-        self.bracket.data = {"x": [pair[0], pair[0], pair[1], pair[1]], "y": [foot, level, level, foot]}
         seconds = pair[1] - pair[0]
         words = f"{seconds:.0f} s" if seconds >= 10.0 else f"{figures(seconds, 2)} s" if seconds >= 1.0 else f"{1000.0 * seconds:.0f} ms"
-        self.bracket_label.update(x=0.5 * (pair[0] + pair[1]), y=level, text=words)
+        self.bracket.data = {
+            "x": [[pair[0], pair[0], pair[1], pair[1]]],
+            "y": [[foot, level, level, foot]],
+            "middle": [0.5 * (pair[0] + pair[1])],
+            "top": [level],
+            "text": [words],
+        }
 
     def _mark_disturbance(self, case: Case, response: Response) -> None:
         words = ""

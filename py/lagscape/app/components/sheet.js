@@ -62,6 +62,16 @@ state.apply = () => {
   morphChildren(root, next, state.typing ? focused : null)
 }
 
+state.adjust = () => {
+  const focused = state.typing ? root.getRootNode().activeElement : null
+  for (const [key, values] of Object.entries(data.adjusted)) {
+    for (const [act, value] of Object.entries(values)) {
+      const control = root.querySelector(`[data-key="${CSS.escape(key)}"][data-act="${CSS.escape(act)}"]`)
+      if (control && control !== focused && control.value !== value) control.value = value
+    }
+  }
+}
+
 const acting = (event) => event.target.closest?.("[data-act]")
 
 root.addEventListener("input", (event) => {

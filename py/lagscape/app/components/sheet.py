@@ -36,11 +36,13 @@ class Sheet(ReactiveHTML):
 
     content = param.Dict(default={"html": ""})
     """The HTML, wrapped: Panel strips the tags of a plain string parameter."""
+    adjusted = param.Dict(default={})
+    """Values of single controls, by their key: laid over the HTML while a hand moves, until the next HTML."""
     live = param.Dict(default={})
     requests = param.List(default=[])
 
     _template: ClassVar[str] = '<div id="root" class="sheet"></div>'
-    _scripts: ClassVar[dict[str, Any]] = {"render": _asset("sheet.js"), "content": "state.apply()"}
+    _scripts: ClassVar[dict[str, Any]] = {"render": _asset("sheet.js"), "content": "state.apply()", "adjusted": "state.adjust()"}
     _stylesheets: ClassVar[list[str]] = [_asset("sheet.css")]
 
     def __init__(self, handle: Callable[[Request], None] | None = None, **params: Any) -> None:
@@ -52,8 +54,17 @@ class Sheet(ReactiveHTML):
 
     def show(self, html: str) -> None:
         """Show this HTML; nothing is sent where it is what stands there already."""
-        if html != self.content["html"]:
-            self.content = {"html": html}
+        if html != self.content["html"] or self.adjusted:
+            self.adjusted = {}
+            self.content = {"html": html, "turn": self.content.get("turn", 0) + 1}
+
+    def adjust(self, values: dict[str, dict[str, str]]) -> None:
+        """Set the values of single controls and leave the rest as it stands: by `data-key`, then by `data-act`, the value as text.
+
+        Much less work than new HTML, for the page and here. The next `show` counts again, whatever was adjusted.
+        """
+        if values != self.adjusted:
+            self.adjusted = values
 
     def _on_live(self, event: Any) -> None:
         if event.new and event.new.get("serial", 0) > self._seen:
