@@ -256,7 +256,9 @@ def test_the_breaths_are_told_drawn_and_handed_on(bench):
     assert f"Quality of the breaths: {table.quality.word.capitalize()}" in said and "Quality of the cycles:" in said
     assert "By the minute, as the bars over the window show:" in said and "Two detectors agree on" in said
     bars, marks = view.night.breaths.source.data, view.night.marks.source.data
-    assert len(bars["score"]) == len(bars["hatch"]) == 20 and max(bars["score"]) <= 1.0
+    poor = view.night.breaths.poor.data
+    assert len(bars["score"]) + len(poor["score"]) == 20 and max(bars["score"]) <= 1.0
+    assert all(score >= 0.75 for score in bars["score"]) and all(score < 0.75 for score in poor["score"])
     assert len(marks["start"]) == len(table) and (np.asarray(marks["stop"]) > np.asarray(marks["start"])).all()
     handover = HandoverView(bench)
     do(handover, "breaths", event="click")

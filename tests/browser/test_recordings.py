@@ -37,6 +37,10 @@ def test_an_edf_night_is_opened_measured_and_fitted_and_its_patient_is_never_see
     median = float(page.locator("#over-recording tr", has_text="Cycle length").first.locator("td").first.inner_text().removesuffix(" s"))
     assert abs(median / _CYCLE_S - 1.0) < 0.02
     channels = page.get_by_role("combobox", name="Channel").locator("option").all_inner_texts()
+    # Each breath of the construction lasts 1/0.27 s, an apnoea is none of them; 2 % as for the cycle.
+    rate = page.locator("#over-recording tr", has_text="Respiratory rate").first.locator("td").first.inner_text()
+    assert abs(float(rate.removesuffix(" /min")) / (60.0 * 0.27) - 1.0) < 0.02
+    assert page.get_by_role("heading", name=re.compile(r"Quality of the breaths: (Good|Fair|Poor)")).count() == 1
     assert channels == ["Flow (airflow, 8.00 Hz)", "Temp rectal (unknown, 1.00 Hz)"]
 
     page.get_by_role("button", name="Fit the loop to it").click()
@@ -47,7 +51,7 @@ def test_an_edf_night_is_opened_measured_and_fitted_and_its_patient_is_never_see
     # Nothing of the header's patient and recording fields is on the page or in what is handed on.
     page.locator("#open-handover").click()
     files = []
-    for name in ("Save the page", "Save the cycles (CSV)", "Save the case (JSON)"):
+    for name in ("Save the page", "Save the cycles (CSV)", "Save the breaths (CSV)", "Save the case (JSON)"):
         with page.expect_download() as waiting:
             page.get_by_role("button", name=name).click()
         files.append(Path(waiting.value.path()).read_text(encoding="utf-8"))
