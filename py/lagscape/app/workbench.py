@@ -58,7 +58,7 @@ class Workbench:
     def __init__(self, page: PageLink) -> None:
         self.page = page
         self.units = "mmHg"
-        self.theme = "light"
+        self.theme = page.theme
         self.history = CaseHistory(Case.from_starting_case(OPENING_CASE))
         self._moving: Case | None = None
         self._judged = Judged(self.case)
