@@ -12,6 +12,7 @@ STAND_OUT = 4.0
 _DIP = 2.0
 """A peak is at least twice as high as the lowest point on either side of it."""
 _SMOOTHING_HZ = 0.1
+_SMOOTHED_WIDTH = 0.5
 _REACH_HZ = 1.5
 _APART_HZ = 1.0
 _HARMONIC_HZ = 0.4
@@ -100,7 +101,7 @@ def find_peak(f: np.ndarray, spectra: np.ndarray, wide_f: np.ndarray, wide: np.n
         and smooth[i] > STAND_OUT * _local(f, p, float(f[i]))
     )  # fmt: skip
     width = math.sqrt(max((high - low) ** 2 - blur**2, 0.0))
-    return PeakFound(frequency, _error(f, spectra, background, near), (low, high), width, harmonics, half, others)
+    return PeakFound(frequency, _error(f, spectra, background, near, width), (low, high), width, harmonics, half, others)
 
 
 def _tops(smooth: np.ndarray) -> list[int]:
@@ -118,17 +119,26 @@ def _tops(smooth: np.ndarray) -> list[int]:
 def _centre(f: np.ndarray, p: np.ndarray, background: float, near: float) -> tuple[float, float, float]:
     """Peak and half-power points, Hz: centre of gravity of what rises over half of the smoothed spectrum's height.
 
-    The highest bin itself jumps about within a broad peak; its neighbourhood does not.
+    The highest bin itself jumps about within a broad peak; its neighbourhood does not. For the centre a broad peak is smoothed once
+    more, in proportion to its width, which brings its scatter near the least that is possible (see `_error`).
     """
+    low, high, _ = _risen(f, p, background, near, _SMOOTHING_HZ)
+    *_, centre = _risen(f, p, background, near, max(_SMOOTHING_HZ, _SMOOTHED_WIDTH * (high - low)))
+    return centre, low, high
+
+
+def _risen(f: np.ndarray, p: np.ndarray, background: float, near: float, sigma_hz: float) -> tuple[float, float, float]:
+    """Half-power points and the centre of gravity between them, of the spectrum smoothed by a Gaussian."""
     from scipy.ndimage import gaussian_filter1d
 
-    smooth = gaussian_filter1d(p, _SMOOTHING_HZ / (f[1] - f[0]), mode="nearest")
+    smooth = gaussian_filter1d(p, sigma_hz / (f[1] - f[0]), mode="nearest")
     top = int(np.where(np.abs(f - near) <= _REACH_HZ, smooth, -np.inf).argmax())
     low, high = _half_power(f, smooth, top, background)
     level = background + 0.5 * (smooth[top] - background)
-    weight = np.where((f >= low) & (f <= high), np.maximum(smooth - level, 0.0), 0.0)
+    # In octaves: about those a resonance is even, while in Hz its upper flank is the longer one.
+    weight = np.where((f >= low) & (f <= high), np.maximum(smooth - level, 0.0) / f, 0.0)
     total = float(weight.sum())
-    return (float((f * weight).sum()) / total if total > 0.0 else float(f[top])), low, high
+    return low, high, math.exp(float((np.log(f) * weight).sum()) / total) if total > 0.0 else float(f[top])
 
 
 def _half_power(f: np.ndarray, p: np.ndarray, top: int, background: float) -> tuple[float, float]:
@@ -160,11 +170,17 @@ def _local(f: np.ndarray, p: np.ndarray, at: float) -> float:
     return background_of(p[np.abs(f - at) <= _LOCAL_HZ])
 
 
-def _error(f: np.ndarray, spectra: np.ndarray, background: float, near: float) -> float:
-    """Standard error of the peak, by leaving out one tenth of the recording at a time (jackknife).
+def _error(f: np.ndarray, spectra: np.ndarray, background: float, near: float, width: float) -> float:
+    """Standard error of the peak: what leaving out one tenth of the recording at a time shows, and what no recording can beat.
 
-    Neighbouring spectra share half of their samples, so blocks are left out, not single spectra.
+    Notes
+    -----
+    Jackknife over blocks, as neighbouring spectra share half of their samples. A resonance of half-power width W driven by noise, seen for
+    T seconds, cannot be placed better than sqrt(W / (2 pi T)) (Cramer-Rao bound of a lightly damped oscillator). Ten blocks know their
+    own scatter only roughly and too low, so the two are added by squares: 95 % intervals then hold the truth in 90 to 100 % of runs.
     """
     blocks = np.array_split(np.arange(len(spectra)), min(10, len(spectra)))
     peaks = np.array([_centre(f, np.delete(spectra, block, axis=0).mean(axis=0), background, near)[0] for block in blocks])
-    return float(math.sqrt((peaks.size - 1) / peaks.size * np.sum((peaks - peaks.mean()) ** 2)))
+    scatter = float((peaks.size - 1) / peaks.size * np.sum((peaks - peaks.mean()) ** 2))
+    seconds = 0.5 * SEGMENT_S * (len(spectra) + 1)
+    return math.sqrt(scatter + width / (2.0 * math.pi * seconds))
