@@ -14,6 +14,7 @@ from lagscape.recordings.tremor import TremorMeasurement
 
 __all__ = ["breath_records", "breathing_document", "breaths_document", "cycle_record", "tremor_document"]
 
+_NO_MOVEMENT = {"displacement_mm": "The unit is not one of acceleration.", "angle_deg": "The unit is not one of angular velocity."}
 _MEDIANS = ("cycle_length_s", "ventilatory_duration_s", "apnoeic_duration_s", "duty_ratio", "loop_gain")
 
 
@@ -130,25 +131,38 @@ def breath_records(table: BreathTable) -> list[dict[str, Any]]:
 def tremor_document(measurement: TremorMeasurement, reading_notes: tuple[str, ...] = ()) -> dict[str, Any]:
     """The tremor's peak and its spectrum as dicts, lists, strings and numbers.
 
-    `rms` is in the signal's `unit`, `power` in its square per Hz. What does not exist is None, and `reasons` says why.
+    `rms` is in the signal's `unit`, `power` in its square per Hz with a 95 % interval. What does not exist is None, and `reasons` says why.
     """
-    figures = {name: plain(getattr(measurement, name)) for name in ("peak_frequency_hz", "peak_error_hz", "width_hz", "rms", "displacement_mm")}
+    names = ("peak_frequency_hz", "peak_error_hz", "width_hz", "half_power_hz", "rms", "displacement_mm", "angle_deg", "peak_share")
+    figures = {name: plain(getattr(measurement, name)) for name in names}
     reasons: dict[str, str] = {}
     for name, value in figures.items():
         if value is None and measurement.peak_frequency_hz is None:
             reasons[name] = "No peak stands out of the spectrum."
         elif value is None:
-            reasons[name] = "The unit is not one of acceleration." if name == "displacement_mm" else "The recording does not show it."
+            reasons[name] = _NO_MOVEMENT.get(name, "The recording does not show it.")
     return {
         "kind": "tremor",
         "signals": list(measurement.signals),
+        "signal_kind": measurement.kind,
         "unit": measurement.unit,
+        "sampling_frequency_hz": float(measurement.sampling_frequency_hz),
         "window_s": [float(edge) for edge in measurement.window],
+        "band_hz": [float(edge) for edge in measurement.band_hz],
+        "quality": measurement.quality,
+        "quality_reasons": list(measurement.quality_reasons),
         **figures,
         "reasons": reasons,
         "stands_out": plain(measurement.stands_out),
+        "harmonics_hz": plain(measurement.harmonics_hz),
+        "other_peaks_hz": plain(measurement.other_peaks_hz),
         "segments": measurement.n_segments,
+        "used_s": float(measurement.used_s),
+        "masked_s": float(measurement.masked_s),
+        "masked": plain(measurement.masked),
         "frequency_hz": plain(measurement.frequency_hz),
         "power": plain(measurement.power),
+        "power_low": plain(measurement.power_low),
+        "power_high": plain(measurement.power_high),
         "notes": [*reading_notes, *measurement.notes],
     }
