@@ -9,6 +9,7 @@ from pathlib import Path
 from statistics import median
 from typing import Any
 
+from bench_night import night_on_the_page
 from browser_runtime import SITE_PATH, BrowserRuntime, plain_server, site_folder, write_bundle
 from browser_setup import CHROMIUM_ARGUMENTS
 
@@ -98,6 +99,11 @@ class BrowserBench:
             bare.append(BrowserRuntime(context.new_page(), self._server, self._app, bare=True).times["bareBootMs"])
             context.close()
         return {"ready": median(ready), "bare": median(bare)}
+
+    def night(self, path: Path, rested: bool, turns: int = 2) -> dict[str, float]:
+        """Smallest ms to the list of channels and to the cycles of a long night; `rested`: scipy is there already."""
+        found = [night_on_the_page(self._browser, self._server, path, rested, BOOT_TIMEOUT_MS) for _ in range(turns)]
+        return {name: min(item[name] for item in found) for name in ("list", "cycles")}
 
     def drags(self, moves: int = 40) -> dict[str, float]:
         """Median ms from pointer to painted trace on the map, of the worker's part of it, and of the round trip that does nothing.

@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from lagscape.app.long_work import LongWork, Work, WorkStopped
-from lagscape.app.scipy_loader import fetch_scipy, scipy_is_ready, scipy_steps
+from lagscape.app.scipy_loader import begin_fetching, fetch_scipy, scipy_is_ready, scipy_steps
 from lagscape.errors import InvalidInputError, RecordingError
 from lagscape.questions.fit import fit_steps
 from lagscape.questions.fit_measured import Measured, measured_from
@@ -68,6 +68,7 @@ class RecordingWork:
             view.take(with_derived_channels(recording))
             # The channels are on the screen before the reading and measuring of one, which may take seconds, begins.
             await work.answer_page(now=True)
+            begin_fetching()
             await self._read_and_measure(work, view.likeliest(), None)
 
     async def choose(self, name: str) -> None:

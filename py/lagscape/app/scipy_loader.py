@@ -11,7 +11,7 @@ from zipimport import zipimporter
 
 from lagscape.recordings.stepwise import Steps
 
-__all__ = ["fetch_scipy", "prepare_scipy", "scipy_is_ready", "scipy_steps", "use_loader"]
+__all__ = ["begin_fetching", "fetch_scipy", "prepare_scipy", "scipy_is_ready", "scipy_steps", "use_loader"]
 
 # What scipy.signal and scipy.ndimage import, in an order in which each step adds a part of its own.
 PARTS = ("special", "linalg", "sparse.linalg", "ndimage", "fft", "spatial", "optimize", "interpolate", "signal")
@@ -20,6 +20,7 @@ _LOOK_EVERY_S = 0.1
 
 _load: Callable[[], Awaitable[object]] | None = None
 _fetched: Callable[[], float] | None = None
+_on_its_way: asyncio.Future[object] | None = None
 
 
 def use_loader(load: Callable[[], Awaitable[object]], fetched: Callable[[], float]) -> None:
@@ -31,6 +32,15 @@ def use_loader(load: Callable[[], Awaitable[object]], fetched: Callable[[], floa
 def scipy_is_ready() -> bool:
     """Whether all that a recording needs is imported."""
     return all(f"scipy.{part}" in sys.modules for part in PARTS)
+
+
+def begin_fetching() -> None:
+    """Have scipy on its way while something else is done; whoever needs it calls `fetch_scipy`, which says what went wrong."""
+    global _on_its_way
+    if _load is not None and "scipy" not in sys.modules:
+        _let_go_of_zip_finders()
+        _on_its_way = asyncio.ensure_future(_load())
+        _on_its_way.add_done_callback(lambda fetched: fetched.cancelled() or fetched.exception())
 
 
 async def fetch_scipy(tell: Callable[[float], None] = lambda share: None) -> None:
