@@ -8,6 +8,7 @@ import { loadScripts } from "./scripts.js";
 import { startInput } from "./input.js";
 import { startOffline } from "./offline.js";
 import { site } from "./site.js";
+import { shareTouches, startTouch } from "./touch.js";
 
 const SLOTS = ["case", "map", "traces", "standing", "recording", "handover"];
 const IDLE_AFTER_MS = 4000;
@@ -37,6 +38,7 @@ function slotElement(slot) {
 async function draw({ json, roots }) {
   await scripts;
   quickenDrawing(window.Bokeh);
+  shareTouches(window.Bokeh);
   const { Document } = window.Bokeh.require("document/document");
   const rootSlots = JSON.parse(roots);
   const jsdoc = Document.from_json(JSON.parse(json));
@@ -122,6 +124,7 @@ function whenIdle(callback) {
 
 state.onRestart(restart);
 startInput(page);
+startTouch(page);
 window.addEventListener("hashchange", () => page.link.command("set_link", { link: linkInAddress() }));
 darkPreferred.addEventListener("change", () => page.link.command("theme", { theme: theme() }));
 

@@ -67,7 +67,7 @@ def new_context(browser: Any, server: str) -> Iterator[Callable[..., tuple[Any, 
     made: list[tuple[Any, Watch]] = []
 
     def make(**options: Any) -> tuple[Any, Watch]:
-        context = browser.new_context(viewport={"width": 1400, "height": 1000}, **options)
+        context = browser.new_context(**{"viewport": {"width": 1400, "height": 1000}, **options})
         watch = Watch(server.rstrip("/"))
         watch.follow(context)
         made.append((context, watch))

@@ -75,7 +75,7 @@ class MapView:
             plot.add_layout(item)
         self.hollow_mark = plot.scatter("delay", "sensitivity", source=self.hollow, size=13, fill_alpha=0.0, line_width=2)
         self.diamond_mark = plot.scatter("delay", "sensitivity", source=self.diamond, size=16, marker="diamond")
-        self.dot_mark = plot.scatter("delay", "sensitivity", source=self.dot, size=17, line_width=2, level=_UNDER_HAND)
+        self.dot_mark = plot.scatter("delay", "sensitivity", source=self.dot, size=17, line_width=2, level=_UNDER_HAND, name="dot")
         self.reach_words = plot.text(
             "words_delay", "words_sensitivity", "words", source=self.reach, text_align="align", x_offset="right", y_offset="down",
             text_baseline="middle", text_font=value(FONT), text_font_size="12px", background_fill_alpha=0.8, level=_UNDER_HAND,
