@@ -10,7 +10,9 @@ export function quickenDrawing(Bokeh) {
   quickenStyleSheets(Bokeh.require("core/dom")?.InlineStyleSheet);
   quickenPlots(Bokeh.require("models/plots/plot_canvas")?.PlotView);
   leavePlaces(Bokeh.require("models/renderers/renderer")?.RendererView);
-  clipOverlays(Bokeh.require("models/renderers/glyph_renderer")?.GlyphRendererView);
+  const { GlyphRendererView } = Bokeh.require("models/renderers/glyph_renderer") ?? {};
+  clipOverlays(GlyphRendererView);
+  restSpares(GlyphRendererView);
 }
 
 /**
@@ -90,4 +92,21 @@ function clipOverlays(GlyphRendererView) {
       return this.model.level === "overlay";
     },
   });
+}
+
+const SPARES = ["decimated_glyph", "selection_glyph", "nonselection_glyph", "muted_glyph"];
+const STEPS = ["set_data", "set_visuals", "after_visuals", "after_lazy_visuals", "map_data"];
+
+/**
+ * Bokeh keeps five copies of everything that is drawn from data: as it is, selected, not selected, muted and thinned out. What moves with
+ * the hand is never selected, muted or thinned: its four spare copies stay as they were first made.
+ */
+function restSpares(GlyphRendererView) {
+  const connect = GlyphRendererView?.prototype.connect_signals;
+  if (!connect) return;
+  GlyphRendererView.prototype.connect_signals = function () {
+    connect.call(this);
+    if (this.model.level !== "overlay") return;
+    for (const spare of SPARES) for (const step of STEPS) if (this[spare]) this[spare][step] = () => {};
+  };
 }
