@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 from html import escape
 from typing import Any
 
@@ -14,6 +15,7 @@ from lagscape.handover.pictures import Contour, Curve, MapPicture, TracePanel, a
 from lagscape.handover.report import LeverLine, Picture, Report, Section, report_html
 from lagscape.handover.svg import Axis
 from lagscape.handover.table import breaths_csv, cycles_csv, trace_csv
+from lagscape.handover.tremor import spectrum_csv, spectrum_svg, tremor_csv, tremor_picture, tremor_sections, tremor_study_document
 from lagscape.quantities import figure
 from lagscape.questions.boundary_map import cycle_contours, map_of, standing_point, window_of
 from lagscape.questions.cautions import cautions
@@ -35,6 +37,12 @@ _ROWS = (
     ("map-picture", "Save the map (SVG)", "The boundary map as a picture."),
     ("trace-picture", "Save the traces (SVG)", "The traces as a picture."),
 )
+_TREMOR_ROWS = (
+    ("tremor", "Save the tremor (CSV)", "One row a condition: peak, width, size, share, quality; with a load the shift and its verdict."),
+    ("tremor-json", "Save the tremor (JSON)", "The same and the spectra, every digit, with what was masked and every note."),
+    ("spectrum", "Save the spectrum (CSV)", "Power at each frequency with its 95 % interval, a column a condition."),
+    ("spectrum-picture", "Save the spectrum (SVG)", "The spectrum as a picture."),
+)
 
 
 class HandoverView:
@@ -52,6 +60,8 @@ class HandoverView:
             rows.append(("cycles", "Save the cycles (CSV)", "Every measured cycle of the recording, excluded ones with their reason."))
             if len(self.bench.measurement.breath_table):
                 rows.append(("breaths", "Save the breaths (CSV)", "Every single breath: start, end, rate, volume, ventilation, all digits."))
+        if self.bench.tremor is not None:
+            rows += _TREMOR_ROWS
         items = "".join(
             f'<li><button class="main" data-act="{act}">{escape(label)}</button><span>{escape(what)}</span></li>' for act, label, what in rows
         )
@@ -81,6 +91,19 @@ class HandoverView:
             self._save("lagscape-cycles.csv", "text/csv", cycles_csv(self.bench.measurement))
         elif request.act == "breaths" and self.bench.measurement is not None:
             self._save("lagscape-breaths.csv", "text/csv", breaths_csv(self.bench.measurement))
+        elif self.bench.tremor is not None:
+            self._save_tremor(request.act)
+
+    def _save_tremor(self, act: str) -> None:
+        study = self.bench.tremor
+        if act == "tremor":
+            self._save("lagscape-tremor.csv", "text/csv", tremor_csv(study))
+        elif act == "tremor-json":
+            self._save("lagscape-tremor.json", "application/json", json.dumps(tremor_study_document(study), indent=2, allow_nan=False))
+        elif act == "spectrum":
+            self._save("lagscape-spectrum.csv", "text/csv", spectrum_csv(study))
+        elif act == "spectrum-picture":
+            self._save("lagscape-spectrum.svg", "image/svg+xml", spectrum_svg(study))
 
     def _save(self, name: str, kind: str, text: str) -> None:
         self.bench.page.send("download", {"name": name, "type": kind, "data": text.encode()})
@@ -98,6 +121,7 @@ class HandoverView:
         pictures = (
             Picture(self.map_picture(), "Boundary map. Hatched: the loop hunts."),
             Picture(self.trace_picture(), "The answer to one disturbance."),
+            *(() if bench.tremor is None else (tremor_picture(bench.tremor),)),
         )
         if changed is None:
             analysis, without = before, None
@@ -120,6 +144,7 @@ class HandoverView:
         return (
             Section("Share of the excess", parts, share.sentence),
             Section("Certainty", tuple(held), f"{sure.sentence} {sure.draws} draws, seed {sure.seed}."),
+            *(() if self.bench.tremor is None else tremor_sections(self.bench.tremor)),
         )
 
     def _lever_lines(self) -> tuple[LeverLine, ...]:

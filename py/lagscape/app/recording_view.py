@@ -18,7 +18,9 @@ from lagscape.app.palette import FONT, PALETTES, dress
 from lagscape.app.recording_words import recording_summary
 from lagscape.app.recording_work import READABLE_KINDS, RecordingWork
 from lagscape.app.threshold_forms import with_threshold
+from lagscape.app.time_axis import time_ticks
 from lagscape.app.trace_view import SHOW_ALL
+from lagscape.app.tremor_view import TremorState, TremorView
 from lagscape.app.workbench import Workbench
 from lagscape.errors import InvalidInputError
 from lagscape.questions.fit import Fit
@@ -59,6 +61,7 @@ class RecordingView:
         self._built = False
         self.work = RecordingWork(self)
         self.waiting: tuple[Any, str] | None = None
+        self.tremor = TremorView(self)
         self._whole = Range1d(0.0, 1.0)
         self._shown = Range1d(0.0, 1.0)
         bench.listen("theme", self.dress)
@@ -68,11 +71,28 @@ class RecordingView:
     @cached_property
     def root(self) -> Any:
         """The view, built when it is first asked for: the start of the page does not wait for it."""
-        drawn = self._build()
+        self._breathing = self._build()
         self._built = True
         self.dress()
         self.write()
-        return drawn
+        return pn.Column(self._breathing, sizing_mode="stretch_width")
+
+    @property
+    def tremor_state(self) -> TremorState:
+        """What the tremor view holds; it goes and comes with what this one holds."""
+        return self.tremor.state
+
+    @tremor_state.setter
+    def tremor_state(self, state: TremorState) -> None:
+        self.tremor.state = state
+
+    def _show_kind(self) -> None:
+        """Show the one of the two views that the channel is read for."""
+        if self.tremor.is_on and len(self.root) == 1:
+            self.root.append(self.tremor.root)
+        self._breathing.visible = not self.tremor.is_on
+        if len(self.root) == 2:
+            self.tremor.root.visible = self.tremor.is_on
 
     def _build(self) -> Any:
         empty: dict[str, list[float]] = {"time": [], "low": [], "high": []}
@@ -120,7 +140,7 @@ class RecordingView:
         self.window.on_event(Tap, self._tapped)
         self.window.js_on_event(DoubleTap, CustomJS(args={"time": self._shown}, code=SHOW_ALL))
         self._shown.on_change("end", self._window_moved)
-        self.head, self.side = Sheet(self._handle), Sheet(self._handle)
+        self.head, self.side = Sheet(self.handle), Sheet(self.handle)
         drawn = pn.Column(
             self.head,
             pn.pane.Bokeh(self.strip, sizing_mode="stretch_width"),
@@ -139,6 +159,7 @@ class RecordingView:
     def dress(self) -> None:
         if not self._built:
             return
+        self.tremor.dress()
         palette = PALETTES[self.bench.theme]
         for item in (self.strip, self.window):
             dress(item, palette)
@@ -169,6 +190,7 @@ class RecordingView:
         self.recording, self.signal = recording, self.likeliest(recording)
         self.measurement = self.lag = self.laying = self.fit = self.ring_down = self.waiting = None
         self.refusal = ""
+        self.tremor.take(recording)
         self.draw_signal(empty=True)
 
     def likeliest(self, recording: Recording | None = None) -> Signal:
@@ -190,6 +212,11 @@ class RecordingView:
 
     def draw_signal(self, empty: bool = False) -> None:
         """Draw the channel and what was measured in it; nothing for none, or for one that is not read yet."""
+        self._show_kind()
+        if self.tremor.is_on:
+            self.write()
+            return
+        self.tremor.forget()
         drawn = None if empty else self.signal
         if drawn is not self.drawn:
             self.drawn = drawn
@@ -213,7 +240,7 @@ class RecordingView:
         self._whole.update(start=start, end=stop)
         self._shown.update(start=start, end=min(stop, start + _FIRST_WINDOW_S), reset_start=start, reset_end=stop)
         for item, span in ((self.strip, stop - start), (self.window, min(stop - start, _FIRST_WINDOW_S))):
-            _time_ticks(item, start, start + span)
+            time_ticks(item, start, start + span)
 
     def refuse(self, sentence: str) -> None:
         """Say why something was not done; what there was stays."""
@@ -227,6 +254,9 @@ class RecordingView:
         if self.bench.measurement is not self.measurement:
             self.bench.measurement = self.measurement
             self.bench.tell("recording")
+        if self.tremor.is_on:
+            self.tremor.draw()
+            return
         head, side = recording_summary(self)
         self.head.show(head)
         self.side.show(side)
@@ -278,7 +308,7 @@ class RecordingView:
         self._draw_model(middle)
         high, low = np.nanmax(band["high"]), np.nanmin(band["low"])
         self.window.y_range.update(start=float(low - 0.05 * (high - low)), end=float(high + 0.22 * (high - low)))
-        _time_ticks(self.window, start, stop)
+        time_ticks(self.window, start, stop)
 
     def _draw_model(self, middle: float) -> None:
         """The fitted loop's ventilation over each cycle from its onset, as high as the recording's cycles are in the middle."""
@@ -323,10 +353,12 @@ class RecordingView:
         self.night.draw(self.measurement)
         self.write()
 
-    def _handle(self, request: Request) -> None:
+    def handle(self, request: Request) -> None:
         bench, begin = self.bench, self.work.place.start
         if request.act == "channel":
             begin(self.work.choose(request.value))
+        elif request.act == "read-as":
+            begin(self.work.choose(self.tremor.chosen or (self.signal.name if self.signal else ""), request.value))
         elif request.act == "measure-window":
             begin(self.work.measure(self.shown_window()))
         elif request.act == "measure-whole":
@@ -402,19 +434,3 @@ class RecordingView:
 def _band(whole: Any) -> dict[str, Any]:
     middle = 0.5 * (whole.edges_s[1:] + whole.edges_s[:-1])
     return {"time": middle, "low": whole.lowest, "high": whole.highest}
-
-
-def _time_ticks(plot: Any, start: float, stop: float) -> None:
-    """Ticks at round minutes, written as minutes and seconds, hours where there are some."""
-    span = max(stop - start, 1.0)
-    step = next((s for s in (5, 10, 15, 30, 60, 120, 300, 600, 900, 1800, 3600, 7200) if span / s <= 10), 14400)
-    ticks = [step * k for k in range(int(np.ceil(start / step)), int(np.floor(stop / step)) + 1)]
-    plot.xaxis.ticker.ticks = ticks
-    plot.xaxis.major_label_overrides = {tick: clock(tick) for tick in ticks}
-
-
-def clock(seconds: float) -> str:
-    """A time in a recording as min:s, or h:min:s."""
-    whole = round(seconds)
-    hours, rest = divmod(whole, 3600)
-    return f"{hours}:{rest // 60:02d}:{rest % 60:02d}" if hours else f"{rest // 60}:{rest % 60:02d}"

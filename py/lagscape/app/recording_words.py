@@ -6,6 +6,7 @@ from html import escape
 from typing import TYPE_CHECKING, Any
 
 from lagscape.app.breath_words import breaths_html
+from lagscape.app.channel_words import channel_options, rate_html, read_as_html
 from lagscape.app.fit_words import fit_html
 from lagscape.app.threshold_forms import threshold_html
 from lagscape.quantities import figure, to_display
@@ -25,20 +26,15 @@ def recording_summary(view: RecordingView) -> tuple[str, str]:
 
 def _head(view: RecordingView) -> str:
     refusal = f'<p class="refusal" role="alert">{escape(view.refusal)}</p>' if view.refusal else ""
+    rate = rate_html(view.waiting is not None, view.refusal)
     if view.recording is None or view.signal is None:
-        rate = ""
-        if view.waiting is not None and "sampl" in view.refusal.lower():
-            rate = (
-                '<label class="pick"><span>Samples a second</span><input class="box" type="text" inputmode="decimal" data-act="rate" value=""'
-                ' aria-label="Samples a second"></label>'
-            )
-        empty = "" if refusal else "<p>Open a recording of ventilation, airflow or effort: a CSV or EDF file. It stays in this tab.</p>"
+        empty = (
+            "" if refusal
+            else "<p>Open a recording of breathing (ventilation, airflow, effort) or of a tremor (accelerometer, gyroscope, EMG): a CSV or EDF "
+            "file. It stays in this tab.</p>"
+        )  # fmt: skip
         return f'<div class="rec-head">{refusal}{rate}{empty}</div>'
-    options = "".join(
-        f'<option value="{escape(item.name)}"{" selected" if item.name == view.signal.name else ""}>{escape(item.name)} ({escape(item.kind)}'
-        f", {figure(item.sampling_frequency_hz)} Hz)</option>"
-        for item in view.recording.signals
-    )
+    options = channel_options(view.recording, view.signal.name)
     notes = [str(note) for note in view.recording.notes]
     repaired = ""
     if notes:
@@ -46,9 +42,10 @@ def _head(view: RecordingView) -> str:
         repaired = f"<details><summary>{len(notes)} note{'s' if len(notes) != 1 else ''} on the file</summary><ul>{shown}</ul></details>"
     minutes = view.recording.duration_s / 60.0
     return (
-        f'<div class="rec-head">{refusal}<p><b>{escape(view.recording.name)}</b>, {figure(minutes)} min. It stays in this tab; names and '
+        f'<div class="rec-head">{refusal}{rate}<p><b>{escape(view.recording.name)}</b>, {figure(minutes)} min. It stays in this tab; names and '
         f"dates in a file are neither shown nor kept.</p>"
         f'<div class="tools"><label>Channel <select data-act="channel" aria-label="Channel">{options}</select></label>'
+        f"{read_as_html('breathing')}"
         '<button data-act="measure-window">Measure this window</button><button data-act="measure-whole">Measure the whole</button></div>'
         f"{threshold_html(view.thresholds)}{repaired}</div>"
     )

@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from lagscape.app.channel_words import sensor_named
 from lagscape.app.long_work import LongWork, Work, WorkStopped
 from lagscape.app.scipy_loader import begin_fetching, fetch_scipy, scipy_is_ready, scipy_steps
 from lagscape.errors import InvalidInputError, RecordingError
@@ -28,7 +29,7 @@ __all__ = ["READABLE_KINDS", "RecordingWork"]
 READABLE_KINDS = ("ventilation", "airflow", "effort")
 _SIGH = 2.0
 """A breath this many times the usual one is taken for a sigh (common practice, no source)."""
-_KEPT = ("recording", "signal", "measurement", "lag", "laying", "fit", "ring_down", "refusal", "thresholds", "waiting")
+_KEPT = ("recording", "signal", "measurement", "lag", "laying", "fit", "ring_down", "refusal", "thresholds", "waiting", "tremor_state")
 """What the view holds and a stopped opening gives back."""
 _EDF_BYTES_A_S, _TEXT_BYTES_A_S = 150e6, 6e6
 _TOOLS_S, _MEASURING_S, _FITTING_S = 3.0, 3.0, 2.0
@@ -69,16 +70,24 @@ class RecordingWork:
             # The channels are on the screen before the reading and measuring of one, which may take seconds, begins.
             await work.answer_page(now=True)
             begin_fetching()
-            await self._read_and_measure(work, view.likeliest(), None)
+            if view.tremor.is_on:
+                await view.tremor.work.measure_in(work, None)
+            else:
+                await self._read_and_measure(work, view.likeliest(), None)
 
-    async def choose(self, name: str) -> None:
-        """Read another channel and measure it."""
+    async def choose(self, name: str, read_as: str | None = None) -> None:
+        """Read another channel, or the axes of a sensor, and measure it as what it is or is said to be."""
         view = self.view
         assert view.recording is not None
-        signal, before = view.recording.signal(name), view.drawn or view.signal
+        held = view.tremor_state
+        if view.tremor.choose(name, read_as):
+            view.draw_signal()
+            await view.tremor.work.measure()
+            return
+        signal, before = view.recording.signal(sensor_named(view.recording, name).signals[0]), view.drawn or view.signal
 
         def undo() -> None:
-            view.signal = before
+            view.signal, view.tremor_state = before, held
             view.write()
 
         parts = {"signal": 2.0 * signal.n_samples / _EDF_BYTES_A_S * len(view.recording.signals), "tools": _tools_s(), "measuring": _MEASURING_S}
@@ -109,7 +118,7 @@ class RecordingWork:
         try:
             saturation = recording.of_kind("SpO2")[:1]
             await work.through("signal", _bytes(f"reading {signal.name}"), loading_steps(signal, *saturation))
-            await self._tools(work)
+            await self.tools(work)
         except RecordingError as problem:
             view.refuse(str(problem))
             return
@@ -130,7 +139,7 @@ class RecordingWork:
             refusal = str(problem)
         view.show_measured(signal, measurement, lag, refusal)
 
-    async def _tools(self, work: Work) -> None:
+    async def tools(self, work: Work) -> None:
         """Everything of scipy that measuring needs."""
         if scipy_is_ready():
             return

@@ -67,6 +67,7 @@ class Workbench:
         self.refusals: dict[str, str] = {}
         self.recording: Any = None
         self.measurement: Any = None
+        self.tremor: Any = None
 
     @property
     def case(self) -> Case:
