@@ -9,12 +9,13 @@ let finger = null; // of the touch under way on a drawing: where it began, wheth
 function dotPlace(page) {
   const dot = page.link?.document?.get_model_by_name("dot");
   const view = dot && window.Bokeh.index.find_one(dot);
-  const [delay] = dot?.data_source.data.delay ?? [];
-  if (!view || delay === undefined) return null;
+  if (!view) return null;
+  const { glyph, data_source } = dot;
+  const [[across], [up]] = [glyph.x, glyph.y].map(({ field }) => data_source.data[field]);
+  if (across === undefined) return null;
   const { frame, canvas_view } = view.plot_view;
   const area = canvas_view.el.getBoundingClientRect();
-  const [sensitivity] = dot.data_source.data.sensitivity;
-  return [area.left + frame.x_scale.compute(delay), area.top + frame.y_scale.compute(sensitivity)];
+  return [area.left + frame.x_scale.compute(across), area.top + frame.y_scale.compute(up)];
 }
 
 function begun(page, event) {
