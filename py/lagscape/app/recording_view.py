@@ -75,7 +75,8 @@ class RecordingView:
         self._built = True
         self.dress()
         self.write()
-        return pn.Column(self._breathing, sizing_mode="stretch_width")
+        self.tremor.root.visible = False
+        return pn.Column(self._breathing, self.tremor.root, sizing_mode="stretch_width")
 
     @property
     def tremor_state(self) -> TremorState:
@@ -88,11 +89,7 @@ class RecordingView:
 
     def _show_kind(self) -> None:
         """Show the one of the two views that the channel is read for."""
-        if self.tremor.is_on and len(self.root) == 1:
-            self.root.append(self.tremor.root)
-        self._breathing.visible = not self.tremor.is_on
-        if len(self.root) == 2:
-            self.tremor.root.visible = self.tremor.is_on
+        self._breathing.visible, self.tremor.root.visible = not self.tremor.is_on, self.tremor.is_on
 
     def _build(self) -> Any:
         empty: dict[str, list[float]] = {"time": [], "low": [], "high": []}

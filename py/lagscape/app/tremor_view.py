@@ -93,7 +93,7 @@ class TremorView:
 
     @cached_property
     def root(self) -> Any:
-        """The view, built when the first tremor is read."""
+        """The view, built with the recording view that shows it."""
         border: dict[str, Any] = {"min_border_left": 60, "min_border_right": 20, "toolbar_location": None, "sizing_mode": "stretch_width"}
         self.strip, self.spectrum = TremorStrip(border), SpectrumFigure(border)
         self.strip.shown.on_change("end", self._window_moved)
