@@ -85,7 +85,7 @@ def test_an_accelerometer_opens_as_a_tremor_with_its_axes_together(view):
     assert "Acc X + Acc Y + Acc Z (3 axes, accelerometer, 100 Hz)" in head(view) and "sum of their spectra" in head(view)
     # Closed form: (0.05^2 + 0.03^2 + 0.01^2)^(1/2) g at 6 Hz is 0.0592 x 9807 mm/s2 / (2 pi 6)^2 = 0.408 mm.
     assert measured.displacement_mm == pytest.approx(0.0592 * 9806.65 / (2 * np.pi * 6.0) ** 2, rel=0.03)
-    for words in ("Peak frequency", "6.00 ±", "Width at half power", "Power in the peak", "Displacement, amplitude", "Quality: Sharp"):
+    for words in ("Peak frequency", "6.00 Hz", "Its standard error", "Width at half power", "Power in the peak", "Displacement, amplitude", "Quality: Sharp"):
         assert words in said(view), words
     spectrum = view.tremor.spectrum
     assert spectrum.marks.data["text"] == ["6.00 Hz"] and len(spectrum.brackets.data["start"]) == 1

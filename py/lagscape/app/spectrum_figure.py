@@ -5,6 +5,7 @@ Unloaded is a firm line, loaded a dashed one over hatching, the window that is n
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
 from typing import Any
 
@@ -22,6 +23,9 @@ ROLES = ("window", "unloaded", "loaded")
 _LOWEST_SHOWN_HZ = 1.5
 """What is slower (posture, drift) may be cut off at the top."""
 _DB_SHOWN = 50.0
+_LABEL_PX, _LINE_PX, _LABEL_HZ = -8, 17, 6.0
+"""A peak's words stand this far over it, a line higher where others stand as high within so many Hz."""
+_SUPERSCRIPT = str.maketrans("-0123456789", "⁻⁰¹²³⁴⁵⁶⁷⁸⁹")
 
 
 class SpectrumFigure:
@@ -35,7 +39,7 @@ class SpectrumFigure:
         self.plot.yaxis.ticker.desired_num_ticks = 4
         self.curves = {role: ColumnDataSource({"frequency": [], "power": [], "low": [], "high": []}) for role in ROLES}
         self.brackets = ColumnDataSource({"start": [], "stop": [], "level": []})
-        self.marks = ColumnDataSource({"frequency": [], "power": [], "text": []})
+        self.marks = ColumnDataSource({"frequency": [], "power": [], "text": [], "raised": []})
         self.names = ColumnDataSource({"frequency": [], "power": [], "text": []})
         self.bands = {role: self.plot.varea("frequency", "low", "high", source=self.curves[role], fill_alpha=0.16) for role in ROLES}
         self.bands["loaded"].glyph.hatch_pattern = "right_diagonal_line"
@@ -52,7 +56,7 @@ class SpectrumFigure:
         ]
         self.peaks = self.plot.scatter("frequency", "power", source=self.marks, marker="inverted_triangle", size=9)
         words: dict[str, Any] = {"text_font": value(FONT), "text_align": "center", "text_baseline": "bottom"}
-        self.peak_words = self.plot.text("frequency", "power", "text", source=self.marks, text_font_size="13px", y_offset=-8, **words)
+        self.peak_words = self.plot.text("frequency", "power", "text", source=self.marks, text_font_size="13px", y_offset="raised", **words)
         self.harmonic_words = self.plot.text("frequency", "power", "text", source=self.names, text_font_size="12px", y_offset=-5, **words)
 
     def dress(self, palette: Palette) -> None:
@@ -71,12 +75,14 @@ class SpectrumFigure:
         """Show these measurements, each with its role: window, unloaded or loaded; nothing for none."""
         highest = max((float(one.power[one.frequency_hz >= _LOWEST_SHOWN_HZ].max()) for _, one in shown), default=1.0) or 1.0
 
+        thousands = 3 * math.floor(math.log10(highest) / 3.0)
+
         def scaled(power: Any) -> Any:
-            return 10.0 * np.log10(np.maximum(power, 1e-12 * highest) / highest) if decibels else power
+            return 10.0 * np.log10(np.maximum(power, 1e-12 * highest) / highest) if decibels else np.asarray(power) * 10.0**-thousands
 
         drawn = dict(shown)
         brackets: dict[str, list[float]] = {"start": [], "stop": [], "level": []}
-        marks: dict[str, list[Any]] = {"frequency": [], "power": [], "text": []}
+        marks: dict[str, list[Any]] = {"frequency": [], "power": [], "text": [], "raised": []}
         names: dict[str, list[Any]] = {"frequency": [], "power": [], "text": []}
         for role, source in self.curves.items():
             one = drawn.get(role)
@@ -88,11 +94,16 @@ class SpectrumFigure:
             }  # fmt: skip
             if one.peak_frequency_hz is None or one.half_power_hz is None:
                 continue
-            top = float(np.interp(one.peak_frequency_hz, one.frequency_hz, one.power))
+            top = float(one.power[_within(one)].max())
             brackets["start"].append(one.half_power_hz[0])
             brackets["stop"].append(one.half_power_hz[1])
             brackets["level"].append(float(scaled(0.5 * top)))
             marks["frequency"].append(one.peak_frequency_hz)
+            raised = _LABEL_PX
+            for other, level in zip(marks["frequency"][:-1], marks["power"], strict=True):
+                if abs(other - one.peak_frequency_hz) < _LABEL_HZ and abs(level - float(scaled(top))) < 0.1 * float(scaled(highest) or _DB_SHOWN):
+                    raised -= _LINE_PX
+            marks["raised"].append(raised)
             marks["power"].append(float(scaled(top)))
             name = "" if role == "window" else f"{role} "
             marks["text"].append(f"{name}{one.peak_frequency_hz:.2f} Hz")
@@ -103,7 +114,25 @@ class SpectrumFigure:
         self.brackets.data, self.marks.data, self.names.data = brackets, marks, names
         if shown:
             self.frequencies.update(start=0.0, end=max(float(one.frequency_hz[-1]) for _, one in shown))
-            low, high = (-_DB_SHOWN, 8.0) if decibels else (0.0, 1.3 * highest)
+            low, high = (-_DB_SHOWN, 10.0) if decibels else (0.0, 1.3 * float(scaled(highest)))
             self.powers.update(start=low, end=high)
             unit = next((one.unit for _, one in shown if one.unit), "")
-            self.plot.yaxis.axis_label = "Power under the largest (dB)" if decibels else f"Power (({unit})²/Hz)" if unit else "Power (per Hz)"
+            self.plot.yaxis.axis_label = "Power, largest at 0 (dB)" if decibels else f"Power ({_power_of_ten(thousands)}{_squared(unit)})"
+
+
+def _within(one: TremorMeasurement) -> np.ndarray:
+    """Where the spectrum lies between the peak's half-power points."""
+    assert one.half_power_hz is not None and one.peak_frequency_hz is not None
+    found = (one.frequency_hz >= one.half_power_hz[0]) & (one.frequency_hz <= one.half_power_hz[1])
+    found[int(np.abs(one.frequency_hz - one.peak_frequency_hz).argmin())] = True
+    return found
+
+
+def _squared(unit: str) -> str:
+    if not unit:
+        return "per Hz"
+    return f"{unit}²/Hz" if unit.isalpha() else f"({unit})²/Hz"
+
+
+def _power_of_ten(exponent: int) -> str:
+    return "" if exponent == 0 else "10" + str(exponent).translate(_SUPERSCRIPT) + " "

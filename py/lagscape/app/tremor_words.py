@@ -73,9 +73,9 @@ def _figures(shown: tuple[tuple[str, TremorMeasurement], ...]) -> str:
         rows.setdefault(label, ["<td>–</td>"] * len(shown))[column] = f"<td>{escape(text)}</td>"
 
     for column, (_, one) in enumerate(shown):
-        peak = "none" if one.peak_frequency_hz is None else f"{figure(one.peak_frequency_hz)} ± {figure(one.peak_error_hz, 2)} Hz"
-        row("Peak frequency", column, peak)
+        row("Peak frequency", column, "none" if one.peak_frequency_hz is None else f"{figure(one.peak_frequency_hz)} Hz")
         if one.peak_frequency_hz is not None:
+            row("Its standard error", column, f"{figure(one.peak_error_hz, 2)} Hz")
             row("Width at half power", column, f"{figure(one.width_hz)} Hz")
             row("Power in the peak", column, percent(one.peak_share or 0.0))
             for label, words in size_words(one):

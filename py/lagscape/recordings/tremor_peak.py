@@ -98,7 +98,7 @@ def find_peak(f: np.ndarray, spectra: np.ndarray, wide_f: np.ndarray, wide: np.n
         float(f[i])
         for i in standing
         if abs(f[i] - frequency) > max(_APART_HZ, high - low) and all(abs(f[i] - k * frequency) > _HARMONIC_HZ for k in (0.5, 2.0, 3.0))
-        and smooth[i] > STAND_OUT * _local(f, p, float(f[i]))
+        and smooth[i] > STAND_OUT * float(np.quantile(p[np.abs(f - f[i]) <= _LOCAL_HZ], 0.25))
     )  # fmt: skip
     width = math.sqrt(max((high - low) ** 2 - blur**2, 0.0))
     return PeakFound(frequency, _error(f, spectra, background, near, width), (low, high), width, harmonics, half, others)

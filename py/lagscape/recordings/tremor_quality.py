@@ -52,7 +52,7 @@ def quality_of(
         reasons.append("Nothing stands four times over the rest of the spectrum with a dip on either side.")
     elif peak.width_hz <= _SHARP_HZ:
         word = "sharp"
-        reasons.append("The peak is at most 1 Hz wide at half its power: one steady rhythm.")
+        reasons.append("The peak is at most 1 Hz wide at half its power.")
     elif peak.width_hz <= _BROAD_HZ:
         word = "moderate"
         reasons.append("The peak is between 1 and 2 Hz wide at half its power.")
