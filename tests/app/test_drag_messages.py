@@ -174,3 +174,33 @@ def test_patches_are_those_of_bokehs_own_serializer():
         assert len(events) == 3
         assert PatchJson(events=own.encode(events)) == PatchJson(events=bokehs.encode(events))
         assert {model.id for model in models if own.has_ref(model)} == {model.id for model in models if bokehs.has_ref(model)}
+
+
+@pytest.mark.parametrize("order", ["column first", "all first", "columns", "all twice"])
+def test_the_data_of_a_source_go_once_whatever_changed_in_a_message(order):
+    # Oracle: the source itself. Bokeh on the page stops in the middle of a patch when the columns of a source differ in length.
+    source = ColumnDataSource({"time": [0.0, 1.0], "value": [1.0, 2.0]})
+    figure = Plot(x_range=Range1d(), y_range=Range1d(), tags=[source])
+    document = Document()
+    document.add_root(figure)
+    patches: list[list[dict]] = []
+    link = DocumentLink(document, lambda patch, parts: patches.append(json.loads(patch)["events"]))
+    link.open()
+    three = {"time": [0.0, 0.5, 1.0], "value": [4.0, 5.0, 6.0]}
+    with link:
+        if order == "column first":
+            source.data["value"] = [3.0, 4.0]
+            source.data = three
+        elif order == "all first":
+            source.data = three
+            source.data["value"] = [7.0, 8.0, 9.0]
+        elif order == "columns":
+            source.data["value"] = [3.0, 4.0]
+            source.data["time"] = [0.0, 2.0]
+        else:
+            source.data = {"time": [], "value": []}
+            source.data = three
+    ((event,),) = patches
+    sent = event["data"] if event["kind"] == "ColumnDataChanged" else event["new"]
+    columns = dict(sent["entries"]) if sent.get("type") == "map" else sent
+    assert {name: list(values) for name, values in columns.items()} == {name: list(values) for name, values in source.data.items()}

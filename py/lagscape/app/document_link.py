@@ -9,7 +9,7 @@ from typing import Any
 
 from bokeh.core.serialization import Buffer, Ref, Serializer
 from bokeh.document import Document
-from bokeh.document.events import DocumentPatchedEvent
+from bokeh.document.events import ColumnDataChangedEvent, DocumentPatchedEvent, ModelChangedEvent
 from bokeh.document.json import PatchJson
 from bokeh.document.models import DocumentModelManager
 from bokeh.model import Model
@@ -18,6 +18,8 @@ __all__ = ["DocumentLink"]
 
 # Marks changes that came from the page, so that they are not sent back to it.
 PAGE = "page"
+
+_OF_DATA = (ModelChangedEvent, ColumnDataChangedEvent)
 
 
 class DocumentLink:
@@ -80,12 +82,34 @@ class DocumentLink:
     def _gather(self, event: Any) -> None:
         if not isinstance(event, DocumentPatchedEvent) or event.setter == PAGE:
             return
-        if not any(older.combine(event) for older in reversed(self._events)):
+        if not self._joined(event) and not any(older.combine(event) for older in reversed(self._events)):
             self._events.append(event)
         # A change outside any message, from a task or a timer: sent as soon as that step is done.
         if not self._inside and not self._scheduled:
             self._scheduled = True
             asyncio.get_running_loop().call_soon(self.flush)
+
+
+    def _joined(self, event: DocumentPatchedEvent) -> bool:
+        """Whether the event became part of one that waits already: the data of a source go once.
+
+        A changed column is read when the patch is made. Sent before a later change of all columns, it would have that one's length, the
+        others on the page still theirs, and Bokeh would stop in the middle of the patch.
+        """
+        if not isinstance(event, _OF_DATA) or event.attr != "data":
+            return False
+        for place, older in enumerate(self._events):
+            if isinstance(older, _OF_DATA) and older.attr == "data" and older.model is event.model:
+                if isinstance(event, ModelChangedEvent):
+                    self._events[place] = event
+                elif isinstance(older, ModelChangedEvent):
+                    older.new = event.model.data
+                elif older.cols is None or event.cols is None:
+                    older.cols = None
+                else:
+                    older.cols = list(dict.fromkeys([*older.cols, *event.cols]))
+                return True
+        return False
 
 
 class _PatchSerializer(Serializer):
