@@ -23,6 +23,7 @@ ROLES = ("window", "unloaded", "loaded")
 _LOWEST_SHOWN_HZ = 1.5
 """What is slower (posture, drift) may be cut off at the top."""
 _DB_SHOWN = 50.0
+_SHOWN_HZ, _NEAR_AXIS_HZ = 20.0, 6.0
 _LABEL_PX, _LINE_PX, _LABEL_HZ = -8, 17, 6.0
 """A peak's words stand this far over it, a line higher where others stand as high within so many Hz."""
 _SUPERSCRIPT = str.maketrans("-0123456789", "⁻⁰¹²³⁴⁵⁶⁷⁸⁹")
@@ -39,7 +40,7 @@ class SpectrumFigure:
         self.plot.yaxis.ticker.desired_num_ticks = 4
         self.curves = {role: ColumnDataSource({"frequency": [], "power": [], "low": [], "high": []}) for role in ROLES}
         self.brackets = ColumnDataSource({"start": [], "stop": [], "level": []})
-        self.marks = ColumnDataSource({"frequency": [], "power": [], "text": [], "raised": []})
+        self.marks = ColumnDataSource({"frequency": [], "power": [], "text": [], "raised": [], "side": []})
         self.names = ColumnDataSource({"frequency": [], "power": [], "text": []})
         self.bands = {role: self.plot.varea("frequency", "low", "high", source=self.curves[role], fill_alpha=0.16) for role in ROLES}
         self.bands["loaded"].glyph.hatch_pattern = "right_diagonal_line"
@@ -56,7 +57,7 @@ class SpectrumFigure:
         ]
         self.peaks = self.plot.scatter("frequency", "power", source=self.marks, marker="inverted_triangle", size=9)
         words: dict[str, Any] = {"text_font": value(FONT), "text_align": "center", "text_baseline": "bottom"}
-        self.peak_words = self.plot.text("frequency", "power", "text", source=self.marks, text_font_size="13px", y_offset="raised", **words)
+        self.peak_words = self.plot.text("frequency", "power", "text", source=self.marks, text_font_size="13px", y_offset="raised", **{**words, "text_align": "side"})
         self.harmonic_words = self.plot.text("frequency", "power", "text", source=self.names, text_font_size="12px", y_offset=-5, **words)
 
     def dress(self, palette: Palette) -> None:
@@ -82,7 +83,7 @@ class SpectrumFigure:
 
         drawn = dict(shown)
         brackets: dict[str, list[float]] = {"start": [], "stop": [], "level": []}
-        marks: dict[str, list[Any]] = {"frequency": [], "power": [], "text": [], "raised": []}
+        marks: dict[str, list[Any]] = {"frequency": [], "power": [], "text": [], "raised": [], "side": []}
         names: dict[str, list[Any]] = {"frequency": [], "power": [], "text": []}
         for role, source in self.curves.items():
             one = drawn.get(role)
@@ -104,6 +105,8 @@ class SpectrumFigure:
                 if abs(other - one.peak_frequency_hz) < _LABEL_HZ and abs(level - float(scaled(top))) < 0.1 * float(scaled(highest) or _DB_SHOWN):
                     raised -= _LINE_PX
             marks["raised"].append(raised)
+            # Near the axis the words stand to the right of the peak, or a narrow screen would cut them off.
+            marks["side"].append("left" if one.peak_frequency_hz < _NEAR_AXIS_HZ else "center")
             marks["power"].append(float(scaled(top)))
             name = "" if role == "window" else f"{role} "
             marks["text"].append(f"{name}{one.peak_frequency_hz:.2f} Hz")
@@ -113,7 +116,8 @@ class SpectrumFigure:
                 names["text"].append(f"{order}×")
         self.brackets.data, self.marks.data, self.names.data = brackets, marks, names
         if shown:
-            self.frequencies.update(start=0.0, end=max(float(one.frequency_hz[-1]) for _, one in shown))
+            furthest = max(float(one.frequency_hz[-1]) for _, one in shown)
+            self.frequencies.update(start=0.0, end=min(furthest, max([_SHOWN_HZ, *(1.1 * at for at in names["frequency"])])))
             low, high = (-_DB_SHOWN, 10.0) if decibels else (0.0, 1.3 * float(scaled(highest)))
             self.powers.update(start=low, end=high)
             unit = next((one.unit for _, one in shown if one.unit), "")
