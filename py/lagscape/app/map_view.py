@@ -263,7 +263,7 @@ class MapView:
         self._say("")
 
     def _say(self, words: str) -> None:
-        hint = "Drag the dot, or move it with the arrow keys (Shift for larger steps). Numbers on thin lines are cycle lengths."
+        hint = "Drag the dot, or use the arrow keys (Shift: larger). Thin lines: cycle length."
         self.readout.show(f'<p class="readout">{words or hint}</p>')
 
     def _nudge(self, payload: Any) -> None:

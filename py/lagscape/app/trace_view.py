@@ -237,7 +237,7 @@ class TraceView:
         below = "".join(
             f'<option value="{name}"{" selected" if name == self.lower else ""}>{escape(label)}</option>' for name, label in self.others.items()
         )
-        lower = f'<label>Below <select data-act="lower" aria-label="Lower trace">{below}</select></label>' if len(self.others) > 1 else ""
+        lower = f'<label>Lower trace <select data-act="lower" aria-label="Lower trace">{below}</select></label>' if len(self.others) > 1 else ""
         refusal = self.bench.refusals.get("disturbance")
         said = f'<span class="refusal" role="alert">{escape(refusal)}</span>' if refusal else ""
         after = '<span class="line after"></span>with levers' if self.bench.judged.with_levers is not None else ""
