@@ -57,7 +57,8 @@ class SpectrumFigure:
         ]
         self.peaks = self.plot.scatter("frequency", "power", source=self.marks, marker="inverted_triangle", size=9)
         words: dict[str, Any] = {"text_font": value(FONT), "text_align": "center", "text_baseline": "bottom"}
-        self.peak_words = self.plot.text("frequency", "power", "text", source=self.marks, text_font_size="13px", y_offset="raised", **{**words, "text_align": "side"})
+        beside = {**words, "text_align": "side", "y_offset": "raised"}
+        self.peak_words = self.plot.text("frequency", "power", "text", source=self.marks, text_font_size="13px", **beside)
         self.harmonic_words = self.plot.text("frequency", "power", "text", source=self.names, text_font_size="12px", y_offset=-5, **words)
 
     def dress(self, palette: Palette) -> None:

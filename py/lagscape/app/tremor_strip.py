@@ -36,6 +36,8 @@ class TremorStrip:
         self.lanes = Range1d(0.0, 1.0)
         self.strip = figure(height=120, x_range=self.whole, y_range=self.lanes, tools=[], min_border_bottom=30, **border)
         self.close = figure(height=150, x_range=self._near, y_range=self.lanes, tools=[], min_border_bottom=44, **border)
+        # A range tool moves only a range that some figure has.
+        self.close.extra_x_ranges = {"window": self.shown}
         self.tool = RangeTool(x_range=self.shown)
         self.tool.overlay.fill_alpha = 0.18
         self.strip.add_tools(self.tool)

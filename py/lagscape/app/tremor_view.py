@@ -66,7 +66,9 @@ class TremorState:
     offers_start: bool = False
     laying: Laying | None = None
     refusal: str = ""
-    """Beside the load and the laying."""
+    """Beside what was refused: the window held, the load."""
+    not_laid: str = ""
+    """Why nothing can be laid, beside the button."""
     decibels: bool = False
 
 
@@ -125,7 +127,7 @@ class TremorView:
 
     def _choose(self, sensor: Sensor | None, kind: str | None) -> None:
         known = kind if kind in TREMOR_KINDS else "acceleration"
-        self.state = replace(self.state, sensor=sensor, kind=known, current=None, laying=None, offers_start=False, refusal="")
+        self.state = replace(self.state, sensor=sensor, kind=known, current=None, laying=None, offers_start=False, refusal="", not_laid="")
 
     @property
     def chosen(self) -> str | None:
@@ -160,12 +162,17 @@ class TremorView:
         return (start, stop) if stop - start <= _WHOLE_UP_TO_S else (start, start + _FIRST_WINDOW_S)
 
     def shown_window(self) -> tuple[float, float]:
-        """Start and end of the window, s."""
-        return float(self.strip.shown.start), float(self.strip.shown.end)
+        """Start and end of the window inside the recording, s."""
+        start, stop = float(self.strip.shown.start), float(self.strip.shown.end)
+        signals = self.signals()
+        if not signals:
+            return start, stop
+        first, last = signals[0].segments[0].start_s, signals[0].segments[-1].stop_s
+        return min(max(start, first), last), max(min(stop, last), first)
 
     def show_measured(self, measured: TremorMeasurement | None, window: tuple[float, float], refusal: str) -> None:
         """The window was measured, or refused with a sentence."""
-        self.state = replace(self.state, current=measured, laying=None)
+        self.state = replace(self.state, current=measured, laying=None, refusal="", not_laid="")
         self.view.refusal = refusal
         self._moves += 1  # what moved before this is measured with it
         self.draw(window)
@@ -289,14 +296,19 @@ class TremorView:
         assert self.view.recording is not None
         if self.state.current is not None:
             held = Held(self.state.current, self.view.recording.name)
-            self._set(**{request.key: held}, laying=None, refusal="")
+            other = self.state.loaded if request.key == "unloaded" else self.state.unloaded
+            if other is not None and other.file == held.file and _overlap(other.measured.window, held.measured.window):
+                self._set(refusal=f"This window overlaps the one held as {'loaded' if request.key == 'unloaded' else 'unloaded'}. Move it first.")
+            else:
+                self._set(**{request.key: held}, laying=None, refusal="", not_laid="")
 
     def _release(self, _request: Request) -> None:
-        self._set(unloaded=None, loaded=None, laying=None, refusal="")
+        self._set(unloaded=None, loaded=None, laying=None, refusal="", not_laid="")
 
     def _set_load(self, request: Request) -> None:
         typed = {"mass": self.state.mass, "mass-unit": self.state.mass_unit, "arm": self.state.arm, request.act: request.value.strip()}
-        state = replace(self.state, mass=typed["mass"], mass_unit=typed["mass-unit"], arm=typed["arm"], laying=None, refusal="", load=None)
+        state = replace(self.state, mass=typed["mass"], mass_unit=typed["mass-unit"], arm=typed["arm"], load=None)
+        state = replace(state, laying=None, refusal="", not_laid="")
         try:
             if state.mass and state.arm:
                 mass = _number(state.mass, "The mass") * (1e-3 if state.mass_unit == "g" else 1.0)
@@ -315,9 +327,9 @@ class TremorView:
             self._set(offers_start=True, laying=None)
             return
         try:
-            self._set(laying=lay_tremor(case, study.unloaded, study.answer), refusal="", offers_start=False)
+            self._set(laying=lay_tremor(case, study.unloaded, study.answer), not_laid="", offers_start=False)
         except InvalidInputError as problem:
-            self._set(laying=None, refusal=str(problem), offers_start=False)
+            self._set(laying=None, not_laid=str(problem), offers_start=False)
 
     def _start_from(self, request: Request) -> None:
         self.state = replace(self.state, start=request.key, offers_start=False)
@@ -332,6 +344,10 @@ class TremorView:
         self.bench.page.send("show", {"view": "recording", "open": False})
         self.bench.page.send("say", {"place": "case", "text": "The measured numbers are on the case. Undo takes them off.", "tone": "note"})
         self.write()
+
+
+def _overlap(one: tuple[float, float], other: tuple[float, float]) -> bool:
+    return one[0] < other[1] and other[0] < one[1]
 
 
 def _number(text: str, name: str) -> float:

@@ -138,7 +138,7 @@ def _load(view: TremorView) -> str:
     state = view.state
     units = "".join(f"<option{' selected' if unit == state.mass_unit else ''}>{unit}</option>" for unit in ("g", "kg"))
     added = f"<p>It adds m·l² = {figure(state.load.added_inertia)} kg m² to the limb's inertia.</p>" if state.load is not None else ""
-    refusal = f'<p class="refusal" role="alert">{escape(state.refusal)}</p>' if state.refusal and state.laying is None else ""
+    refusal = f'<p class="refusal" role="alert">{escape(state.refusal)}</p>' if state.refusal else ""
     box = '<input class="box short" type="text" inputmode="decimal" autocomplete="off"'
     return (
         f'<div class="tools"><label>Load {box} data-act="mass" value="{escape(state.mass)}" aria-label="Mass of the load, {state.mass_unit}"></label>'
@@ -154,14 +154,10 @@ def _answer(view: TremorView, study: TremorStudy | None) -> str:
     answer = study.answer
     if answer is None:
         return f'<h3>What the load says</h3><p class="refusal">{escape(study.refusal)}</p>'
-    interval = f"{figure(answer.low_hz)} to {figure(answer.high_hz)}"
-    rows = f'<tr><th scope="row">Measured</th><td>{figure(answer.shift_hz)} Hz</td><td>{interval}</td></tr>'
+    rows = _shift("Measured", answer.shift_hz, answer.low_hz, answer.high_hz)
     if answer.prediction is not None:
         told = answer.prediction
-        rows += (
-            f'<tr><th scope="row">Predicted by the loop</th><td>{figure(told.shift_hz)} Hz</td><td>{figure(told.low_hz)} to '
-            f"{figure(told.high_hz)}</td></tr>"
-        )
+        rows += _shift("Predicted by the loop", told.shift_hz, told.low_hz, told.high_hz)
     doubts = "".join(f"<li>{escape(doubt)}</li>" for doubt in answer.doubts)
     unsure = f"<h3>What makes it unsure</h3><ul>{doubts}</ul>" if doubts else ""
     compare = ""
@@ -176,6 +172,11 @@ def _answer(view: TremorView, study: TremorStudy | None) -> str:
     )
 
 
+def _shift(label: str, *values: float) -> str:
+    shift, low, high = (f"{value:+.2f}".replace("-", "−") for value in values)
+    return f'<tr><th scope="row">{label}</th><td>{shift} Hz</td><td>{low} to {high}</td></tr>'
+
+
 def _laying(view: TremorView) -> str:
     state, bench = view.state, view.bench
     button = '<div class="tools"><button class="main" data-act="prepare">Lay these on the case</button></div>'
@@ -187,7 +188,7 @@ def _laying(view: TremorView) -> str:
             "is</button></div></section>"
         )
     if state.laying is None:
-        return button
+        return button + (f'<p class="refusal" role="alert">{escape(state.not_laid)}</p>' if state.not_laid else "")
     return button + _list(state.laying, bench.case)
 
 
