@@ -135,7 +135,8 @@ def test_a_tremor_is_opened_compared_under_load_laid_and_handed_over(
 
 _STRIP = """() => {
   const figures = [...Bokeh.documents[0]._all_models.values()].filter((m) => m.type === "Figure")
-  const strip = figures.find((m) => m.toolbar.tools.some((t) => t.type === "RangeTool") && Bokeh.index.find_one(m)?.el.getBoundingClientRect().width > 0)
+  const shown = (m) => Bokeh.index.find_one(m)?.el.getBoundingClientRect().width > 0
+  const strip = figures.find((m) => m.toolbar.tools.some((t) => t.type === "RangeTool") && shown(m))
   const view = Bokeh.index.find_one(strip)
   const area = view.el.getBoundingClientRect()
   const range = strip.toolbar.tools.find((t) => t.type === "RangeTool").x_range
