@@ -281,6 +281,13 @@ def test_an_edf_with_three_axes_opens_the_same_way(view):
     assert len(view.tremor.strip.bands.data["time"]) > 3000
 
 
+def test_bare_columns_x_y_z_open_as_an_accelerometer_that_is_not_calibrated(view):
+    data = hand([(6.0, 60.0)]).replace(b"Acc X (g),Acc Y (g),Acc Z (g)", b"x,y,z")
+    open_file(view, data)
+    assert view.tremor.state.current.kind == "acceleration" and view.tremor.state.current.displacement_mm is None
+    assert "Not calibrated" in said(view)
+
+
 def test_decibels_and_themes_change_the_drawing_alone(view):
     open_file(view, hand([(6.0, 60.0)]))
     measured = view.tremor.state.current

@@ -102,6 +102,14 @@ def test_two_wrists_are_two_sensors_and_a_word_with_an_x_is_no_axis():
     assert [sensor.signals[0] for sensor in found] == ["left x", "right x"]
 
 
+def test_bare_axes_are_an_accelerometer_s_only_together():
+    columns = np.zeros((3, 1000)) + np.arange(1000)
+    (sensor,) = sensors_in(table(columns, ["x", "y", "z"]))
+    assert sensor.kind == "acceleration" and sensors_in(table(columns[:1], ["x"])) == ()
+    (slow,) = sensors_in(table(columns, ["x", "y", "z"], rate=4.0))
+    assert slow.kind == "unknown"
+
+
 def test_a_gyroscope_gives_the_angle_of_the_swing():
     # Closed form: 90 deg/s at 6 Hz is a swing of 90/(2 pi 6) = 2.387 degrees.
     found = measure_tremor(table(noisy_sine(6.0, size=90.0), ["Gyro Y (deg/s)"]))

@@ -30,7 +30,7 @@ def _head(view: RecordingView) -> str:
     if view.recording is None or view.signal is None:
         empty = (
             "" if refusal
-            else "<p>Open a recording of breathing (ventilation, airflow, effort) or of a tremor (accelerometer, gyroscope, EMG): a CSV or EDF "
+            else "<p>Open a recording of ventilation, airflow or effort, or of a tremor (accelerometer, gyroscope, EMG): a CSV or EDF "
             "file. It stays in this tab.</p>"
         )  # fmt: skip
         return f'<div class="rec-head">{refusal}{rate}{empty}</div>'

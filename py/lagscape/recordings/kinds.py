@@ -16,7 +16,7 @@ _BY_NAME = (
     ("CO2", r"co2|capno"),
     ("SpO2", r"spo2|sao2|\bso2\b|sat(uration)?\b|oxim|pulse ?ox"),
     ("rotation", r"gyro|\bgyr\b|\bgyr ?[xyz]\b|angular (velocity|rate)|\bang ?vel"),
-    ("acceleration", r"accel|\bacc\b|\bacc ?[xyz]\b|tremor|^[xyz]$|^axis ?[xyz]$"),
+    ("acceleration", r"accel|\bacc\b|\bacc ?[xyz]\b|tremor|^axis ?[xyz]$"),
     ("EMG", r"emg|electromyo|tibialis|\b[lr]at\b|soleus|gastrocn|extensor|flexor|biceps|triceps|masseter|mentalis|\bchin"),
     ("ventilation", r"ventilation|\bve\b|\bv e\b|minute ?vol|\bmv\b|\bvdot"),
     ("effort", r"effort|thor|chest|abdo|\babd\b|belt|\brip\b|rib ?cage|\btho\b|torax|bauch|brust"),

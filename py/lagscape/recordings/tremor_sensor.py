@@ -26,6 +26,7 @@ _DEGREE = 57.29577951308232
 _ROTATIONS = {
     "deg/s": 1.0, "°/s": 1.0, "dps": 1.0, "mdps": 1e-3, "degree/s": 1.0, "degrees/s": 1.0, "rad/s": _DEGREE, "mrad/s": 1e-3 * _DEGREE,
 }  # fmt: skip
+_SLOWEST_HZ = 20.0
 _AXIS = re.compile(r"(?:^|(?<=[^a-zA-Z])|(?<=[a-z]))[xyzXYZ](?![a-zA-Z])")
 
 
@@ -40,7 +41,10 @@ class Sensor:
 
 
 def sensors_in(recording: Recording) -> tuple[Sensor, ...]:
-    """Channels whose names differ by an axis letter alone and whose unit and rate are the same, in the order of the file."""
+    """Channels whose names differ by an axis letter alone and whose unit and rate are the same, in the order of the file.
+
+    Three axes that are nothing else are taken for an accelerometer's where they are sampled fast enough (common practice, no source).
+    """
     groups: dict[tuple[str, str, str, float, int], list[Signal]] = {}
     for signal in recording.signals:
         bare, found = _AXIS.subn("*", signal.name)
@@ -48,10 +52,15 @@ def sensors_in(recording: Recording) -> tuple[Sensor, ...]:
             key = (bare.casefold(), signal.unit, signal.kind, signal.sampling_frequency_hz, signal.n_samples)
             groups.setdefault(key, []).append(signal)
     return tuple(
-        Sensor(" + ".join(axis.name for axis in axes), tuple(axis.name for axis in axes), axes[0].kind, axes[0].sampling_frequency_hz)
+        Sensor(" + ".join(axis.name for axis in axes), tuple(axis.name for axis in axes), _kind_of(axes), axes[0].sampling_frequency_hz)
         for axes in groups.values()
         if len(axes) in (2, 3)
     )
+
+
+def _kind_of(axes: list[Signal]) -> str:
+    three = len(axes) == 3 and axes[0].sampling_frequency_hz >= _SLOWEST_HZ
+    return "acceleration" if three and axes[0].kind == "unknown" else axes[0].kind
 
 
 def channels_of(recording: Recording, signal: str | Sequence[str] | None) -> list[Signal]:
