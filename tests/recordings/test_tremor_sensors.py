@@ -210,3 +210,18 @@ def test_the_calibration_is_judged_by_gravity():
 def test_a_kind_that_is_none_is_refused():
     with pytest.raises(InvalidInputError, match="kind must be one of acceleration, rotation, EMG; got 'airflow'"):
         measure_tremor(table(noisy_sine(6.0), ["Acc X"]), kind="airflow")
+
+
+def test_a_frequency_between_two_peaks_is_told_and_one_broad_peak_is_not():
+    # Oracle: what the signal was made of. Of 20 recordings a minute long of one resonance none may be taken for two; of those whose
+    # frequency changes half-way by less than the peaks' distance that would be listed apart, most are told.
+    def told(columns):
+        return any(reason.startswith("Two peaks") for reason in measure_tremor(table([columns], ["Acc X (m/s2)"])).quality_reasons)
+
+    def steady(frequency, ratio, seed):
+        x = oscillator(frequency, ratio, 60.0, seed, rate=RATE)
+        return x / x.std()
+
+    assert not any(told(steady(7.0, 0.1, seed)) for seed in range(20))
+    changed = [told(np.concatenate([steady(7.0, 0.02, seed), steady(8.0, 0.02, seed + 50)])) for seed in range(20)]
+    assert sum(changed) > 10

@@ -59,6 +59,11 @@ def quality_of(
     else:
         word = "broad"
         reasons.append("The peak is over 2 Hz wide at half its power: a resonance driven by noise, or a rhythm that wanders.")
+    if peak is not None and not peak.half_power_hz[0] <= peak.frequency_hz <= peak.half_power_hz[1]:
+        reasons.append(
+            "Two peaks close together, or one that moved within the window: the frequency is a middle between them. Choose a window in "
+            "which the tremor is steady."
+        )
     if n_segments < FEW_SEGMENTS:
         reasons.append(
             f"Too short a window: only {counted(n_segments, 'spectrum').replace('spectrums', 'spectra')} averaged, so the peak's error is a "
