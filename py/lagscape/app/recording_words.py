@@ -150,7 +150,8 @@ def _table(view: RecordingView, measured: Any) -> str:
         reason = f' title="{escape(cycle.reason)}"' if cycle.reason else ""
         rows.append(
             f'<tr{reason}><td><label><input type="checkbox" data-act="use" data-key="{cycle.number}" aria-label="Use cycle {cycle.number}"'
-            f'{checked}></label></td><td><button class="link" data-act="go" data-key="{0.5 * (cycle.start_s + cycle.stop_s):.1f}">{cycle.number}</button></td>'
+            f'{checked}></label></td>'
+            f'<td><button class="link" data-act="go" data-key="{0.5 * (cycle.start_s + cycle.stop_s):.1f}">{cycle.number}</button></td>'
             f"<td>{_clock(cycle.start_s)}</td><td>{cycle.cycle_length_s:.0f}</td><td>{cycle.ventilatory_duration_s:.0f}</td><td>{escape(apnoea)}</td>"
             f"<td>{figure(cycle.duty_ratio, 2) if cycle.duty_ratio is not None else ''}</td></tr>"
         )
