@@ -30,7 +30,7 @@ class DocumentLink:
     Parameters
     ----------
     document
-        The document to watch.
+        The document to watch, just written out for the page: what it holds now the page is taken to have.
     send
         Takes the patch as JSON text and its binary parts by name.
     """
@@ -41,6 +41,8 @@ class DocumentLink:
         self._inside = False
         self._scheduled = False
         self._open = False
+        # Else all of them would be looked through after every patch.
+        document.models.flush_synced()
         document.on_change(self._gather)
 
     def open(self) -> None:
