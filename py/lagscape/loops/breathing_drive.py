@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from functools import cached_property
 from typing import Any, ClassVar
 
 import numpy as np
@@ -30,13 +31,14 @@ class ThresholdDrive:
     central: Any
     has_kink: ClassVar[bool] = True
 
+    @cached_property
+    def _at_no_pressure(self) -> Any:
+        """The line at 0 mmHg, L/min. The inner step of a run counts its array calls: two differences from P_line are two calls more."""
+        return self.line_ventilation - (self.peripheral + self.central) * self.line_pressure
+
     def switch(self, sensed: Array, control: Array, push: Any = 0.0) -> Array:
-        return (
-            self.line_ventilation
-            + self.peripheral * (sensed[0] - self.line_pressure)
-            + self.central * (control[0] - self.line_pressure)
-            + push
-        )
+        level = self.peripheral * sensed[0] + self.central * control[0] + self._at_no_pressure
+        return level if isinstance(push, float) and push == 0.0 else level + push
 
     def value(self, sensed: Array, control: Array, push: Any = 0.0) -> Array:
         return np.maximum(self.switch(sensed, control, push), 0.0)

@@ -27,7 +27,8 @@ class HillDrive:
 
     def value(self, sensed: Array, control: Array, push: Any = 0.0) -> Array:
         # The inner step of a drag: worked in place where it is an array, because a call costs more than its arithmetic.
-        share = np.maximum(sensed[0] + push, 0.0) / self.half_level
+        level = sensed[0] if isinstance(push, float) and push == 0.0 else sensed[0] + push
+        share = np.maximum(level, 0.0) / self.half_level
         out = share if isinstance(share, np.ndarray) and isinstance(self.exponent, float) else None
         with np.errstate(over="ignore", divide="ignore"):
             share = np.power(share, -self.exponent, out=out)
