@@ -47,6 +47,16 @@ def test_a_change_of_unit_of_level_scales_the_rest(factor: float, n: float) -> N
     assert scaled.rest().output == pytest.approx(base.rest().output, rel=64 * EPS * (1.0 + n))
 
 
+@given(n=st.lists(st.floats(0.1, 100.0), min_size=1, max_size=5), demand=st.floats(1e-6, 1e6))
+def test_one_loop_rests_where_a_batch_of_it_does(n: list[float], demand: float) -> None:
+    # Two ways to one root: plain floats and arrays. Tolerance: both stop at 4e-16 of ln(level), up to ln(1e6) = 14.
+    batch = PlainLoop(production_per_s=demand, largest_clearance_per_s=1.0, exponent=np.array(n)).rest()
+    for i, exponent in enumerate(n):
+        one = PlainLoop(production_per_s=demand, largest_clearance_per_s=1.0, exponent=exponent).rest()
+        assert one.state[0] == pytest.approx(batch.state[0, i], rel=64 * EPS)
+        assert one.output == pytest.approx(batch.output[i], rel=64 * EPS * (1.0 + exponent))
+
+
 def test_the_production_channel_adds_to_production() -> None:
     channel = PlainLoop().form().channels["production"]
     assert channel.plant is not None

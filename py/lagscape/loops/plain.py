@@ -5,7 +5,9 @@ The respiration equation of Mackey and Glass 1977, Science 197:287, in any units
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass, replace
+from functools import cached_property
 from typing import Any, ClassVar
 
 import numpy as np
@@ -15,6 +17,9 @@ from lagscape.errors import InvalidInputError
 from lagscape.loops.protocol import Array, Channel, DriveForm, Rest, Signal, batch_shape
 
 __all__ = ["HillDrive", "PlainLoop"]
+
+_MOST_STEPS = 200
+_ROUNDING = 4e-16
 
 
 @dataclass(frozen=True)
@@ -28,12 +33,14 @@ class HillDrive:
     def value(self, sensed: Array, control: Array, push: Any = 0.0) -> Array:
         # The inner step of a drag: worked in place where it is an array, because a call costs more than its arithmetic.
         level = sensed[0] if isinstance(push, float) and push == 0.0 else sensed[0] + push
-        share = np.maximum(level, 0.0) / self.half_level
-        out = share if isinstance(share, np.ndarray) and isinstance(self.exponent, float) else None
-        with np.errstate(over="ignore", divide="ignore"):
-            share = np.power(share, -self.exponent, out=out)
-            share += 1.0
-            return np.divide(1.0, share, out=out)
+        ratio = np.minimum(np.maximum(level, 0.0) / self.half_level, self._saturated)
+        power = np.power(ratio, self.exponent, out=ratio if isinstance(ratio, np.ndarray) and isinstance(self.exponent, float) else None)
+        return power / (1.0 + power)
+
+    @cached_property
+    def _saturated(self) -> Any:
+        """A ratio whose power is 1e300, so that none overflows; the share is 1 to every digit long before."""
+        return 10.0 ** np.minimum(300.0 / np.asarray(self.exponent, dtype=float), 300.0)
 
     def gradient(self, sensed: Array, control: Array, push: Any = 0.0) -> Array:
         level = np.maximum(sensed[0] + push, 1e-300)
@@ -44,11 +51,35 @@ class HillDrive:
         return np.ones_like(sensed[0] + push)
 
     def scalar(self, sensed: tuple[float, ...], control: tuple[float, ...], push: float) -> float:
-        ratio = (sensed[0] + push) / self.half_level
+        ratio = min((sensed[0] + push) / self.half_level, float(self._saturated))
         if ratio <= 0.0:
             return 0.0
-        power = ratio**-self.exponent if self.exponent * abs(np.log(ratio)) < 700.0 else (np.inf if ratio < 1.0 else 0.0)
-        return float(1.0 / (1.0 + power))
+        power = ratio**self.exponent
+        return float(power / (1.0 + power))
+
+
+def _log_level(target: Array, n: Array) -> Array:
+    """y with y - ln(1 + e^(-n y)) = `target`: the left side is rising and concave, so Newton's steps from its left are monotone."""
+    y: Array = np.maximum(target, target / (1.0 + n)) - 1e-12
+    for _ in range(_MOST_STEPS):
+        residual = y - np.logaddexp(0.0, -n * y) - target
+        step = residual / (1.0 + n / (1.0 + np.exp(np.minimum(n * y, 700.0))))
+        y = y - step
+        if np.all(np.abs(step) <= _ROUNDING * (1.0 + np.abs(y))):
+            break
+    return y
+
+
+def _log_level_of_one(target: float, n: float) -> float:
+    """The same for one loop: plain floats cost a thirtieth of array calls, and a drag asks at every move."""
+    y = max(target, target / (1.0 + n)) - 1e-12
+    for _ in range(_MOST_STEPS):
+        residual = y - max(-n * y, 0.0) - math.log1p(math.exp(-abs(n * y))) - target
+        step = residual / (1.0 + n / (1.0 + math.exp(min(n * y, 700.0))))
+        y -= step
+        if abs(step) <= _ROUNDING * (1.0 + abs(y)):
+            break
+    return y
 
 
 @dataclass(frozen=True)
@@ -99,15 +130,7 @@ class PlainLoop:
         demand = np.asarray(self.production_per_s / (self.largest_clearance_per_s * self.half_level), dtype=float)
         n = np.asarray(self.exponent, dtype=float)
         demand, n = np.broadcast_arrays(demand, n)
-        # In y = ln(x/theta) the balance y - ln(1 + e^(-n y)) = ln(demand) is rising and concave; Newton from the left is monotone.
-        target = np.log(demand)
-        y = np.maximum(target, target / (1.0 + n)) - 1e-12
-        for _ in range(200):
-            residual = y - np.logaddexp(0.0, -n * y) - target
-            step = residual / (1.0 + n / (1.0 + np.exp(np.minimum(n * y, 700.0))))
-            y = y - step
-            if np.all(np.abs(step) <= 4e-16 * (1.0 + np.abs(y))):
-                break
+        y = _log_level_of_one(math.log(demand), float(n)) if demand.ndim == 0 else _log_level(np.log(demand), n)
         level = np.asarray(self.half_level * np.exp(y))
         share = HillDrive(self.exponent, self.half_level).value(level[None], np.empty((0,)))
         return Rest(level[None], share if share.ndim else float(share))
