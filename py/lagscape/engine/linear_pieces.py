@@ -11,12 +11,10 @@ from operator import mul
 import numpy as np
 
 from lagscape.engine.mesh import integration, nodes
+from lagscape.engine.plant_steps import MOST_DECAY
 from lagscape.loops.protocol import Array
 
 __all__ = ["DecayPieces", "SolvedPieces", "linear_pieces"]
-
-_MOST_DECAY = 10.0
-"""Largest product of rate and length before the growing exponential swamps the start of a piece (numerical experiment)."""
 
 
 class SolvedPieces:
@@ -87,6 +85,6 @@ class DecayPieces:
 def linear_pieces(matrix: Array, by_output: Array | None, n: int, longest: float) -> SolvedPieces | DecayPieces:
     """The cheaper of the two that serves this system on pieces of at most `longest` seconds; `by_output` is None or all zero for no N."""
     still = by_output is None or not np.any(by_output)
-    if still and matrix.shape == (1, 1) and abs(float(matrix[0, 0])) * longest <= _MOST_DECAY:
+    if still and matrix.shape == (1, 1) and abs(float(matrix[0, 0])) * longest <= MOST_DECAY:
         return DecayPieces(float(matrix[0, 0]), n)
     return SolvedPieces(matrix, None if still else by_output, n)

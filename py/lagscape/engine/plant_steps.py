@@ -18,12 +18,12 @@ import numpy as np
 from lagscape.engine.mesh import Kept, integration, nodes
 from lagscape.loops.protocol import Array, DriveForm
 
-__all__ = ["GroupedStep", "LinearStep", "ScalarStep", "chained_operator", "plant_step"]
+__all__ = ["MOST_DECAY", "GroupedStep", "LinearStep", "ScalarStep", "chained_operator", "plant_step"]
 
 _groups = Kept(32)
 _linear = Kept(4)
 
-_MOST_DECAY = 10.0
+MOST_DECAY = 10.0
 """Largest integral of the decay rate over a piece before the integrating factor swamps the piece's start (numerical experiment)."""
 
 _MOST_UNKNOWNS = 40
@@ -133,7 +133,7 @@ class ScalarStep:
     def trusted(self, v: Array) -> bool:
         """Whether no piece decays (or grows) so far that the integrating factor loses the start of the piece."""
         ends = np.abs(self._exponent(v)[..., -1])
-        return not ends.size or bool(ends.max() <= _MOST_DECAY)
+        return not ends.size or bool(ends.max() <= MOST_DECAY)
 
 
 class LinearStep:
